@@ -1,0 +1,1 @@
+"""Getting readings: configuration, instruments, journals, bus, simulated laboratory."""

@@ -1,0 +1,143 @@
+"""Readers: where an instrument is, what to ask it, how to read its reply."""
+
+from __future__ import annotations
+
+from typing import Annotated, Literal
+
+from pydantic import Field, field_validator, model_validator
+
+from acquire.config.sections import Name, NotNegative, Positive, Section, Several
+
+Unit = Literal["V", "A", "T", "Ohm", "K", "Hz", "s", "1"]
+
+
+class Value(Section):
+    """One number in a reply. ``position`` counts the reply's fields from 1.
+
+    The journal keeps the number as read; number times ``scale`` is in ``unit``.
+    """
+
+    name: Name
+    position: Annotated[int, Field(ge=1, le=64)]
+    scale: float = 1.0
+    unit: Unit = "V"
+    lowest: float | None = None
+    highest: float | None = None
+    overload_texts: Several[str] = ()
+    overload_above: Positive | None = None
+
+    @field_validator("scale")
+    @classmethod
+    def _not_zero(cls, scale: float) -> float:
+        if scale == 0:
+            raise ValueError("must not be zero")
+        return scale
+
+    @model_validator(mode="after")
+    def _range(self) -> Value:
+        if self.lowest is not None and self.highest is not None and self.lowest >= self.highest:
+            raise ValueError("lowest must be below highest")
+        return self
+
+
+class OverloadBits(Section):
+    """A field of the reply that is a status word: any of ``bits`` set means overload."""
+
+    position: Annotated[int, Field(ge=1, le=64)]
+    bits: Annotated[int, Field(ge=1)]
+
+
+class Setting(Section):
+    """A setting to ask the instrument for, with a table from code to value where it has codes."""
+
+    name: Name
+    query: Annotated[str, Field(min_length=1)]
+    unit: str = ""
+    scale: float = 1.0
+    codes: dict[str, float | int | str] | None = None
+
+
+class Identity(Section):
+    """The question that proves who is there. The reply must match ``pattern`` (regular expression,
+    searched for)."""
+
+    query: Annotated[str, Field(min_length=1)] = "*IDN?"
+    pattern: str = ""
+
+    @field_validator("pattern")
+    @classmethod
+    def _compiles(cls, pattern: str) -> str:
+        import re
+
+        try:
+            re.compile(pattern)
+        except re.error as error:
+            raise ValueError(f"is not a regular expression: {error}") from None
+        return pattern
+
+
+class SerialLine(Section):
+    """Settings of a serial line (ASRL resources only)."""
+
+    baud_rate: Annotated[int, Field(gt=0)] = 9600
+    data_bits: Annotated[int, Field(ge=5, le=8)] = 8
+    stop_bits: Literal[1, 2] = 1
+    parity: Literal["none", "odd", "even"] = "none"
+
+
+class ReaderSection(Section):
+    """One instrument, read by one process.
+
+    ``queries`` are sent one after the other for each reading; the fields of their replies,
+    split at ``separator``, are counted through. ``fields`` is how many there must be.
+    With ``elsewhere`` (publish and answer address) the reader runs on its own, started by
+    ``rampside read``, and its stream is only listened to.
+    """
+
+    name: Name
+    resource: str = ""
+    visa_library: str = "@py"
+    write_termination: str = ""
+    read_termination: str = ""
+    encoding: Literal["ascii", "latin-1", "utf-8"] = "ascii"
+    timeout_ms: Annotated[int, Field(ge=10, le=60_000)] = 1000
+    serial: SerialLine | None = None
+    identity: Identity = Identity()
+    queries: Several[Annotated[str, Field(min_length=1)]] = ()
+    separator: Annotated[str, Field(min_length=1)] = ","
+    fields: Annotated[int, Field(ge=1, le=64)] = 1
+    period_s: Annotated[float, Field(ge=0.005, le=3600)] = 0.2
+    values: Several[Value]
+    overload: OverloadBits | None = None
+    settings: Several[Setting] = ()
+    settings_period_s: NotNegative = 0.0
+    elsewhere: Elsewhere | None = None
+
+    @model_validator(mode="after")
+    def _complete(self) -> ReaderSection:
+        if not self.values:
+            raise ValueError("values: a reader needs at least one value")
+        if self.elsewhere is None:
+            missing = [
+                key
+                for key in ("resource", "write_termination", "read_termination", "queries")
+                if not getattr(self, key)
+            ]
+            if missing:
+                raise ValueError(f"missing: {', '.join(missing)}")
+        last = max(value.position for value in self.values)
+        if self.overload is not None:
+            last = max(last, self.overload.position)
+        if last > self.fields:
+            raise ValueError(f"position {last} is beyond the reply's fields = {self.fields}")
+        return self
+
+
+class Elsewhere(Section):
+    """The two addresses of a reader that was started by itself (``rampside read``)."""
+
+    publish: Annotated[str, Field(pattern=r"^tcp://")]
+    answer: Annotated[str, Field(pattern=r"^tcp://")]
+
+
+ReaderSection.model_rebuild()
