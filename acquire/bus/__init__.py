@@ -1,0 +1,22 @@
+"""The bus: streams of rows from publishers to subscribers, and small requests, over ZeroMQ.
+
+Nothing outside this package touches a ZeroMQ socket. Each object has a context of its own, made
+after its process has started, and ends it when it is closed.
+"""
+
+from acquire.bus.addresses import Endpoint, free_address, free_endpoints
+from acquire.bus.inbox import Inbox, ask
+from acquire.bus.progress import StreamHealth
+from acquire.bus.publisher import Publisher
+from acquire.bus.subscriber import Subscriber
+
+__all__ = [
+    "Endpoint",
+    "Inbox",
+    "Publisher",
+    "StreamHealth",
+    "Subscriber",
+    "ask",
+    "free_address",
+    "free_endpoints",
+]

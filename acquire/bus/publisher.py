@@ -1,0 +1,184 @@
+"""Publishing one stream: the journal first, then everybody who listens; and answering those who
+missed something, out of the journal, in a thread of its own."""
+
+from __future__ import annotations
+
+import threading
+import time
+from types import TracebackType
+from typing import Self
+
+import zmq
+
+from acquire.bus.addresses import Endpoint
+from acquire.bus.sockets import HIGH_WATER, bound
+from acquire.bus.wire import Answer, Message, Question, pack, topic, unpack
+from acquire.errors import BusError, JournalError
+from acquire.journal import Journal
+from acquire.tables import Cell, Table
+
+SYNC_PERIOD_S = 1.0
+QUESTIONS_QUEUED = 64  # a peer; more are dropped and asked again
+
+
+class Publisher:
+    """Publishes the rows of one table.
+
+    A background thread answers questions and syncs the journal once a second, so that both go on
+    while the owner waits for an instrument. ``publish`` and ``close`` belong to the thread that
+    made the publisher. The journal stays the caller's: close it after the publisher.
+    Raises BusError if an address is not on loopback or is taken; port 0 takes a free one, and
+    ``endpoint`` tells which.
+    """
+
+    def __init__(
+        self,
+        run_id: str,
+        table: Table,
+        journal: Journal,
+        endpoint: Endpoint,
+        *,
+        high_water: int = HIGH_WATER,
+    ) -> None:
+        self._run_id = run_id
+        self._stream = table.stream
+        self._topic = topic(table.stream)
+        self._journal = journal
+        self._closed = False
+        self._context = zmq.Context()
+        try:
+            self._socket, publish = bound(self._context, zmq.PUB, endpoint.publish, high_water)
+            router, answer = bound(self._context, zmq.ROUTER, endpoint.answer, QUESTIONS_QUEUED)
+        except BaseException:
+            self._context.destroy(linger=0)
+            raise
+        self.endpoint = Endpoint(publish, answer)
+        self._answerer = _Answerer(self._context, router, run_id, table.stream, journal)
+
+    @property
+    def refused(self) -> int:
+        """How many questions were malformed or meant for another run."""
+        return self._answerer.refused
+
+    def publish(self, *cells: Cell) -> int:
+        """Record a row, then send it; returns its number. ``cells`` are those after ``seq``.
+
+        Raises JournalError if it could not be recorded (nothing was sent then; it may be tried
+        again) or if the journal could not be synced or read since the last call, BusError if the
+        publisher is closed or its thread has ended.
+        """
+        if self._closed:
+            raise BusError(f"{self._stream}: the publisher is closed.")
+        self._answerer.raise_failure()
+        row = self._journal.record(cells)
+        seq = row[0]
+        assert isinstance(seq, int)
+        message = pack(Message(self._run_id, self._stream, seq, row[1:]))
+        self._socket.send_multipart([self._topic, message], zmq.NOBLOCK)
+        return seq
+
+    def close(self) -> None:
+        """Stop answering, sync, give what is queued a moment to be sent. Ends within 1 s.
+
+        Raises JournalError if the journal can't be synced.
+        """
+        if self._closed:
+            return
+        self._closed = True
+        stopped = self._answerer.stop()
+        self._socket.close()
+        if stopped:
+            self._context.term()
+        self._journal.sync()
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self,
+        kind: type[BaseException] | None,
+        error: BaseException | None,
+        trace: TracebackType | None,
+    ) -> None:
+        self.close()
+
+
+class _Answerer:
+    """The thread that answers out of the journal and syncs it. From its start on, its sockets
+    are its own."""
+
+    def __init__(
+        self,
+        context: zmq.Context[zmq.Socket[bytes]],
+        router: zmq.Socket[bytes],
+        run_id: str,
+        stream: str,
+        journal: Journal,
+    ) -> None:
+        self.refused = 0
+        self._run_id = run_id
+        self._stream = stream
+        self._journal = journal
+        self._journal_error: JournalError | None = None
+        self._router = router
+        self._end = context.socket(zmq.PAIR)
+        self._end.bind("inproc://end")
+        self._stop = context.socket(zmq.PAIR)
+        self._stop.connect("inproc://end")
+        self._thread = threading.Thread(target=self._run, name=f"answers {stream}", daemon=True)
+        self._thread.start()
+
+    def raise_failure(self) -> None:
+        """Tell the owner what went wrong in the thread."""
+        if not self._thread.is_alive():
+            raise BusError(f"{self._stream}: nobody answers questions any more; start anew.")
+        if self._journal_error is not None:
+            error, self._journal_error = self._journal_error, None
+            raise error
+
+    def stop(self) -> bool:
+        """End the thread. False if it hangs in a disk that does not answer."""
+        self._stop.send(b"")
+        self._thread.join(timeout=0.5)
+        self._stop.close(linger=0)
+        return not self._thread.is_alive()
+
+    def _run(self) -> None:
+        try:
+            self._serve()
+        finally:
+            self._router.close()
+            self._end.close(linger=0)
+
+    def _serve(self) -> None:
+        poller = zmq.Poller()
+        poller.register(self._router, zmq.POLLIN)
+        poller.register(self._end, zmq.POLLIN)
+        next_sync = time.monotonic() + SYNC_PERIOD_S
+        while True:
+            wait_s = max(next_sync - time.monotonic(), 0.0)
+            ready = dict(poller.poll(wait_s * 1000 + 1))
+            if self._end in ready:
+                return
+            try:
+                if self._router in ready:
+                    self._answer(self._router.recv_multipart())
+                if time.monotonic() >= next_sync:
+                    next_sync = time.monotonic() + SYNC_PERIOD_S
+                    self._journal.sync()
+            except JournalError as error:
+                self._journal_error = error
+
+    def _answer(self, frames: list[bytes]) -> None:
+        question = unpack(Question, frames[1]) if len(frames) == 2 else None
+        if question is None or question.stream != self._stream:
+            self.refused += 1
+            return
+        if question.run != self._run_id:  # say who is here, but nothing of the run
+            self.refused += 1
+            answer = Answer(self._run_id, self._stream, 0, 0, b"")
+        else:
+            piece = self._journal.piece(question.start)
+            answer = Answer(self._run_id, self._stream, piece.first, piece.next_seq, piece.lines)
+        # A peer that does not take its answers loses them here; this never blocks.
+        self._router.send_multipart([frames[0], pack(answer)], zmq.NOBLOCK)

@@ -1,0 +1,86 @@
+"""What goes over the wire: three kinds of message, decoded by declared type.
+
+A publisher sends ``Message`` after the topic ``<stream>|`` (the bar keeps ``a`` from also
+subscribing to ``ab``). A subscriber asks a ``Question`` and gets an ``Answer``, whose ``lines``
+are the piece of the journal as it is on disk. All name the run, so that somebody who still
+listens to an earlier run at the same address is not misled.
+"""
+
+from __future__ import annotations
+
+from typing import Annotated, Any, TypeVar
+
+import msgspec
+
+from acquire.tables import Cell
+
+Number = Annotated[int, msgspec.Meta(ge=0, le=2**63 - 1)]
+NEWEST = -1
+"""As the start of a question: from the newest row on."""
+
+
+class Message(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_fields=True):
+    """One row: ``cells`` are those after ``seq``, as the journal has them."""
+
+    run: str
+    stream: str
+    seq: Number
+    cells: tuple[Cell, ...]
+
+
+class Question(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_fields=True):
+    """Asks for the rows of a stream from number ``start`` on, or the newest (-1)."""
+
+    run: str
+    stream: str
+    start: Annotated[int, msgspec.Meta(ge=NEWEST, le=2**63 - 1)]
+
+
+class Answer(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_fields=True):
+    """Rows from number ``first`` on, perhaps none; ``next_seq`` is how many there are in all."""
+
+    run: str
+    stream: str
+    first: Number
+    next_seq: Number
+    lines: bytes
+
+
+Kind = TypeVar("Kind", Message, Question, Answer)
+_encode = msgspec.msgpack.encode
+_decoders = {kind: msgspec.msgpack.Decoder(kind) for kind in (Message, Question, Answer)}
+_plain = msgspec.msgpack.Decoder(dict[str, Any])
+
+
+def topic(stream: str) -> bytes:
+    """The first frame of a stream's messages, and what is subscribed to."""
+    return stream.encode() + b"|"
+
+
+def pack(message: Message | Question | Answer) -> bytes:
+    """The bytes of a message."""
+    return _encode(message)
+
+
+def unpack(kind: type[Kind], data: bytes) -> Kind | None:
+    """The message in some bytes, or None if they are no such message."""
+    try:
+        return _decoders[kind].decode(data)
+    except _MALFORMED:
+        return None
+
+
+def pack_plain(message: dict[str, Any]) -> bytes:
+    """The bytes of a small message of plain values."""
+    return _encode(message)
+
+
+def unpack_plain(data: bytes) -> dict[str, Any] | None:
+    """The plain message in some bytes, or None if they are none."""
+    try:
+        return _plain.decode(data)
+    except _MALFORMED:
+        return None
+
+
+_MALFORMED = (msgspec.MsgspecError, ValueError, OverflowError, RecursionError)

@@ -1,0 +1,29 @@
+"""Files that are whole or not there, also after a power cut."""
+
+from __future__ import annotations
+
+import os
+from pathlib import Path
+
+
+def write_whole(path: Path, data: bytes) -> None:
+    """Replace a file in one step: whoever reads sees the old bytes or the new ones.
+
+    Written to a hidden file beside it, synced, renamed. One writer at a time. Raises OSError.
+    """
+    new = path.with_name(f".{path.name}.new")
+    with open(new, "wb") as file:
+        file.write(data)
+        file.flush()
+        os.fsync(file.fileno())
+    os.replace(new, path)
+    sync_folder(path.parent)
+
+
+def sync_folder(folder: Path) -> None:
+    """Make the names in a folder survive a power cut. Raises OSError."""
+    fd = os.open(folder, os.O_RDONLY)
+    try:
+        os.fsync(fd)
+    finally:
+        os.close(fd)
