@@ -20,7 +20,7 @@ from types import TracebackType
 from typing import BinaryIO, Self
 
 from acquire.cells import RowCodec
-from acquire.disk import sync_folder
+from acquire.disk import sync_folder, write_whole
 from acquire.errors import JournalError
 from acquire.tables import Row, Table
 
@@ -149,12 +149,19 @@ class Journal:
             self._head, self._ends = _scan(file, self.path, self._codec.header)
         self.torn = os.fstat(self._fd).st_size - self._end()
         if self.torn:
-            os.ftruncate(self._fd, self._end())
+            self._cut_torn()
         if not self._head:
             self._write(self._codec.header)
             self._head = len(self._codec.header)
             self._unsure = False
             sync_folder(self.path.parent)
+
+    def _cut_torn(self) -> None:
+        """Cut away what is not whole. More than one torn line is kept beside, in ``*.cut``."""
+        torn = self._read(self._end(), self.torn)
+        if b"\n" in torn:
+            write_whole(self.path.with_name(self.path.name + ".cut"), torn)
+        os.ftruncate(self._fd, self._end())
 
     def _claim(self) -> None:
         try:
@@ -163,7 +170,7 @@ class Journal:
             if error.errno not in (errno.EWOULDBLOCK, errno.EACCES):
                 return  # a file system without locks
             raise JournalError(
-                f"{self.path}: another process is writing it; end that one first."
+                f"{self.path}: somebody else is writing it; end that process first."
             ) from None
 
     def _write(self, data: bytes) -> None:
@@ -212,15 +219,15 @@ class Journal:
 def read_rows(path: str | Path, table: Table, start: int = 0) -> Iterator[Row]:
     """The complete rows of a journal from number ``start`` on, also while another writes it.
 
-    Raises JournalError if it can't be read, or where a line is not what it must be. The last
-    line is left out when it does not end in a line feed.
+    A torn end is left out. Raises JournalError if the file can't be read, or where a line is not
+    what it must be.
     """
     codec = RowCodec(table)
     try:
         with open(path, "rb") as file:
             _check_header(file.readline(), Path(path), codec.header)
             for _ in range(start):
-                if not file.readline().endswith(b"\n"):
+                if _torn(file.readline()):
                     return
             yield from codec.rows(_complete_lines(file), start)
     except OSError as error:
@@ -230,28 +237,31 @@ def read_rows(path: str | Path, table: Table, start: int = 0) -> Iterator[Row]:
 
 def _complete_lines(file: BinaryIO) -> Iterator[str]:
     for line in file:
-        if not line.endswith(b"\n"):
+        if _torn(line):
             return
         yield str(line, "utf-8")  # UnicodeDecodeError is a ValueError: told with its line's number
 
 
-def _scan(file: BinaryIO, path: Path, header: bytes) -> tuple[int, array[int]]:
-    """Where the header ends (0: not complete) and where each complete row ends.
+def _torn(line: bytes) -> bool:
+    """Whether the journal ends before this line.
 
-    A line with NUL bytes ends the journal: a power cut leaves these where the length of the
-    file had reached the disk and its content had not.
+    NUL bytes are never written; a power cut leaves them where the length of the file had reached
+    the disk and its content had not.
     """
+    return not line.endswith(b"\n") or b"\0" in line
+
+
+def _scan(file: BinaryIO, path: Path, header: bytes) -> tuple[int, array[int]]:
+    """Where the header ends (0: not complete) and where each complete row ends."""
     ends = array("q")
     first = file.readline()
     if not _check_header(first, path, header):
         return 0, ends
     position = len(first)
     for number, line in enumerate(file):
-        if not line.endswith(b"\n"):
+        if _torn(line):
             break
         if not line.startswith(b"%d," % number):
-            if b"\0" in line:
-                break
             raise JournalError(
                 f"{path}, line {number + 2}: not the row number {number}; "
                 "put it back from a copy before anything is added to it."

@@ -45,15 +45,16 @@ class LiveRun:
     @property
     def alive(self) -> bool:
         """Whether the supervisor is still there; if not, the run has crashed."""
-        if self.monotonic_start > time.monotonic():
+        run_age_s = time.monotonic() - self.monotonic_start
+        if run_age_s < 0:
             return False  # the machine has been started anew since
         try:
             os.kill(self.pid, 0)
         except ProcessLookupError:
             return False
         except PermissionError:
-            return True
-        return True
+            pass  # somebody else's process
+        return _process_age_s(self.pid) > run_age_s - 1.0  # else a later process of this number
 
 
 class RunFolder:
@@ -207,6 +208,16 @@ def open_run(path: str | Path) -> RunFolder:
     except (ValueError, TypeError, KeyError) as error:
         raise RunError(f"{path}: its datapackage.json is not that of a run ({error!r}).") from None
     return RunFolder(path, started_utc, rig, config_bytes)
+
+
+def _process_age_s(pid: int) -> float:
+    """How long ago a process was started; infinity where the system does not tell."""
+    try:
+        fields = Path(f"/proc/{pid}/stat").read_text().rpartition(")")[2].split()
+        ticks = int(fields[19])  # field 22 of proc(5), counted from the machine's start
+    except (OSError, ValueError, IndexError):
+        return float("inf")
+    return time.clock_gettime(time.CLOCK_BOOTTIME) - ticks / os.sysconf("SC_CLK_TCK")
 
 
 def _new_folder(parent: Path, name: str) -> Path:

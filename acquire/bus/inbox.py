@@ -8,7 +8,7 @@ from typing import Any, Self
 
 import zmq
 
-from acquire.bus.sockets import bound, connected
+from acquire.bus.sockets import LONGEST_QUESTION, bound, connected, milliseconds
 from acquire.bus.wire import pack_plain, unpack_plain
 from acquire.errors import BusError
 
@@ -40,7 +40,7 @@ class Inbox:
         """
         if self._closed:
             raise BusError(f"{self.address}: the inbox is closed.")
-        if not self._socket.poll(timeout_s * 1000):
+        if not self._socket.poll(milliseconds(timeout_s)):
             return None
         frames = self._socket.recv_multipart()
         message = unpack_plain(frames[1]) if len(frames) == 2 else None
@@ -77,11 +77,14 @@ def ask(address: str, message: dict[str, Any], timeout_s: float) -> dict[str, An
 
     The request may have been obeyed all the same; who asks again gives it an ``id``.
     """
+    request = pack_plain(message)
+    if len(request) > LONGEST_QUESTION:
+        raise BusError(f"a request of {len(request)} bytes; at most {LONGEST_QUESTION} are taken.")
     with zmq.Context() as context:
         socket = connected(context, zmq.DEALER, address, 1)
         try:
-            socket.send(pack_plain(message), zmq.NOBLOCK)
-            reply = unpack_plain(socket.recv()) if socket.poll(timeout_s * 1000) else None
+            socket.send(request, zmq.NOBLOCK)
+            reply = unpack_plain(socket.recv()) if socket.poll(milliseconds(timeout_s)) else None
         finally:
             socket.close(linger=0)
     if reply is None:

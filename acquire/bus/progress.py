@@ -111,7 +111,7 @@ class StreamProgress:
         self._heard, self._asked = now, None
         if self._next is None:
             self._next = answer.first
-        if answer.next_seq < self._next:
+        if answer.next_seq < answer.start:
             self._rewound += 1
         if answer.first > self._next:
             return []

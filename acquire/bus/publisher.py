@@ -11,10 +11,10 @@ from typing import Self
 import zmq
 
 from acquire.bus.addresses import Endpoint
-from acquire.bus.sockets import HIGH_WATER, bound
+from acquire.bus.sockets import HIGH_WATER, bound, milliseconds
 from acquire.bus.wire import Answer, Message, Question, pack, topic, unpack
 from acquire.errors import BusError, JournalError
-from acquire.journal import Journal
+from acquire.journal import Journal, Piece
 from acquire.tables import Cell, Table
 
 SYNC_PERIOD_S = 1.0
@@ -157,7 +157,7 @@ class _Answerer:
         next_sync = time.monotonic() + SYNC_PERIOD_S
         while True:
             wait_s = max(next_sync - time.monotonic(), 0.0)
-            ready = dict(poller.poll(wait_s * 1000 + 1))
+            ready = dict(poller.poll(milliseconds(wait_s)))
             if self._end in ready:
                 return
             try:
@@ -176,9 +176,10 @@ class _Answerer:
             return
         if question.run != self._run_id:  # say who is here, but nothing of the run
             self.refused += 1
-            answer = Answer(self._run_id, self._stream, 0, 0, b"")
+            piece = Piece(0, b"", 0)
         else:
             piece = self._journal.piece(question.start)
-            answer = Answer(self._run_id, self._stream, piece.first, piece.next_seq, piece.lines)
+        head = (self._run_id, self._stream, question.start)
+        answer = Answer(*head, piece.first, piece.next_seq, piece.lines)
         # A peer that does not take its answers loses them here; this never blocks.
         self._router.send_multipart([frames[0], pack(answer)], zmq.NOBLOCK)

@@ -6,6 +6,8 @@ connections that have died without a word. Nothing waits for ever at the end.
 
 from __future__ import annotations
 
+import math
+
 import zmq
 
 from acquire.bus.addresses import check_loopback
@@ -54,6 +56,11 @@ def connected(
     socket.setsockopt(zmq.RECONNECT_IVL_MAX, 500)
     socket.connect(address)
     return socket
+
+
+def milliseconds(seconds: float) -> int:
+    """What to give to a poll, rounded up so that it does not wake before the time."""
+    return math.ceil(seconds * 1000)
 
 
 def _prepared(

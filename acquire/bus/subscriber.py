@@ -11,7 +11,7 @@ import zmq
 
 from acquire.bus.addresses import Endpoint
 from acquire.bus.progress import StreamHealth, StreamProgress
-from acquire.bus.sockets import HIGH_WATER, connected
+from acquire.bus.sockets import HIGH_WATER, connected, milliseconds
 from acquire.bus.wire import Question, pack, topic
 from acquire.errors import BusError
 from acquire.tables import Row, Table
@@ -68,14 +68,14 @@ class Subscriber:
         wait_s = 0.0
         while True:
             got: list[tuple[str, Row]] = []
-            for socket, _ in self._poller.poll(wait_s * 1000):
+            for socket, _ in self._poller.poll(milliseconds(wait_s)):
                 stream = self._by_socket[socket]
                 got += [(stream.name, row) for row in stream.take(socket)]
             next_question = self._ask()
             now = time.monotonic()
             if got or now >= deadline:
                 return got
-            wait_s = max(min(deadline, next_question) - now, 0.001)
+            wait_s = max(min(deadline, next_question) - now, 0.0)
 
     def health(self) -> dict[str, StreamHealth]:
         """What is known of each stream."""

@@ -15,6 +15,7 @@ import msgspec
 from acquire.tables import Cell
 
 Number = Annotated[int, msgspec.Meta(ge=0, le=2**63 - 1)]
+Start = Annotated[int, msgspec.Meta(ge=-1, le=2**63 - 1)]
 NEWEST = -1
 """As the start of a question: from the newest row on."""
 
@@ -33,14 +34,18 @@ class Question(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_fiel
 
     run: str
     stream: str
-    start: Annotated[int, msgspec.Meta(ge=NEWEST, le=2**63 - 1)]
+    start: Start
 
 
 class Answer(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_fields=True):
-    """Rows from number ``first`` on, perhaps none; ``next_seq`` is how many there are in all."""
+    """Rows from number ``first`` on, perhaps none; ``next_seq`` is how many there are in all.
+
+    ``start`` is that of the question.
+    """
 
     run: str
     stream: str
+    start: Start
     first: Number
     next_seq: Number
     lines: bytes
@@ -48,7 +53,9 @@ class Answer(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_fields
 
 Kind = TypeVar("Kind", Message, Question, Answer)
 _encode = msgspec.msgpack.encode
-_decoders = {kind: msgspec.msgpack.Decoder(kind) for kind in (Message, Question, Answer)}
+_decoders: dict[Any, msgspec.msgpack.Decoder[Any]] = {
+    kind: msgspec.msgpack.Decoder(kind) for kind in (Message, Question, Answer)
+}
 _plain = msgspec.msgpack.Decoder(dict[str, Any])
 
 
@@ -65,9 +72,10 @@ def pack(message: Message | Question | Answer) -> bytes:
 def unpack(kind: type[Kind], data: bytes) -> Kind | None:
     """The message in some bytes, or None if they are no such message."""
     try:
-        return _decoders[kind].decode(data)
+        message: Kind = _decoders[kind].decode(data)
     except _MALFORMED:
         return None
+    return message
 
 
 def pack_plain(message: dict[str, Any]) -> bytes:
