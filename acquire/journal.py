@@ -85,8 +85,7 @@ class Journal:
         """As :meth:`append`, but returns the whole row as it will read back."""
         clean = self._codec.canonical(cells)
         with self._lock:
-            if self._fd < 0:
-                raise JournalError(f"{self.path}: is closed; open it again to write.")
+            self._check_open()
             row: Row = (len(self._ends), *clean)
             line = self._codec.line(row)
             self._write(line)
@@ -101,6 +100,7 @@ class Journal:
         not depend on how long the journal is. Raises JournalError if it can't be read.
         """
         with self._lock:
+            self._check_open()
             count = len(self._ends)
             first = min(start, count) if start >= 0 else max(count - 1, 0)
             begin = self._ends[first - 1] if first else self._head
@@ -187,6 +187,10 @@ class Journal:
             with suppress(JournalError):
                 self._cut_tail()
             raise self._error("can't be written", error) from None
+
+    def _check_open(self) -> None:
+        if self._fd < 0:
+            raise JournalError(f"{self.path}: is closed; open it again.")
 
     def _cut_tail(self) -> None:
         try:

@@ -56,6 +56,7 @@ _encode = msgspec.msgpack.encode
 _decoders: dict[Any, msgspec.msgpack.Decoder[Any]] = {
     kind: msgspec.msgpack.Decoder(kind) for kind in (Message, Question, Answer)
 }
+_MALFORMED = (msgspec.MsgspecError, ValueError, OverflowError, RecursionError)
 _plain = msgspec.msgpack.Decoder(dict[str, Any])
 
 
@@ -89,6 +90,3 @@ def unpack_plain(data: bytes) -> dict[str, Any] | None:
         return _plain.decode(data)
     except _MALFORMED:
         return None
-
-
-_MALFORMED = (msgspec.MsgspecError, ValueError, OverflowError, RecursionError)
