@@ -44,12 +44,17 @@ class RampSection(Section):
 
 
 class TargetSection(Section):
-    """How good the answer must be: relative half-widths of the intervals."""
+    """How good the answer must be: relative half-widths of the intervals.
+
+    ``past_equal_resistivities``: nothing is called stable before the ramp has passed the field
+    where rho_xx = rho_xy; a second kind of carrier may hide below it.
+    """
 
     confidence: Annotated[float, Field(ge=0.5, lt=1)] = 0.95
     sheet_density_relative: Share = 0.01
     mobility_relative: Share = 0.01
     scattering_time_relative: Share | None = None
+    past_equal_resistivities: bool = True
 
 
 class WindowSection(Section):

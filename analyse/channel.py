@@ -1,0 +1,98 @@
+"""One voltage channel: its readings in order, judged, waiting to be paired with their field."""
+
+from __future__ import annotations
+
+import math
+from collections import deque
+from dataclasses import dataclass, replace
+
+from analyse.field_track import FieldTrack
+from analyse.setup import Signal
+from analyse.spikes import SpikeGate
+
+
+@dataclass(frozen=True, slots=True)
+class Sample:
+    """A reading at the sample: ``kind`` is ok, or why it is not used (overload, lost, wild).
+
+    ``track`` is the field behind the filter that the reading was taken with.
+    """
+
+    time_s: float
+    kind: str
+    track: FieldTrack | None = None
+    value: float = math.nan
+    quadrature: float | None = None
+
+
+class Channel:
+    """Readings of one signal. ``passed_s``: no sample from before this time will come any more."""
+
+    def __init__(self, signal: Signal, track: FieldTrack | None = None) -> None:
+        self.signal = signal
+        self.track = track
+        self.queue: deque[Sample] = deque()
+        self.passed_s = -math.inf
+        self._gate: SpikeGate[Sample] = SpikeGate()
+        self._last: tuple[float, float] | None = None
+
+    def push(self, time_s: float, x: float | None, y: float | None, status: str) -> None:
+        """Take a reading; anything but status ok with a finite x counts as overload or lost."""
+        good = status == "ok" and x is not None and math.isfinite(x)
+        if good and self.signal.detection == "XY":
+            good = y is not None and math.isfinite(y)
+        if not good:
+            self._release(self._gate.flush())
+            kind = "overload" if status in ("overload", "range") else "lost"
+            self.queue.append(Sample(time_s, kind, self.track))
+            self.passed_s = max(self.passed_s, time_s)
+            return
+        assert x is not None
+        value = self.signal.at_sample(x, y)
+        sample = Sample(time_s, "ok", self.track, value, self.signal.quadrature(x, y))
+        self._release(self._gate.push(value, sample))
+
+    def settle(self) -> None:
+        """Let go of the reading that waits for its neighbour: what follows is not like it."""
+        self._release(self._gate.flush())
+
+    def end(self) -> None:
+        """No more readings come."""
+        self._release(self._gate.flush())
+        self.passed_s = math.inf
+
+    def interpolated(self, time_s: float) -> float | None:
+        """Value at a moment that the channel has passed; None if it is not known.
+
+        Between the last sample before it and the first row after it; the former alone where the
+        latter is no good. Rows further ahead are not looked at: whether they are here already
+        depends on the order of arrival.
+        """
+        before: tuple[float, float] | None = self._last
+        after: tuple[float, float] | None = None
+        for sample in self.queue:
+            good = sample.kind == "ok"
+            if sample.time_s <= time_s:
+                before = (sample.time_s, sample.value) if good else before
+                continue
+            after = (sample.time_s, sample.value) if good else None
+            break
+        if before is None or after is None:
+            nearest = before or after
+            return nearest[1] if nearest is not None else None
+        share = (time_s - before[0]) / (after[0] - before[0])
+        return before[1] + share * (after[1] - before[1])
+
+    def remember(self, sample: Sample) -> None:
+        """Keep a sample that was taken off the queue, for interpolation."""
+        if sample.kind == "ok":
+            self._last = (sample.time_s, sample.value)
+
+    def _release(self, judged: tuple[Sample, bool] | None) -> None:
+        if judged is None:
+            return
+        sample, wild = judged
+        if wild:
+            sample = replace(sample, kind="wild")
+        self.queue.append(sample)
+        self.passed_s = max(self.passed_s, sample.time_s)

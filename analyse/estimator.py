@@ -1,0 +1,286 @@
+"""The streaming estimator of one Hall bar: readings in, a frozen estimate at each field point."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable
+from dataclasses import dataclass
+
+from analyse.budget import combined, systematic_lines
+from analyse.cautions import FitFacts, RoleWatch, fit_cautions
+from analyse.drude import density_from_slope, mobility_from, scattering_time_from, transport
+from analyse.estimate import BudgetLine, Caution, Estimate, Measured, Moment
+from analyse.forecast import State, field_to_target
+from analyse.hall_bar import HallBar
+from analyse.lockin import LockinFilter
+from analyse.numbers import Number, make_number
+from analyse.pairing import Pair, Pairing
+from analyse.quick import QuickReadings
+from analyse.setup import Excitation, FieldSource, Ramp, Setup, Signal, Target, Window
+from analyse.sweeps import Sweeps
+from analyse.transport_fit import TransportFit, fit_transport, fixed_phis
+from analyse.verdict import Facts, what_is_missing
+from analyse.windowed import WindowedFit
+
+
+@dataclass
+class _Point:
+    """What was gathered since the last field point was complete."""
+
+    seen: set[str]
+    fields: list[float]
+    rho: dict[str, list[float]]
+
+
+class Estimator:
+    """Density, mobility and scattering time of one Hall bar from a stream of readings.
+
+    Parameters
+    ----------
+    bar
+        Geometry and carriers.
+    longitudinal, hall
+        The two signals; see :class:`analyse.setup.Signal`.
+    excitation
+        The current; not needed where both signals are resistances.
+    field, target, ramp, window, expected_carriers
+        See :mod:`analyse.setup`. The ramp is the plan: it fixes scales before the data and
+        serves the forecast; without it documented defaults hold.
+
+    The noise of a signal is taken as white before its filter. Readings of one channel must come
+    in the order of time; the channels may come in any order relative to each other, the estimates
+    do not depend on it.
+    """
+
+    def __init__(
+        self,
+        bar: HallBar,
+        *,
+        longitudinal: Signal = Signal(),
+        hall: Signal = Signal(),
+        excitation: Excitation | None = None,
+        field: FieldSource = FieldSource(),
+        target: Target | None = None,
+        ramp: Ramp | None = None,
+        window: Window = Window(),
+        expected_carriers: str | None = None,
+    ) -> None:
+        self.bar = bar
+        self.setup = Setup(
+            longitudinal, hall, excitation, field, target or Target(), ramp, window,
+            expected_carriers,
+        )
+        self._scale_T = ramp.largest_T if ramp is not None else 1.0
+        self._pairing = Pairing(bar, self.setup)
+        self._fit = WindowedFit(self.setup, self._scale_T)
+        self._phis = fixed_phis(self.setup, self._scale_T)
+        self._systematic = systematic_lines(bar, self.setup)
+        self._sweeps = Sweeps(max(2e-3, 0.01 * self._scale_T))
+        self._watch = {role: RoleWatch(role) for role in ("longitudinal", "hall")}
+        self._quick = QuickReadings()
+        self._field_points = 0
+        self._point = _Point(set(), [], {"longitudinal": [], "hall": []})
+        self._stable_at: Moment | None = None
+        self._farthest_T = 0.0
+        self._last_rate = 0.0
+        self._last_field: float | None = None
+
+    def update(
+        self, channel: str, time_s: float, x: float | None, y: float | None = None,
+        status: str = "ok",
+    ) -> Estimate | None:
+        """Take one reading; the latest estimate that it completes, or None.
+
+        Parameters
+        ----------
+        channel
+            "field" (tesla), "longitudinal", "hall" (volt or ohm), "current" (volt or ampere).
+        time_s
+            Time of the reading in seconds, from any fixed start.
+        x, y
+            The reading; None where there was none, which says that time has passed.
+        status
+            "ok", or why the reading can't be used: "overload", "range", "no_answer", "bad_reply".
+
+        Raises ValueError for an unknown channel or a time that is not finite.
+        """
+        estimates = self.advance(channel, time_s, x, y, status)
+        return estimates[-1] if estimates else None
+
+    def advance(
+        self, channel: str, time_s: float, x: float | None, y: float | None = None,
+        status: str = "ok",
+    ) -> tuple[Estimate, ...]:
+        """As :meth:`update`, with every estimate that the reading completes, in order."""
+        if not math.isfinite(time_s):
+            raise ValueError(f"time_s must be finite, not {time_s!r}")
+        x, y = (None if one is None else float(one) for one in (x, y))
+        return self._absorb(self._pairing.push(channel, float(time_s), x, y, status))
+
+    def set_filter(self, role: str, stages: LockinFilter | None) -> None:
+        """From the next reading of "longitudinal" or "hall" on, another filter stands before it.
+
+        Its readings are used again once the field behind the new filter has settled.
+        """
+        self._pairing.set_filter(role, stages)
+
+    def end(self, channel: str | None = None) -> tuple[Estimate, ...]:
+        """No more readings come (from one channel, or from all): what that completes."""
+        channels = [channel] if channel else ["field", "current", "longitudinal", "hall"]
+        return tuple(one for each in channels for one in self._absorb(self._pairing.end(each)))
+
+    def _absorb(self, pairs: Iterable[Pair]) -> tuple[Estimate, ...]:
+        estimates = []
+        for pair in pairs:
+            self._take(pair)
+            self._point.seen.add(pair.role)
+            if len(self._point.seen) == 2:
+                estimates.append(self._complete(pair.time_s))
+        return tuple(estimates)
+
+    def _take(self, pair: Pair) -> None:
+        self._watch[pair.role].add(pair)
+        if pair.kind != "ok":
+            return
+        self._farthest_T = max(self._farthest_T, abs(pair.field_T))
+        self._last_rate = pair.rate_T_per_s
+        self._point.fields.append(pair.field_T)
+        self._point.rho[pair.role].append(pair.rho_ohm)
+        self._fit.add(self._sweeps.add(pair.field_T), pair)
+
+    def _complete(self, time_s: float) -> Estimate:
+        point, self._point = self._point, _Point(set(), [], {"longitudinal": [], "hall": []})
+        field_T, rho_xx, rho_xy = map(
+            _mean, (point.fields, point.rho["longitudinal"], point.rho["hall"])
+        )
+        self._field_points += 1
+        if field_T is not None:
+            self._last_field = field_T
+            if rho_xx is not None and rho_xy is not None:
+                self._quick.add(field_T, rho_xx, rho_xy)
+        hall, along = self._fit.pools()
+        fit = fit_transport(self.setup, hall, along, self._phis, self._fit.excess)
+        return self._estimate(time_s, field_T, rho_xx, rho_xy, fit)
+
+    def _estimate(
+        self, time_s: float, field_T: float | None, rho_xx: float | None, rho_xy: float | None,
+        fit: TransportFit,
+    ) -> Estimate:
+        bounds, zero = self._fit.bounds, self._fit.zero_in_reach
+        numbers = self._numbers(fit) if zero else (None, None, None)
+        density, mobility, tau = numbers
+        carriers = _carriers(fit)
+        cautions = self._cautions(fit, carriers, density, mobility)
+        window = self._fit.window_T
+        missing = what_is_missing(
+            Facts(numbers, fit, *(window or (0.0, 0.0)), zero, cautions), self.setup.target
+        )
+        at_field = field_T if field_T is not None else self._last_field
+        if missing:
+            self._stable_at = None
+        elif self._stable_at is None and at_field is not None:
+            self._stable_at = Moment(time_s, at_field)
+        ahead = self._forecast(fit, density, mobility, bool(missing))
+        return Estimate(
+            time_s, field_T, rho_xx, rho_xy, self._field_points,
+            field_T is not None and bounds.low_T <= abs(field_T) <= bounds.high_T,
+            density, mobility, tau,
+            self._measured(fit, "rho_0"), self._measured(fit, "slope"), fit.offset_ohm,
+            carriers, window, self._quick.density, self._quick.mobility,
+            transport(density.value, mobility.value, self.bar.carrier_gas)
+            if density and mobility else None,
+            self._budget(fit), "converging" if missing else "stable", missing, self._stable_at,
+            *ahead, cautions, self._sweeps.number,
+        )
+
+    def _numbers(self, fit: TransportFit) -> tuple[Number | None, Number | None, Number | None]:
+        slope, rho_0 = fit.slope, fit.rho_0
+        confidence = self.setup.target.confidence
+        s_n, s_mu, s_tau = combined(self._systematic)
+        if slope is None or abs(slope.value) <= slope.half_width:
+            return None, None, None
+        per_T = self._scale_T
+        a, h = abs(slope.value) / per_T, slope.half_width / per_T
+        stat_a, model_a = slope.standard_error / per_T / a, slope.spread / per_T / a
+        density = make_number(
+            density_from_slope(a), density_from_slope(a + h), density_from_slope(a - h),
+            stat_a, model_a, s_n, confidence,
+        )
+        if density is None or rho_0 is None or rho_0.value <= rho_0.half_width:
+            return density, None, None
+        r, hr = rho_0.value, rho_0.half_width
+        stat = math.hypot(stat_a, rho_0.standard_error / r)
+        model = math.hypot(model_a, rho_0.spread / r)
+        ends = (mobility_from(a, r), (a - h) / (r + hr), (a + h) / (r - hr))
+        mobility = make_number(*ends, stat, model, s_mu, confidence)
+        mass = self.bar.carrier_gas.mass_kg(density.value)
+        times = (scattering_time_from(mu, mass) for mu in ends)
+        return density, mobility, make_number(*times, stat, model, s_tau, confidence)
+
+    def _measured(self, fit: TransportFit, name: str) -> Measured | None:
+        coefficient = fit.slope if name == "slope" else fit.rho_0
+        if coefficient is None:
+            return None
+        scale = self._scale_T if name == "slope" else 1.0
+        parts = math.hypot(coefficient.standard_error, coefficient.spread)
+        return Measured(coefficient.value / scale, parts / scale)
+
+    def _budget(self, fit: TransportFit) -> tuple[BudgetLine, ...]:
+        slope, rho_0 = fit.slope, fit.rho_0
+        if slope is None or rho_0 is None or not slope.value or not rho_0.value:
+            return ()
+        a, r = abs(slope.value), abs(rho_0.value)
+        lines = (
+            ("Hall slope", "statistical", slope.standard_error / a, True),
+            ("zero-field resistivity", "statistical", rho_0.standard_error / r, False),
+            ("bend of the Hall line", "model", slope.spread / a, True),
+            ("bend of the longitudinal resistivity", "model", rho_0.spread / r, False),
+        )
+        fitted = tuple(
+            BudgetLine(source, kind, u if both else 0.0, u, u) for source, kind, u, both in lines
+        )
+        return fitted + self._systematic
+
+    def _cautions(
+        self, fit: TransportFit, carriers: str, density: Number | None, mobility: Number | None
+    ) -> tuple[Caution, ...]:
+        facts = FitFacts(
+            fit, self._fit.bounds, self._farthest_T, carriers,
+            density.value if density else None, mobility.value if mobility else None,
+            self._quick.density, self._quick.mobility,
+        )
+        found = [c for watch in self._watch.values() for c in watch.cautions()]
+        return tuple([*found, *fit_cautions(facts, self.setup)])
+
+    def _forecast(
+        self, fit: TransportFit, density: Number | None, mobility: Number | None, missing: bool
+    ) -> tuple[float | None, float | None]:
+        ramp, slope, rho_0 = self.setup.ramp, fit.slope, fit.rho_0
+        if not missing:
+            return 0.0, (abs(self._stable_at.field_T) if self._stable_at else None)
+        if mobility is None or slope is None or rho_0 is None or self._last_field is None:
+            return None, None
+        rate, field_T = abs(self._last_rate), abs(self._last_field)
+        per_effective = self._fit.seconds_per_effective
+        if rate <= 0 or per_effective is None or field_T < 0.999 * self._farthest_T:
+            return None, None
+        end_T = min(ramp.largest_T if ramp else math.inf, self._fit.bounds.high_T, 1e3)
+        window = self._fit.window_T
+        state = State(
+            field_T, window[0] if window else 0.0, rate, per_effective, slope.effective,
+            self._fit.noise("hall") / abs(slope.value), self._fit.noise("longitudinal") / rho_0.value,
+            mobility.value, combined(self._systematic),
+        )
+        at = field_to_target(state, self.setup.target, self._phis, self._scale_T, end_T)
+        return (None, None) if at is None else ((at - field_T) / rate, at)
+
+
+def _mean(values: list[float]) -> float | None:
+    return sum(values) / len(values) if values else None
+
+
+def _carriers(fit: TransportFit) -> str:
+    slope = fit.slope
+    if slope is None or abs(slope.value) <= slope.half_width:
+        return "unknown"
+    return "holes" if slope.value > 0 else "electrons"

@@ -1,0 +1,81 @@
+"""When, and at which field, the target will be met, if the ramp goes on as it does.
+
+The intervals narrow with the field in a known way: with readings spread evenly up to a field B the
+slope's effective sum of squares grows as N (B - B_low)^2 / 12 and N with time.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+from analyse.confidence import t_radius
+from analyse.setup import Target
+from analyse.transport_fit import SLOPE_SHARE, Phis
+
+LINE_BEND_FACTOR = math.sqrt(15.0)
+"""Standard error of the bend over that of the slope: [1, u, u|u|] against [1, u], evenly spread
+over one polarity."""
+
+
+@dataclass(frozen=True)
+class State:
+    """What a forecast starts from: noise per effective reading relative to the coefficients."""
+
+    field_T: float
+    low_T: float
+    rate_T_per_s: float
+    seconds_per_effective: float
+    effective: float
+    slope_noise: float
+    rho_0_noise: float
+    mobility_m2_per_V_s: float
+    systematic: tuple[float, float, float]
+
+
+def meets(state: State, field_T: float, target: Target, phis: Phis, scale_T: float) -> bool:
+    """Whether the target is expected to be met when the field has grown to ``field_T``.
+
+    ``slope_noise``: noise of an effective reading over the slope, in units of u; ``rho_0_noise``
+    likewise over rho_0.
+    """
+    seconds = max(0.0, field_T - state.field_T) / state.rate_T_per_s
+    effective = state.effective + seconds / state.seconds_per_effective
+    width = (field_T - state.low_T) / scale_T
+    if width <= 0 or effective < 4:
+        return False
+    alpha = 1.0 - target.confidence
+    z2 = effective * width**2 / 12
+    error = state.slope_noise / math.sqrt(z2)
+    slope = error * t_radius(effective - 2, z2, phis.slope, SLOPE_SHARE * alpha)
+    level = state.rho_0_noise / math.sqrt(effective) * t_radius(
+        effective - 1, effective, phis.rho_0, (1 - SLOPE_SHARE) * alpha
+    )
+    straight = 1.645 * LINE_BEND_FACTOR * error <= target.sheet_density
+    crossed = not target.cross_crossing_field or field_T * state.mobility_m2_per_V_s >= 1.0
+    widths = (slope, slope + level, slope + level)
+    wanted = (target.sheet_density, target.mobility, target.scattering_time or target.mobility)
+    reached = all(
+        math.hypot(w, 2 * s) <= t for w, s, t in zip(widths, state.systematic, wanted)
+    )
+    return straight and crossed and reached
+
+
+def field_to_target(
+    state: State, target: Target, phis: Phis, scale_T: float, end_T: float
+) -> float | None:
+    """Magnitude of field at which the target is expected to be met; None if not before ``end_T``."""
+    if not (state.rate_T_per_s > 0 and end_T > 0):
+        return None
+    if not meets(state, end_T, target, phis, scale_T):
+        return None
+    low, high = min(state.field_T, end_T), end_T
+    if meets(state, low, target, phis, scale_T):
+        return low
+    for _ in range(30):
+        middle = (low + high) / 2
+        if meets(state, middle, target, phis, scale_T):
+            high = middle
+        else:
+            low = middle
+    return high

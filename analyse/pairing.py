@@ -1,0 +1,210 @@
+"""From readings to pairs of field and resistivity, in an order that the data alone decide.
+
+A voltage waits until the field, the other voltage and the current have passed its moment; then
+the earliest one is released. So the pairs and their order do not depend on which message arrived
+first.
+"""
+
+from __future__ import annotations
+
+import math
+from collections import deque
+from collections.abc import Iterator
+from dataclasses import dataclass
+
+from analyse.channel import Channel, Sample
+from analyse.field_track import FieldTrack
+from analyse.hall_bar import HallBar
+from analyse.lockin import LockinFilter
+from analyse.setup import Setup
+from analyse.spikes import SpikeGate
+
+CHANNELS = ("field", "longitudinal", "hall", "current")
+
+
+@dataclass(frozen=True, slots=True)
+class Pair:
+    """One voltage with its field, or the reason why it can't be used.
+
+    ``kind``: ok, overload, lost, wild, or no_field. ``rho_ohm``: resistivity, ``field_T``: the
+    field that it stands for, ``rate_T_per_s``: how fast the field moved, ``quadrature_ohm``: what
+    stands at right angles to the signal, where that is read, ``stages``: the filter before it.
+    """
+
+    role: str
+    time_s: float
+    kind: str
+    field_T: float = math.nan
+    rate_T_per_s: float = 0.0
+    rho_ohm: float = math.nan
+    current_A: float = math.nan
+    quadrature_ohm: float | None = None
+    stages: LockinFilter | None = None
+
+
+class Pairing:
+    """Takes readings of all channels of one Hall bar, gives pairs."""
+
+    def __init__(self, bar: HallBar, setup: Setup) -> None:
+        self._bar = bar
+        self._setup = setup
+        self._gap_s = setup.field.longest_gap_s
+        signals = {"longitudinal": setup.longitudinal, "hall": setup.hall}
+        self._voltages = {
+            role: Channel(signal, FieldTrack(signal.filter, self._gap_s))
+            for role, signal in signals.items()
+        }
+        self._tracks = [one.track for one in self._voltages.values() if one.track is not None]
+        self._knots: deque[tuple[float, float]] = deque()
+        excitation = setup.excitation
+        measured = excitation.measured if excitation is not None else None
+        self._current = Channel(measured) if measured is not None else None
+        self._field_passed_s = -math.inf
+        self._gate: SpikeGate[tuple[float, float]] = SpikeGate()
+        self.wild_field_readings = 0
+
+    def push(
+        self, channel: str, time_s: float, x: float | None, y: float | None, status: str
+    ) -> Iterator[Pair]:
+        """Take one reading; yields the pairs that it completes."""
+        if channel == "field":
+            self._push_field(time_s - self._setup.field.delay_s, x, status)
+        elif channel in self._voltages:
+            self._voltages[channel].push(time_s, x, y, status)
+        elif channel == "current":
+            if self._current is None:
+                raise ValueError("the excitation is not a measured one: no channel 'current'")
+            self._current.push(time_s, x, y, status)
+        else:
+            raise ValueError(f"channel {channel!r} is not one of {', '.join(CHANNELS)}")
+        return self._released()
+
+    def set_filter(self, role: str, stages: LockinFilter | None) -> None:
+        """From the next reading of a role on, another filter stands before it.
+
+        The field behind it is followed from the role's last reading on, and its readings are used
+        once it has settled. Which field readings are here already does not matter.
+        """
+        channel = self._voltages[role]
+        track = FieldTrack(stages, self._gap_s)
+        for time_s, field_T in self._knots:
+            if time_s >= channel.passed_s:
+                track.append(time_s, field_T)
+        channel.settle()
+        channel.track = track
+        self._tracks.append(track)
+
+    def end(self, channel: str) -> Iterator[Pair]:
+        """No more readings come from a channel; yields what that completes."""
+        if channel == "field":
+            self._add_knot(self._gate.flush())
+            self._field_passed_s = math.inf
+        elif channel == "current":
+            if self._current is not None:
+                self._current.end()
+        else:
+            self._voltages[channel].end()
+        return self._released()
+
+    def _push_field(self, time_s: float, field_T: float | None, status: str) -> None:
+        if status == "ok" and field_T is not None and math.isfinite(field_T):
+            self._add_knot(self._gate.push(field_T, (time_s, field_T)))
+        else:
+            self._add_knot(self._gate.flush())
+            self._field_passed_s = max(self._field_passed_s, time_s)
+
+    def _add_knot(self, judged: tuple[tuple[float, float], bool] | None) -> None:
+        if judged is None:
+            return
+        (time_s, field_T), wild = judged
+        self._field_passed_s = max(self._field_passed_s, time_s)
+        if wild:
+            self.wild_field_readings += 1
+            return
+        self._knots.append((time_s, field_T))
+        for track in self._tracks:
+            track.append(time_s, field_T)
+
+    def _released(self) -> Iterator[Pair]:
+        while True:
+            role = self._next_role()
+            if role is None:
+                return
+            channel = self._voltages[role]
+            sample = channel.queue[0]
+            if sample.kind == "ok" and not self._ready(sample.time_s):
+                return
+            channel.queue.popleft()
+            pair = self._pair(role, sample)
+            channel.remember(sample)
+            yield pair
+
+    def _next_role(self) -> str | None:
+        heads = [(c.queue[0].time_s, role) for role, c in self._voltages.items() if c.queue]
+        if not heads:
+            return None
+        time_s, role = min(heads)
+        for channel in self._voltages.values():
+            if not channel.queue and channel.passed_s < time_s:
+                return None
+        return role
+
+    def _ready(self, time_s: float) -> bool:
+        if self._current is not None and self._current.passed_s < time_s:
+            return False
+        if self._field_passed_s < time_s:
+            return False
+        last = self._knots[-1][0] if self._knots else -math.inf
+        gap = self._gap_s
+        if last >= time_s or math.isinf(self._field_passed_s):
+            return True
+        return gap is not None and self._field_passed_s - last > gap
+
+    def _pair(self, role: str, sample: Sample) -> Pair:
+        if sample.kind not in ("ok", "wild"):
+            return Pair(role, sample.time_s, sample.kind)
+        assert sample.track is not None
+        known = sample.track.at(sample.time_s)
+        current = self._current_at(role, sample)
+        self._forget(sample.time_s)
+        if known is None or current is None:
+            return Pair(role, sample.time_s, "no_field" if known is None else "lost")
+        field_T, rate = known
+        per_rho = current * (self._bar.squares if role == "longitudinal" else 1.0)
+        quadrature = None if sample.quadrature is None else sample.quadrature / per_rho
+        return Pair(
+            role, sample.time_s, sample.kind, field_T, rate, sample.value / per_rho, current,
+            quadrature, sample.track.stages,
+        )
+
+    def _forget(self, time_s: float) -> None:
+        """Drop field readings from before everything that can still come."""
+        for track in self._tracks:
+            track.forget_before(time_s)
+        passed = min(time_s, *(channel.passed_s for channel in self._voltages.values()))
+        while len(self._knots) > 1 and self._knots[0][0] < passed:
+            self._knots.popleft()
+
+    def _current_at(self, role: str, sample: Sample) -> float | None:
+        if self._voltages[role].signal.resistance:
+            return 1.0
+        excitation = self._setup.excitation
+        assert excitation is not None
+        if excitation.current_A is not None:
+            return excitation.current_A
+        if self._current is not None:
+            value = self._current.interpolated(sample.time_s)
+            while self._current.queue and self._current.queue[0].time_s <= sample.time_s:
+                self._current.remember(self._current.queue.popleft())
+            if value is None or value == 0.0:
+                return None
+            return value / excitation.shunt_ohm if excitation.shunt_ohm is not None else value
+        other = "hall" if role == "longitudinal" else "longitudinal"
+        beside = self._voltages[other].interpolated(sample.time_s)
+        if beside is None:
+            return None
+        v_xx, v_xy = (sample.value, beside) if role == "longitudinal" else (beside, sample.value)
+        assert excitation.source_V is not None and excitation.series_ohm is not None
+        squares = excitation.source_to_drain_squares or self._bar.squares
+        drop = v_xx * squares / self._bar.squares + abs(v_xy)
+        return (excitation.source_V - drop) / (excitation.series_ohm + excitation.contact_ohm)

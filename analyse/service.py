@@ -1,0 +1,198 @@
+"""The estimator as a process of a run: readings from the bus in, estimates and events out.
+
+    python -m analyse.service RUN_FOLDER [--parent PID]
+
+Started anew, it takes all readings from the first on, computes what it had computed before, finds
+those rows in its journals already, and goes on after them: its output depends on the readers'
+journals alone. A row that comes out otherwise than it was written is said loudly, never mended.
+"""
+
+from __future__ import annotations
+
+import argparse
+import faulthandler
+import os
+import sys
+from collections.abc import Callable, Iterator, Sequence
+from typing import Any
+
+from acquire.bus import Inbox, Publisher, Subscriber
+from acquire.cells import RowCodec
+from acquire.clock import RunClock
+from acquire.errors import JournalError, RampsideError, RunError
+from acquire.journal import Journal
+from acquire.readings import Reading, reading_table, stream_of
+from acquire.run_folder import LiveRun, RunFolder, open_run
+from acquire.stop import Stop
+from acquire.tables import Row, Table
+from analyse.estimate_table import ESTIMATES, EVENTS
+from analyse.row_maker import DETERMINED, RowMaker
+
+LONGEST_WAIT_S = 0.1
+REQUEST_KINDS = ("note", "process", "run")
+KIND, ID = 2, 7
+"""Columns of the events table."""
+
+
+class Output:
+    """One table of the estimator: passes over the rows that its journal has already.
+
+    ``determined`` tells which of the written rows follow from the readings.
+    """
+
+    def __init__(
+        self,
+        written: Iterator[Row],
+        publish: Callable[[Row], None],
+        table: Table,
+        determined: Callable[[Row], bool] = lambda row: True,
+    ) -> None:
+        self._written = (row for row in written if determined(row))
+        self._publish = publish
+        self._codec = RowCodec(table)
+        self._repeating = True
+        self.differing = 0
+
+    def put(self, cells: Row) -> None:
+        """Write a row, or check that it stands as it is."""
+        if self._repeating:
+            known = next(self._written, None)
+            if known is not None:
+                if known[1:] != self._codec.canonical(cells):
+                    self.differing += 1
+                return
+            self._repeating = False
+        self._publish(cells)
+
+
+class Service:
+    """Decides what the estimator does with each message; knows no sockets.
+
+    ``publish_estimate`` and ``publish_event`` take the cells after seq.
+    """
+
+    def __init__(
+        self,
+        maker: RowMaker,
+        estimates: Output,
+        events: Output,
+        publish_event: Callable[[Row], None],
+        now_s: Callable[[], float],
+        written_events: Sequence[Row] = (),
+    ) -> None:
+        self._maker = maker
+        self._outputs = {"estimates": estimates, "events": events}
+        self._publish_event = publish_event
+        self._now_s = now_s
+        self._next = dict.fromkeys(maker.readers, 0)
+        self._seen_ids = {row[ID] for row in written_events if row[ID] is not None}
+        self._estimates = 0
+
+    @property
+    def next_seq(self) -> dict[str, int]:
+        """By reader: the number of the next row wanted."""
+        return dict(self._next)
+
+    def take(self, reading: Reading) -> None:
+        """Take a reader's row; one that was taken already is passed over."""
+        if reading.seq != self._next.get(reading.reader):
+            return
+        self._next[reading.reader] += 1
+        for record in self._maker.take(reading):
+            self._outputs[record.stream].put(record.cells)
+            self._estimates += record.stream == "estimates"
+
+    def request(self, message: dict[str, Any], catch_up: Callable[[], None]) -> dict[str, Any]:
+        """Answer a request; ``catch_up`` takes everything that the readers' journals have."""
+        kind, code, text = (message.get(key) for key in ("kind", "code", "text"))
+        if kind not in REQUEST_KINDS or not isinstance(code, str):
+            return {"ok": False, "error": f"unknown request {kind!r}"}
+        if kind == "run" and code == "finish":
+            catch_up()
+            differing = sum(output.differing for output in self._outputs.values())
+            return {"ok": True, "estimates": self._estimates, "differing": differing}
+        key = str(message.get("id") or "") or None
+        if key is None or key not in self._seen_ids:
+            shown = str(text or "")[:500]
+            self._publish_event((self._now_s(), kind, None, code, shown, self._estimates, key))
+            self._seen_ids.add(key)
+        return {"ok": True, "estimates": self._estimates}
+
+
+def run_service(run: RunFolder, live: LiveRun, stop: Stop, parent: int | None) -> int:
+    """The loop around :class:`Service`. Returns the exit status."""
+    tables = {name: _table_of(run, name) for name in RowMaker(run.rig).readers}
+    streams = {stream_of(name): name for name in tables}
+    clock = RunClock(live.monotonic_start)
+    estimates_path, events_path = run.journal_path(ESTIMATES), run.journal_path(EVENTS)
+    with (
+        Journal(run.journal_path(ESTIMATES), ESTIMATES) as estimate_journal,
+        Journal(run.journal_path(EVENTS), EVENTS) as event_journal,
+        Publisher(run.run_id, ESTIMATES, estimate_journal, live.endpoints["estimates"]) as numbers,
+        Publisher(run.run_id, EVENTS, event_journal, live.endpoints["events"]) as events,
+        Inbox(live.requests) as inbox,
+    ):
+
+        def publish_estimate(cells: Row) -> None:
+            numbers.publish(*cells)
+
+        def publish_event(cells: Row) -> None:
+            events.publish(*cells)
+
+        service = Service(
+            RowMaker(run.rig),
+            Output(run.rows(ESTIMATES), publish_estimate, ESTIMATES),
+            Output(run.rows(EVENTS), publish_event, EVENTS, lambda row: row[KIND] in DETERMINED),
+            publish_event,
+            clock.now_s,
+            list(run.rows(EVENTS)),
+        )
+
+        def catch_up() -> None:
+            for name, first in service.next_seq.items():
+                for row in run.rows(tables[name], first):
+                    service.take(Reading.from_row(name, row))
+
+        catch_up()
+        print("ready", flush=True)
+        with Subscriber(
+            run.run_id,
+            {stream: live.endpoints[stream] for stream in streams},
+            {stream: tables[name] for stream, name in streams.items()},
+            {stream: service.next_seq[name] for stream, name in streams.items()},
+        ) as subscriber:
+            while not stop.requested and (parent is None or os.getppid() == parent):
+                for stream, row in subscriber.receive(LONGEST_WAIT_S):
+                    service.take(Reading.from_row(streams[stream], row))
+                while (asked := inbox.receive(0.0)) is not None:
+                    message, reply = asked
+                    reply(service.request(message, catch_up))
+    return 0
+
+
+def _table_of(run: RunFolder, name: str) -> Table:
+    return reading_table(name, run.rig.reader(name))
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Entry point; 0 ended in order, 1 failed with one sentence on stderr."""
+    parser = argparse.ArgumentParser(prog="python -m analyse.service", description=__doc__)
+    parser.add_argument("run_folder")
+    parser.add_argument("--parent", type=int, default=None, help="end when this process has ended")
+    options = parser.parse_args(arguments)
+    faulthandler.enable()
+    stop = Stop()
+    stop.install()
+    try:
+        run = open_run(options.run_folder)
+        live = run.live()
+        if live is None:
+            raise RunError(f"{run.path}: is not live; use `rampside replay` on a finished run.")
+        return run_service(run, live, stop, options.parent)
+    except (RampsideError, JournalError) as error:
+        print(f"estimator: {error}", file=sys.stderr, flush=True)
+        return 1
+
+
+if __name__ == "__main__":
+    sys.exit(main())

@@ -1,0 +1,135 @@
+"""Segments of both roles, the window over them, and what is pooled inside it."""
+
+from __future__ import annotations
+
+import math
+
+from analyse.line_fit import fit_columns
+from analyse.lockin import LockinFilter
+from analyse.pairing import Pair
+from analyse.segments import Pool, Segments
+from analyse.setup import Setup
+from analyse.transport_fit import noise_excess
+from analyse.window import HALL, LONGITUDINAL, Bounds, agrees, find_bounds
+
+COLUMNS_OF = {"hall": HALL, "longitudinal": LONGITUDINAL}
+REACH = 0.5
+"""Zero field is in reach when the window begins below this share of its upper end."""
+
+
+class _Inflation:
+    """Variance inflation of one role's readings by their spacing, remembered by spacing."""
+
+    def __init__(self) -> None:
+        self.stages: LockinFilter | None = None
+        self._known: dict[str, float] = {}
+        self._last_s: float | None = None
+
+    def next(self, time_s: float, stages: LockinFilter | None) -> float:
+        """Kappa for a reading at a time behind a filter."""
+        if stages != self.stages:
+            self.stages, self._known = stages, {}
+        last, self._last_s = self._last_s, time_s
+        if stages is None or last is None or time_s <= last:
+            return 1.0
+        key = f"{time_s - last:.2g}"
+        if key not in self._known:
+            self._known[key] = stages.inflation(time_s - last)
+        return self._known[key]
+
+
+class WindowedFit:
+    """Takes pairs; gives the pools inside the window."""
+
+    def __init__(self, setup: Setup, scale_T: float) -> None:
+        self._setup = setup
+        self._scale_T = scale_T
+        self._segments = {role: Segments(scale_T) for role in COLUMNS_OF}
+        self._pools = {role: Pool(len(columns)) for role, columns in COLUMNS_OF.items()}
+        self._inflation = {role: _Inflation() for role in COLUMNS_OF}
+        given = setup.window
+        high = given.high_T if given.high_T is not None else math.inf
+        self.bounds = Bounds(given.low_T or 0.0, high)
+        self.excess = (1.0, 1.0)
+        self._searched = 0
+        self._time_s = [math.inf, -math.inf]
+
+    def add(self, sweep: int, pair: Pair) -> None:
+        """Take one usable pair."""
+        self._time_s = [min(self._time_s[0], pair.time_s), max(self._time_s[1], pair.time_s)]
+        kappa = self._inflation[pair.role].next(pair.time_s, pair.stages)
+        if self._segments[pair.role].add(sweep, pair.time_s, pair.field_T, pair.rho_ohm, kappa):
+            self._closed(pair.role)
+
+    def pools(self) -> tuple[Pool, Pool]:
+        """(hall, longitudinal): all in the window, the growing segments included."""
+        return self._with_active("hall"), self._with_active("longitudinal")
+
+    @property
+    def window_T(self) -> tuple[float, float] | None:
+        """Magnitudes of field between which readings are used; None before there are any."""
+        pools = self.pools()
+        if not all(pool.count for pool in pools):
+            return None
+        return (max(p.low_T for p in pools), min(p.high_T for p in pools))
+
+    @property
+    def zero_in_reach(self) -> bool:
+        """Whether the window comes near enough to zero field for an extrapolation to it."""
+        if self._setup.window.low_T is not None:
+            return True
+        window = self.window_T
+        return window is not None and window[0] <= REACH * window[1]
+
+    @property
+    def seconds_per_effective(self) -> float | None:
+        """Time that one effective reading takes."""
+        stages = self._inflation["hall"].stages
+        pool = self.pools()[0]
+        if pool.count < 4:
+            return None
+        if stages is not None:
+            spacing = (self._time_s[1] - self._time_s[0]) / pool.count
+            return max(stages.integral_time_s, spacing) * max(1.0, self.excess[0])
+        return (self._time_s[1] - self._time_s[0]) / pool.effective
+
+    def noise(self, role: str) -> float:
+        """Standard deviation of one reading about the fit, in ohm."""
+        pools = dict(zip(("hall", "longitudinal"), self.pools()))
+        fit = fit_columns(pools[role], COLUMNS_OF[role])
+        return math.inf if fit is None else math.sqrt(max(fit.s2, 0.0))
+
+    def _with_active(self, role: str) -> Pool:
+        pool, active = self._pools[role], self._segments[role].active
+        if active is None or not self.bounds.holds(active):
+            return pool
+        pool = pool.copy()
+        pool.take(active)
+        return pool
+
+    def _closed(self, role: str) -> None:
+        newest = self._segments[role].closed[-1]
+        total = sum(len(one.closed) for one in self._segments.values())
+        inside = self.bounds.holds(newest)
+        odd = inside and not agrees(newest, self._pools[role], COLUMNS_OF[role], self._scale_T)
+        if odd or total >= self._searched * 1.15 + 1:
+            self._searched = total
+            self._search()
+        elif inside:
+            self._pools[role].take(newest)
+        self.excess = (
+            noise_excess(self._pools["hall"], HALL),
+            noise_excess(self._pools["longitudinal"], LONGITUDINAL),
+        )
+
+    def _search(self) -> None:
+        closed = {role: one.closed for role, one in self._segments.items()}
+        self.bounds = find_bounds(
+            self._setup.window, closed["longitudinal"], closed["hall"], self._scale_T
+        )
+        for role, columns in COLUMNS_OF.items():
+            pool = Pool(len(columns))
+            for segment in closed[role]:
+                if self.bounds.holds(segment):
+                    pool.take(segment)
+            self._pools[role] = pool

@@ -1,0 +1,1 @@
+"""What a person faces: the command line, the page, the report."""
