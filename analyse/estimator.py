@@ -22,6 +22,8 @@ from analyse.transport_fit import TransportFit, fit_transport, fixed_phis
 from analyse.verdict import Facts, what_is_missing
 from analyse.windowed import WindowedFit
 
+PLAIN_SIGNAL, PLAIN_FIELD, ANY_WINDOW = Signal(), FieldSource(), Window()
+
 
 @dataclass
 class _Point:
@@ -56,13 +58,13 @@ class Estimator:
         self,
         bar: HallBar,
         *,
-        longitudinal: Signal = Signal(),
-        hall: Signal = Signal(),
+        longitudinal: Signal = PLAIN_SIGNAL,
+        hall: Signal = PLAIN_SIGNAL,
         excitation: Excitation | None = None,
-        field: FieldSource = FieldSource(),
+        field: FieldSource = PLAIN_FIELD,
         target: Target | None = None,
         ramp: Ramp | None = None,
-        window: Window = Window(),
+        window: Window = ANY_WINDOW,
         expected_carriers: str | None = None,
     ) -> None:
         self.bar = bar
@@ -250,7 +252,7 @@ class Estimator:
             self._quick.density, self._quick.mobility,
         )
         found = [c for watch in self._watch.values() for c in watch.cautions()]
-        return tuple([*found, *fit_cautions(facts, self.setup)])
+        return (*found, *fit_cautions(facts, self.setup))
 
     def _forecast(
         self, fit: TransportFit, density: Number | None, mobility: Number | None, missing: bool
@@ -268,7 +270,7 @@ class Estimator:
         window = self._fit.window_T
         state = State(
             field_T, window[0] if window else 0.0, rate, per_effective, slope.effective,
-            self._fit.noise("hall") / abs(slope.value), self._fit.noise("longitudinal") / rho_0.value,
+            slope.noise / abs(slope.value), rho_0.noise / rho_0.value,
             mobility.value, combined(self._systematic),
         )
         at = field_to_target(state, self.setup.target, self._phis, self._scale_T, end_T)

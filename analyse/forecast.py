@@ -9,9 +9,12 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
+from scipy.constants import e
+
 from analyse.confidence import t_radius
-from analyse.setup import Target
-from analyse.transport_fit import SLOPE_SHARE, Phis
+from analyse.lockin import LockinFilter
+from analyse.setup import Ramp, Setup, Signal, Target
+from analyse.transport_fit import SLOPE_SHARE, Phis, fixed_phis
 
 LINE_BEND_FACTOR = math.sqrt(15.0)
 """Standard error of the bend over that of the slope: [1, u, u|u|] against [1, u], evenly spread
@@ -79,3 +82,50 @@ def field_to_target(
         else:
             low = middle
     return high
+
+
+def expected_field(
+    *,
+    target: Target,
+    ramp: Ramp,
+    stages: LockinFilter | None,
+    spacing_s: float,
+    rho_0_ohm: float,
+    noise_hall_ohm: float,
+    noise_longitudinal_ohm: float,
+    density_per_m2: float,
+    systematic: tuple[float, float, float] = (0.0, 0.0, 0.0),
+) -> float | None:
+    """Before a ramp: magnitude of field at which the answer is expected to reach the target.
+
+    Parameters
+    ----------
+    stages, spacing_s
+        Filter and spacing of the readings.
+    rho_0_ohm
+        Resistivity at zero field.
+    noise_hall_ohm, noise_longitudinal_ohm
+        Standard deviation of one reading of either resistivity.
+    density_per_m2
+        A density to reckon with.
+
+    None if the planned ramp does not get there. Raises ValueError for numbers not positive.
+    """
+    if not (rho_0_ohm > 0 and density_per_m2 > 0 and spacing_s > 0):
+        raise ValueError("rho_0_ohm, density_per_m2 and spacing_s must be positive")
+    scale_T = ramp.largest_T
+    slope = scale_T / (density_per_m2 * e)
+    kappa = stages.inflation(spacing_s) if stages is not None else 1.0
+    start = min(abs(field) for field in ramp.path_T)
+    if min(ramp.path_T) <= 0 <= max(ramp.path_T):
+        start = 0.0
+    state = State(
+        start, start, ramp.rate_T_per_s, spacing_s * kappa, 0.0,
+        noise_hall_ohm * math.sqrt(kappa) / slope,
+        noise_longitudinal_ohm * math.sqrt(kappa) / rho_0_ohm,
+        slope / scale_T / rho_0_ohm, systematic,
+    )
+    phis = fixed_phis(Setup(hall=Signal(stages, resistance=True),
+                            longitudinal=Signal(stages, resistance=True),
+                            target=target, ramp=ramp), scale_T)
+    return field_to_target(state, target, phis, scale_T, scale_T)

@@ -2,7 +2,7 @@
 
 A segment is contiguous in time and short in field, so that the window of the fit can be moved
 afterwards by taking segments in or leaving them out, and so that what happens between segments
-can be compared with what happens inside them. Regressors are 1, u, u^2, u|u| with u = B / scale.
+can be compared with what happens inside them. The regressors are those of :mod:`analyse.basis`.
 """
 
 from __future__ import annotations
@@ -11,20 +11,31 @@ import math
 
 import numpy as np
 
+from analyse.basis import COLUMNS, regressors
 from analyse.square_root import SquareRootInformation
 
-COLUMNS = 4
 MIN_EFFECTIVE = 6.0      # effective readings before a segment may be closed
 MAX_EFFECTIVE = 40.0     # and at which it is closed in any case
 BINS_PER_OCTAVE = 6.0
 MAX_SEGMENTS = 400       # beyond it, neighbours in time are joined
+OWN = 2                  # coefficients of a segment's own straight line
 
 
 class Segment:
     """Readings of one role from a stretch of one sweep."""
 
-    __slots__ = ("sweep", "start_s", "end_s", "low_T", "high_T", "sign", "kappa_sum", "qr",
-                 "first_bin", "mean_T_sum")
+    __slots__ = (
+        "end_s",
+        "first_bin",
+        "high_T",
+        "kappa_sum",
+        "low_T",
+        "mean_T_sum",
+        "qr",
+        "sign",
+        "start_s",
+        "sweep",
+    )
 
     def __init__(self, sweep: int, time_s: float, field_T: float, bin_number: int) -> None:
         self.sweep = sweep
@@ -56,24 +67,30 @@ class Segment:
         """Mean field, signed."""
         return self.mean_T_sum / self.qr.count
 
-    def own_rss(self, parameters: int) -> float:
-        """Residual sum of squares about the segment's own mean (1) or line (2)."""
-        return sum(row[COLUMNS] ** 2 for row in self.qr.rows[parameters:])
+    def own_rss(self) -> float:
+        """Residual sum of squares about the segment's own straight line."""
+        return sum(row[COLUMNS] ** 2 for row in self.qr.rows[OWN:])
+
+    def own_dof(self) -> float:
+        """What :meth:`own_rss` is divided by to give the variance of a reading."""
+        return max(0.0, self.qr.count - OWN * self.kappa)
 
     def mean(self) -> float:
         """Mean resistivity."""
         first = self.qr.rows[0]
         return first[COLUMNS] / first[0]
 
-    def add(self, time_s: float, field_T: float, u: float, rho: float, kappa: float) -> None:
-        """Take one reading."""
+    def add(
+        self, time_s: float, field_T: float, row: tuple[float, ...], rho: float, kappa: float
+    ) -> None:
+        """Take one reading with its row of regressors."""
         size = abs(field_T)
         self.end_s = time_s
         self.low_T = min(self.low_T, size)
         self.high_T = max(self.high_T, size)
         self.kappa_sum += kappa
         self.mean_T_sum += field_T
-        self.qr.update((1.0, u, u * u, u * abs(u)), rho)
+        self.qr.update(row, rho)
 
     def join(self, other: Segment) -> None:
         """Take all of a segment that follows in time."""
@@ -88,7 +105,8 @@ class Segment:
 class Segments:
     """All segments of one role, in the order of time; the last one still grows."""
 
-    def __init__(self, scale_T: float) -> None:
+    def __init__(self, role: str, scale_T: float) -> None:
+        self.role = role
         self.scale_T = scale_T
         self.closed: list[Segment] = []
         self.active: Segment | None = None
@@ -105,7 +123,8 @@ class Segments:
                 self._thin()
         if self.active is None:
             self.active = Segment(sweep, time_s, field_T, bin_number)
-        self.active.add(time_s, field_T, field_T / self.scale_T, rho, kappa)
+        row = regressors(self.role, field_T / self.scale_T)
+        self.active.add(time_s, field_T, row, rho, kappa)
         return closed
 
     def all(self) -> list[Segment]:
@@ -146,13 +165,22 @@ def field_bin(field_T: float) -> int:
 
 
 class Pool:
-    """Several segments taken together."""
+    """Several segments taken together. ``positive`` and ``negative`` count effective readings."""
 
-    __slots__ = ("triangle", "count", "kappa_sum", "own_rss", "own_dof", "groups", "low_T",
-                 "high_T", "_own")
+    __slots__ = (
+        "count",
+        "groups",
+        "high_T",
+        "kappa_sum",
+        "low_T",
+        "negative",
+        "own_dof",
+        "own_rss",
+        "positive",
+        "triangle",
+    )
 
-    def __init__(self, own_parameters: int) -> None:
-        self._own = own_parameters
+    def __init__(self) -> None:
         self.triangle = np.zeros((COLUMNS + 1, COLUMNS + 1))
         self.count = 0
         self.kappa_sum = 0.0
@@ -161,10 +189,12 @@ class Pool:
         self.groups = 0
         self.low_T = math.inf
         self.high_T = 0.0
+        self.positive = 0.0
+        self.negative = 0.0
 
     def copy(self) -> Pool:
         """An independent copy."""
-        new = Pool(self._own)
+        new = Pool()
         for name in Pool.__slots__:
             value = getattr(self, name)
             setattr(new, name, value.copy() if name == "triangle" else value)
@@ -176,11 +206,15 @@ class Pool:
         self.triangle = np.linalg.qr(stacked, mode="r")
         self.count += segment.count
         self.kappa_sum += segment.kappa_sum
-        self.own_rss += segment.own_rss(self._own)
-        self.own_dof += max(0.0, segment.count - self._own * segment.kappa)
+        self.own_rss += segment.own_rss()
+        self.own_dof += segment.own_dof()
         self.groups += 1
         self.low_T = min(self.low_T, segment.low_T)
         self.high_T = max(self.high_T, segment.high_T)
+        if segment.sign > 0:
+            self.positive += segment.effective
+        else:
+            self.negative += segment.effective
 
     @property
     def kappa(self) -> float:
@@ -191,3 +225,8 @@ class Pool:
     def effective(self) -> float:
         """Effective number of readings."""
         return self.count / self.kappa
+
+    @property
+    def both_directions(self) -> bool:
+        """Whether both directions of the field have a fair share of the readings."""
+        return min(self.positive, self.negative) > max(10.0, 0.15 * self.effective)

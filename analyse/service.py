@@ -124,7 +124,6 @@ def run_service(run: RunFolder, live: LiveRun, stop: Stop, parent: int | None) -
     tables = {name: _table_of(run, name) for name in RowMaker(run.rig).readers}
     streams = {stream_of(name): name for name in tables}
     clock = RunClock(live.monotonic_start)
-    estimates_path, events_path = run.journal_path(ESTIMATES), run.journal_path(EVENTS)
     with (
         Journal(run.journal_path(ESTIMATES), ESTIMATES) as estimate_journal,
         Journal(run.journal_path(EVENTS), EVENTS) as event_journal,

@@ -32,7 +32,7 @@ class Solution:
 class SquareRootInformation:
     """Triangle of [X | y] with p regressors; errors are taken as of equal variance."""
 
-    __slots__ = ("p", "rows", "count")
+    __slots__ = ("count", "p", "rows")
 
     def __init__(self, p: int) -> None:
         if p < 1:

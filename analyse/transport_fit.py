@@ -7,26 +7,28 @@ from dataclasses import dataclass
 
 from scipy.stats import f as f_distribution
 
+from analyse.basis import CURVED, HALL_BENT, HALL_LINE, LEVEL, OTHER_PARITY, SLOPING
 from analyse.confidence import best_phi
-from analyse.line_fit import ONE, U, U2, UU, LineFit, fit_columns
+from analyse.line_fit import LineFit, fit_columns, lack_of_fit
 from analyse.segments import Pool
 from analyse.setup import Setup
-from analyse.window import HALL, LONGITUDINAL
 
 SLOPE_SHARE = 0.8
 """Share of the error probability given to the Hall slope; the rest goes to rho_0, which is
 commonly known far better, so that a smaller share costs it little."""
 DEFAULT_EFFECTIVE = 100.0
 LACK_OF_FIT_LEVEL = 1e-5
+BEND_SEEN = 3.5
+"""Standard errors at which the next richer model of the longitudinal resistivity is taken."""
 
 
 @dataclass(frozen=True)
 class Coefficient:
     """A coefficient with all that is said of it, in its own unit.
 
-    ``half_width``: of the confidence sequence; ``bend``: by how much the alternative model moves
-    it, and ``bend_error`` the standard error of that difference; ``spread`` what of the bend the
-    noise does not explain.
+    ``half_width``: of the confidence sequence; ``bend``: by how much the next richer model moves
+    it, and ``bend_error`` the standard error of that difference; ``noise``: standard deviation of
+    an independent reading; ``order``: 0 for the plain model, more where a richer one was needed.
     """
 
     value: float
@@ -35,6 +37,8 @@ class Coefficient:
     bend: float
     bend_error: float
     effective: float
+    noise: float
+    order: int = 0
 
     @property
     def spread(self) -> float:
@@ -87,52 +91,78 @@ def fixed_phis(setup: Setup, scale_T: float) -> Phis:
     )
 
 
-def noise_excess(pool: Pool, columns: tuple[int, ...]) -> float:
-    """Factor by which segments scatter about the common fit more than their own noise explains.
+def hall_columns(pool: Pool) -> tuple[int, ...]:
+    """The Hall line, with the even part where both directions were measured."""
+    return (*HALL_LINE, OTHER_PARITY) if pool.both_directions else HALL_LINE
 
-    1 while that is not significant (F test at a level that many looks do not exhaust).
-    """
-    fit = fit_columns(pool, columns)
-    p = len(columns)
-    between = p * (pool.groups - 1)
-    if fit is None or pool.groups < 4 or pool.own_dof < 8 * pool.kappa or pool.own_rss <= 0:
+
+def longitudinal_columns(pool: Pool) -> tuple[int, ...]:
+    """The plainest model that shows no significant bend, with the odd part likewise."""
+    odd = (OTHER_PARITY,) if pool.both_directions else ()
+    for plain, richer in ((LEVEL, SLOPING), (SLOPING, CURVED)):
+        one, two = fit_columns(pool, plain + odd), fit_columns(pool, richer + odd)
+        if one is None or two is None or not _bend_seen(one, two):
+            return plain + odd
+    return CURVED + odd
+
+
+def _bend_seen(plain: LineFit, richer: LineFit) -> bool:
+    bend, error = _bend(plain, richer, 0)
+    return abs(bend) > BEND_SEEN * error
+
+
+def noise_excess(pool: Pool, columns: tuple[int, ...]) -> float:
+    """Factor in variance by which segments scatter about the fit more than their readings
+    explain; 1 while that is not significant (F test at a level that many looks do not exhaust)."""
+    known = lack_of_fit(pool, columns)
+    if known is None:
         return 1.0
-    within = pool.own_rss / pool.own_dof
-    ratio = max(0.0, fit.rss - pool.own_rss) / (pool.kappa * between) / within
-    limit = f_distribution.isf(LACK_OF_FIT_LEVEL, between, max(1.0, pool.own_dof / pool.kappa))
+    ratio, between, within = known
+    limit = f_distribution.isf(LACK_OF_FIT_LEVEL, between, within)
     return ratio if ratio > limit else 1.0
 
 
 def fit_transport(
     setup: Setup, hall: Pool, along: Pool, phis: Phis, excess: tuple[float, float]
 ) -> TransportFit:
-    """Both fits. ``excess``: noise factors (hall, longitudinal) that widen the intervals."""
+    """Both fits. ``excess``: noise factors (hall, longitudinal); above 1 they widen."""
     alpha = 1.0 - setup.target.confidence
-    line = fit_columns(hall, HALL, excess[0])
+    columns = hall_columns(hall)
+    line = fit_columns(hall, columns, excess[0] > 1)
     slope, offset = None, None
     if line is not None:
-        bent = fit_columns(hall, (ONE, U, UU), excess[0])
-        slope = _coefficient(line, 1, bent, phis.slope, SLOPE_SHARE * alpha)
+        bent = fit_columns(hall, HALL_BENT + columns[2:], excess[0] > 1)
+        slope = _coefficient(line, 1, bent, phis.slope, SLOPE_SHARE * alpha, hall.effective)
         offset = float(line.theta[0])
-    level = fit_columns(along, LONGITUDINAL, excess[1])
+    columns = longitudinal_columns(along)
+    level = fit_columns(along, columns, excess[1] > 1)
     rho_0 = None
     if level is not None:
-        bent = fit_columns(along, (ONE, U2), excess[1])
-        rho_0 = _coefficient(level, 0, bent, phis.rho_0, (1 - SLOPE_SHARE) * alpha)
+        odd = tuple(column for column in columns if column == OTHER_PARITY)
+        order = len(columns) - len(odd) - 1
+        richer = ((SLOPING, CURVED, CURVED)[order]) + odd
+        bent = fit_columns(along, richer, excess[1] > 1)
+        rho_0 = _coefficient(
+            level, 0, bent, phis.rho_0, (1 - SLOPE_SHARE) * alpha, along.effective, order
+        )
     return TransportFit(slope, offset, rho_0, excess[0], excess[1])
 
 
+def _bend(fit: LineFit, bent: LineFit, j: int) -> tuple[float, float]:
+    """The difference that the richer model makes, and its standard error: the plain model is
+    efficient, so the variance of the difference is the difference of the variances."""
+    extra = float(bent.inverse[j, j] - fit.inverse[j, j])
+    return float(bent.theta[j] - fit.theta[j]), math.sqrt(max(0.0, bent.variance * extra))
+
+
 def _coefficient(
-    fit: LineFit, j: int, bent: LineFit | None, phi: float, alpha: float
+    fit: LineFit, j: int, bent: LineFit | None, phi: float, alpha: float, effective: float,
+    order: int = 0,
 ) -> Coefficient:
-    error = fit.standard_error(j)
     bend, bend_error = 0.0, math.inf
     if bent is not None and bent.nu > 2:
-        bend = float(bent.theta[j] - fit.theta[j])
-        # the smaller model is efficient, so the variance of the difference is the difference
-        extra = bent.inverse[j, j] - fit.inverse[j, j]
-        bend_error = math.sqrt(max(0.0, bent.kappa * bent.s2 * extra))
+        bend, bend_error = _bend(fit, bent, j)
     return Coefficient(
-        float(fit.theta[j]), error, fit.half_width(j, phi, alpha), bend, bend_error,
-        fit.count / fit.kappa,
+        float(fit.theta[j]), fit.standard_error(j), fit.half_width(j, phi, alpha),
+        bend, bend_error, effective, math.sqrt(fit.variance), order,
     )

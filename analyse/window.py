@@ -14,19 +14,18 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from analyse.line_fit import ONE, U, LineFit, fit_columns
+from analyse.basis import HALL_LINE, SLOPING, regressors
+from analyse.line_fit import LineFit, fit_columns
 from analyse.segments import Pool, Segment
 from analyse.setup import Window
-
-LONGITUDINAL = (ONE,)
-HALL = (ONE, U)
 
 CORE_EFFECTIVE = 16.0        # effective readings before a segment is compared with them
 SIGNIFICANT = 4.5            # standard errors
 ROUGH = 3.0                  # times the variance of the others
-TOLERANCE = {LONGITUDINAL: 0.03, HALL: 0.01}
+TOLERANCE = {"longitudinal": 0.03, "hall": 0.01}
 """Departures smaller than this share of rho_0, or of the Hall resistivity, do not end the window:
 what they do to the numbers is what the model part of the uncertainty is for."""
+MODEL = {"longitudinal": SLOPING, "hall": HALL_LINE}
 
 
 @dataclass(frozen=True)
@@ -41,36 +40,33 @@ class Bounds:
         return segment.low_T >= self.low_T and segment.high_T <= self.high_T
 
 
-def agrees(segment: Segment, pool: Pool, columns: tuple[int, ...], scale_T: float) -> bool:
+def agrees(segment: Segment, pool: Pool, role: str, scale_T: float) -> bool:
     """Whether a segment agrees with the fit to a pool. True while that can't be told."""
+    columns = MODEL[role]
     fit = fit_columns(pool, columns)
     if fit is None or fit.nu < 4:
         return True
     u = segment.mean_field_T / scale_T
-    row = np.array([1.0, u][: len(columns)])
+    row = np.array(regressors(role, u))[list(columns)]
     predicted = float(row @ fit.theta)
-    size = _size(fit, columns, u)
-    variance = fit.kappa * fit.s2 * (1.0 / segment.count + float(row @ fit.inverse @ row))
+    limit = TOLERANCE[role] * _size(fit, role, u)
+    variance = fit.variance * (1.0 / segment.effective + float(row @ fit.inverse @ row) )
     departure = abs(segment.mean() - predicted)
-    limit = TOLERANCE[columns] * size
     if departure > limit and departure > SIGNIFICANT * math.sqrt(variance):
         return False
-    dof = segment.count - len(columns) * segment.kappa
-    if dof > 2 * segment.kappa:
-        own = segment.own_rss(len(columns)) / dof
+    if segment.own_dof() > 2 * segment.kappa:
+        own = segment.own_rss() / segment.own_dof()
         if own > ROUGH * fit.s2 and math.sqrt(own - fit.s2) > limit:
             return False
     return True
 
 
-def _size(fit: LineFit, columns: tuple[int, ...], u: float) -> float:
-    if columns == LONGITUDINAL:
-        return abs(float(fit.theta[0]))
-    return abs(float(fit.theta[1]) * u)
+def _size(fit: LineFit, role: str, u: float) -> float:
+    return abs(float(fit.theta[0])) if role == "longitudinal" else abs(float(fit.theta[1]) * u)
 
 
 def homogeneous_run(
-    segments: list[Segment], columns: tuple[int, ...], scale_T: float
+    segments: list[Segment], role: str, scale_T: float
 ) -> Bounds:
     """The window that one role's segments (any order) allow."""
     ordered = sorted(segments, key=lambda one: one.low_T)
@@ -80,7 +76,7 @@ def homogeneous_run(
     for start in (0, 1, 2, 3, 5, 8, 12, 17):
         if start and start >= len(ordered) - 2:
             break
-        stop, information = _grow(ordered, start, columns, scale_T)
+        stop, information = _grow(ordered, start, role, scale_T)
         low = 0.0 if start == 0 else ordered[start].low_T
         high = math.inf if stop == len(ordered) else ordered[stop].low_T
         if information > 1.5 * best_information:
@@ -91,21 +87,21 @@ def homogeneous_run(
 
 
 def _grow(
-    ordered: list[Segment], start: int, columns: tuple[int, ...], scale_T: float
+    ordered: list[Segment], start: int, role: str, scale_T: float
 ) -> tuple[int, float]:
-    pool = Pool(len(columns))
+    pool = Pool()
     for index in range(start, len(ordered)):
         segment = ordered[index]
         ready = pool.effective >= CORE_EFFECTIVE and pool.groups >= 2
-        if ready and not agrees(segment, pool, columns, scale_T):
-            return index, _information(pool, columns)
+        if ready and not agrees(segment, pool, role, scale_T):
+            return index, _information(pool, role)
         pool.take(segment)
-    return len(ordered), _information(pool, columns)
+    return len(ordered), _information(pool, role)
 
 
-def _information(pool: Pool, columns: tuple[int, ...]) -> float:
-    fit = fit_columns(pool, columns)
-    return 0.0 if fit is None else fit.z2(len(columns) - 1)
+def _information(pool: Pool, role: str) -> float:
+    fit = fit_columns(pool, MODEL[role])
+    return 0.0 if fit is None else fit.z2(1)
 
 
 def find_bounds(
@@ -114,8 +110,8 @@ def find_bounds(
     """The window for both roles: what was given, and for the rest what both allow."""
     if given.low_T is not None and given.high_T is not None:
         return Bounds(given.low_T, given.high_T)
-    one = homogeneous_run(longitudinal, LONGITUDINAL, scale_T)
-    two = homogeneous_run(hall, HALL, scale_T)
+    one = homogeneous_run(longitudinal, "longitudinal", scale_T)
+    two = homogeneous_run(hall, "hall", scale_T)
     low = max(one.low_T, two.low_T) if given.low_T is None else given.low_T
     high = min(one.high_T, two.high_T) if given.high_T is None else given.high_T
     return Bounds(low, max(high, low))

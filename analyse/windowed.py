@@ -4,15 +4,14 @@ from __future__ import annotations
 
 import math
 
-from analyse.line_fit import fit_columns
 from analyse.lockin import LockinFilter
 from analyse.pairing import Pair
 from analyse.segments import Pool, Segments
 from analyse.setup import Setup
-from analyse.transport_fit import noise_excess
-from analyse.window import HALL, LONGITUDINAL, Bounds, agrees, find_bounds
+from analyse.transport_fit import hall_columns, longitudinal_columns, noise_excess
+from analyse.window import Bounds, agrees, find_bounds
 
-COLUMNS_OF = {"hall": HALL, "longitudinal": LONGITUDINAL}
+ROLES = ("hall", "longitudinal")
 REACH = 0.5
 """Zero field is in reach when the window begins below this share of its upper end."""
 
@@ -44,9 +43,9 @@ class WindowedFit:
     def __init__(self, setup: Setup, scale_T: float) -> None:
         self._setup = setup
         self._scale_T = scale_T
-        self._segments = {role: Segments(scale_T) for role in COLUMNS_OF}
-        self._pools = {role: Pool(len(columns)) for role, columns in COLUMNS_OF.items()}
-        self._inflation = {role: _Inflation() for role in COLUMNS_OF}
+        self._segments = {role: Segments(role, scale_T) for role in ROLES}
+        self._pools = {role: Pool() for role in ROLES}
+        self._inflation = {role: _Inflation() for role in ROLES}
         given = setup.window
         high = given.high_T if given.high_T is not None else math.inf
         self.bounds = Bounds(given.low_T or 0.0, high)
@@ -90,14 +89,8 @@ class WindowedFit:
             return None
         if stages is not None:
             spacing = (self._time_s[1] - self._time_s[0]) / pool.count
-            return max(stages.integral_time_s, spacing) * max(1.0, self.excess[0])
+            return max(stages.integral_time_s, spacing)
         return (self._time_s[1] - self._time_s[0]) / pool.effective
-
-    def noise(self, role: str) -> float:
-        """Standard deviation of one reading about the fit, in ohm."""
-        pools = dict(zip(("hall", "longitudinal"), self.pools()))
-        fit = fit_columns(pools[role], COLUMNS_OF[role])
-        return math.inf if fit is None else math.sqrt(max(fit.s2, 0.0))
 
     def _with_active(self, role: str) -> Pool:
         pool, active = self._pools[role], self._segments[role].active
@@ -111,15 +104,16 @@ class WindowedFit:
         newest = self._segments[role].closed[-1]
         total = sum(len(one.closed) for one in self._segments.values())
         inside = self.bounds.holds(newest)
-        odd = inside and not agrees(newest, self._pools[role], COLUMNS_OF[role], self._scale_T)
+        odd = inside and not agrees(newest, self._pools[role], role, self._scale_T)
         if odd or total >= self._searched * 1.15 + 1:
             self._searched = total
             self._search()
         elif inside:
             self._pools[role].take(newest)
+        hall, along = (self._pools[each] for each in ROLES)
         self.excess = (
-            noise_excess(self._pools["hall"], HALL),
-            noise_excess(self._pools["longitudinal"], LONGITUDINAL),
+            noise_excess(hall, hall_columns(hall)),
+            noise_excess(along, longitudinal_columns(along)),
         )
 
     def _search(self) -> None:
@@ -127,8 +121,8 @@ class WindowedFit:
         self.bounds = find_bounds(
             self._setup.window, closed["longitudinal"], closed["hall"], self._scale_T
         )
-        for role, columns in COLUMNS_OF.items():
-            pool = Pool(len(columns))
+        for role in ROLES:
+            pool = Pool()
             for segment in closed[role]:
                 if self.bounds.holds(segment):
                     pool.take(segment)
