@@ -1,0 +1,298 @@
+"""One instrument behind VISA: open it, ask it, close it. The only file that imports pyvisa.
+
+Three rules stand here, each bought with wrong numbers or a hanging program elsewhere:
+
+- An exchange that failed poisons the session: it is closed at once and never used again, because
+  a late answer, or the second half of one, would be taken for the answer to the next question.
+- "Opened" means that the instrument has said who it is; a session by itself proves nothing.
+- Nothing waits longer than ``timeout_ms`` (opening: :data:`OPEN_TIMEOUT_MS`), however slowly
+  the bytes drip.
+
+Whatever goes wrong below comes out as one of the errors of :mod:`acquire.errors`. Not for several
+threads. Tried on TCP sockets and serial lines; USB and GPIB (``_read_message``) on a stand-in.
+"""
+
+from __future__ import annotations
+
+import gc
+import re
+import socket
+import time
+import warnings
+from collections import Counter
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager, suppress
+from typing import Any
+
+import pyvisa
+from pyvisa.constants import BufferOperation, Parity, StatusCode, StopBits
+from pyvisa.resources import MessageBasedResource, SerialInstrument, TCPIPSocket
+
+from acquire.config.reader import ReaderSection, SerialLine
+from acquire.errors import BadReply, ConnectError, InstrumentError, ReplyTimeout, SessionLost
+from acquire.reply import escaped, fits
+from acquire.socket_line import (
+    connection_problem,
+    is_readable,
+    is_writable,
+    socket_below,
+    waiting_bytes,
+)
+
+OPEN_TIMEOUT_MS = 2000  # a second try at reaching the host comes after 1 s on TCP
+LONGEST_REPLY = 16_384  # bytes; far above 64 numbers, far below what hurts
+LONGEST_QUESTION = 4096  # bytes; pyvisa-py would wait for ever between two pieces of a longer one
+_SLICE_MS = 100  # how finely a wait on a line that can't be watched is cut
+_GULP = 64  # bytes read at once there; many more would take pyvisa-py longer than a slice
+
+_managers: Counter[str] = Counter()  # pyvisa has one manager a library: the last user closes it
+
+
+class Instrument:
+    """What a reader's section describes. After any error it is closed; open it again to go on.
+
+    ``last_reply`` has the bytes that the latest question brought, terminator included, also
+    when they were no complete reply.
+    """
+
+    def __init__(self, section: ReaderSection, now: Callable[[], float] = time.monotonic) -> None:
+        self.section = section
+        self.last_reply = b""
+        self._now = now
+        self._resource: Any = None
+        self._socket: socket.socket | None = None
+        self._end = section.read_termination.encode("latin-1", "replace")
+        self._timeout_s = section.timeout_ms / 1000
+
+    @property
+    def is_open(self) -> bool:
+        """Whether the next question can be asked."""
+        return self._resource is not None
+
+    def open(self, known_identity: str | None = None) -> str:
+        """Open the session, ask who is there and return the answer.
+
+        Raises ConnectError if nobody answers, if the answer does not match the configured
+        pattern, or if it is not ``known_identity``, where one is given.
+        """
+        self.close()
+        self.last_reply = b""
+        self._connect()
+        try:
+            identity = self.ask(self.section.identity.query)
+        except InstrumentError as error:
+            raise ConnectError(f"{self.section.resource}: {error}") from error
+        problem = self._stranger(identity, known_identity)
+        if problem is not None:
+            self.close()
+            raise ConnectError(f"{self.section.resource}: {problem}")
+        return identity
+
+    def ask(self, query: str) -> str:
+        """Send one question and return its answer without the terminator.
+
+        Raises ReplyTimeout, BadReply or SessionLost, and is closed then.
+        """
+        if self._resource is None:
+            raise SessionLost(f"{query!r} can't be asked: the session is not open")
+        self.last_reply = b""
+        try:
+            with self._translated(query):
+                self._expect_silence()
+                self._write(query)
+                self.last_reply = self._read(query)
+                return self._text(query, self.last_reply)
+        except BaseException:
+            self.close()
+            raise
+
+    def close(self) -> None:
+        """Close the session. Never raises; closing twice is no mistake."""
+        resource, self._resource, self._socket = self._resource, None, None
+        if resource is None:
+            return
+        with suppress(Exception):  # what is broken can't be closed any better
+            resource.close()
+        library = self.section.visa_library
+        _managers[library] -= 1
+        if _managers[library] <= 0:
+            with suppress(Exception):
+                pyvisa.ResourceManager(library).close()
+
+    def _connect(self) -> None:
+        reason = self._opened()
+        if reason is None and self._socket is not None:
+            reason = connection_problem(self._socket)
+        if reason is not None:
+            self.close()
+            hint = "is the instrument on and its address right?"
+            raise ConnectError(f"{self.section.resource}: can't be opened ({reason}); {hint}")
+
+    def _opened(self) -> str | None:
+        """Open and set up; what went wrong, or None. The library forgets to close its socket
+        when it can't connect: the error and all that hangs on it is dropped here."""
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore", ResourceWarning)
+            try:
+                self._resource = _open_resource(self.section)
+                self._set_up(self._resource)
+                return None
+            except Exception as error:  # noqa: BLE001 - whatever a backend raises, it did not open
+                reason = _reason(error)
+            gc.collect()
+        return reason
+
+    def _set_up(self, resource: Any) -> None:
+        if not isinstance(resource, MessageBasedResource):
+            raise TypeError("this kind of resource can't be asked questions")
+        self._socket = socket_below(resource)
+        watched = self._socket is not None or not _is_stream(resource)
+        resource.timeout = self.section.timeout_ms if watched else _SLICE_MS
+        resource.read_termination = self.section.read_termination
+        if isinstance(resource, SerialInstrument):
+            if self.section.serial is not None:
+                _set_serial(resource, self.section.serial)
+            resource.flush(BufferOperation.discard_read_buffer)
+        if self._socket is not None:
+            self._socket.settimeout(self._timeout_s)  # a full line would block a write for ever
+
+    def _stranger(self, identity: str, known: str | None) -> str | None:
+        asked, pattern = self.section.identity.query, self.section.identity.pattern
+        who = f"{asked!r} was answered by {escaped(identity)!r}"
+        if not fits(identity) or identity.strip() in ("", asked.strip()):
+            return f"{who}, which proves nothing; mend identity.query, or switch the echo off"
+        if not re.search(pattern, identity):
+            return f"{who}, which does not match {pattern!r}; is it the right instrument?"
+        if known is not None and identity != known:
+            return f"{who}, but the run began with {escaped(known)!r}; put that one back"
+        return None
+
+    def _expect_silence(self) -> None:
+        """Bytes that wait before a question is asked answer an earlier one."""
+        if self._socket is not None:
+            waiting = len(waiting_bytes(self._socket)) if is_readable(self._socket, 0.0) else 0
+        elif isinstance(self._resource, SerialInstrument):
+            waiting = self._resource.bytes_in_buffer
+        else:
+            return
+        if waiting:
+            self.last_reply = self._resource.read_bytes(min(waiting, _GULP), break_on_termchar=True)
+            stray = escaped(self.last_reply)
+            raise BadReply(f"{stray!r} came without a question; does something else use the line?")
+
+    def _write(self, query: str) -> None:
+        data = (query + self.section.write_termination).encode(self.section.encoding)
+        if len(data) > LONGEST_QUESTION:
+            raise InstrumentError(f"{escaped(query)!r} is too long for a question")
+        if self._socket is not None and not is_writable(self._socket, self._timeout_s):
+            raise SessionLost(f"{query!r} can't be sent: the line is blocked")
+        self._resource.write_raw(data)
+
+    def _read(self, query: str) -> bytes:
+        if not _is_stream(self._resource):
+            return self._read_message()
+        deadline = self._now() + self._timeout_s
+        while True:
+            self.last_reply += self._read_some(deadline)
+            if self.last_reply.endswith(self._end[-1:]):
+                return self.last_reply
+            if len(self.last_reply) > LONGEST_REPLY:
+                raise BadReply(f"{query!r}: the reply does not end within {LONGEST_REPLY} bytes")
+            if self._now() >= deadline:
+                raise ReplyTimeout(self._silence(query))
+
+    def _read_some(self, deadline: float) -> bytes:
+        """What is there, up to a terminator; nothing if nothing comes in time or in a slice."""
+        if self._socket is None:
+            return self._read_slice()
+        if not is_readable(self._socket, max(deadline - self._now(), 0.0)):
+            return b""
+        line, end, _ = waiting_bytes(self._socket).partition(self._end[-1:])
+        # What is behind the end must stay in the socket, where the next question will see it;
+        # asked for more, the library keeps the rest to itself and hands it out as an answer.
+        return bytes(self._resource.read_bytes(len(line + end)))
+
+    def _read_slice(self) -> bytes:
+        """One byte, and those that wait behind it: asking for more would lose what came."""
+        try:
+            first = bytes(self._resource.read_bytes(1))
+        except pyvisa.VisaIOError as error:
+            if error.error_code == StatusCode.error_timeout:
+                return b""
+            raise
+        waiting = getattr(self._resource, "bytes_in_buffer", 0)
+        if first == self._end[-1:] or not waiting:
+            return first
+        more = self._resource.read_bytes(min(waiting, _GULP), break_on_termchar=True)
+        return first + bytes(more)
+
+    def _read_message(self) -> bytes:
+        """A reply over a bus that marks its end by itself (USB, GPIB, VXI-11)."""
+        data = bytes(self._resource.read_bytes(LONGEST_REPLY + 1, break_on_termchar=True))
+        if len(data) > LONGEST_REPLY:
+            raise BadReply(f"the reply does not end within {LONGEST_REPLY} bytes")
+        return data
+
+    def _text(self, query: str, data: bytes) -> str:
+        if not data.endswith(self._end):
+            raise BadReply(f"{query!r}: the reply {escaped(data)!r} {self._other_end()}")
+        return data[: len(data) - len(self._end)].decode(self.section.encoding)
+
+    def _silence(self, query: str) -> str:
+        within = f"within {self.section.timeout_ms} ms"
+        if not self.last_reply:
+            return f"{query!r}: no reply {within}"
+        return f"{query!r}: only {escaped(self.last_reply)!r} came {within}; it {self._other_end()}"
+
+    def _other_end(self) -> str:
+        """How a reply ends that does not end as configured, for whoever mends the configuration."""
+        told = f"does not end with read_termination = {self.section.read_termination!r}"
+        tail = self.last_reply[len(self.last_reply.rstrip(b"\r\n\0;")) :]
+        return f"{told} but with {escaped(tail)!r}" if tail else told
+
+    @contextmanager
+    def _translated(self, query: str) -> Iterator[None]:
+        try:
+            yield
+        except InstrumentError:
+            raise
+        except pyvisa.VisaIOError as error:
+            if error.error_code == StatusCode.error_timeout:
+                raise ReplyTimeout(self._silence(query)) from error
+            raise SessionLost(f"{query!r}: {_reason(error)}") from error
+        except UnicodeEncodeError as error:
+            raise InstrumentError(f"{query!r} can't be sent as {self.section.encoding}") from error
+        except UnicodeError as error:
+            got = escaped(self.last_reply)
+            raise BadReply(
+                f"{query!r}: the reply {got!r} is not {self.section.encoding}"
+            ) from error
+        except Warning as error:
+            raise BadReply(f"{query!r}: {error}") from error
+        except Exception as error:  # the library lets whatever its backends raise through
+            raise SessionLost(f"{query!r}: {_reason(error)}") from error
+
+
+def _open_resource(section: ReaderSection) -> Any:
+    manager = pyvisa.ResourceManager(section.visa_library)
+    resource = manager.open_resource(section.resource, open_timeout=OPEN_TIMEOUT_MS)
+    _managers[section.visa_library] += 1
+    return resource
+
+
+def _set_serial(resource: SerialInstrument, line: SerialLine) -> None:
+    resource.baud_rate = line.baud_rate
+    resource.data_bits = line.data_bits
+    resource.stop_bits = StopBits.one if line.stop_bits == 1 else StopBits.two
+    resource.parity = Parity[line.parity]
+
+
+def _is_stream(resource: Any) -> bool:
+    """Whether only the terminator tells where a reply ends."""
+    return isinstance(resource, TCPIPSocket | SerialInstrument)
+
+
+def _reason(error: Exception) -> str:
+    text = (error.strerror if isinstance(error, OSError) else "") or str(error)
+    text = text or type(error).__name__
+    return " ".join(text.split())[:200]

@@ -1,0 +1,292 @@
+"""A reader: takes readings off one instrument, by a schedule, and publishes them.
+
+As a process of a run::
+
+    python -m acquire.reader RUN_FOLDER READER [--parent PID]
+
+:class:`Reader` decides what is done when; it is given its clock, its instrument and its
+publisher, and needs no process. :func:`run_reader` is the loop around it.
+"""
+
+from __future__ import annotations
+
+import argparse
+import faulthandler
+import math
+import os
+import sys
+import time
+import zlib
+from collections.abc import Callable, Sequence
+from contextlib import suppress
+from typing import Any
+
+from acquire.bus import Publisher
+from acquire.clock import RunClock
+from acquire.config.reader import ReaderSection, Setting
+from acquire.dialogue import Asked, Dialogue
+from acquire.errors import BadReply, InstrumentError, JournalError, RampsideError, RunError
+from acquire.instrument import Instrument
+from acquire.journal import Journal
+from acquire.readings import reading_table
+from acquire.recorder import Recorder
+from acquire.run_folder import RunFolder, open_run
+from acquire.stop import Stop, Stopped
+
+SHORTEST_PAUSE_S, LONGEST_PAUSE_S = 0.5, 10.0
+SILENT_ROW_S = 1.0  # a reader without an instrument says so at least so often
+RETRY_RECORDING_S = 1.0
+LONGEST_SLEEP_S = 0.2  # so soon it is seen that the parent has died
+
+
+def pause_s(reader: str, attempt: int) -> float:
+    """How long to wait before the next attempt after ``attempt`` failures in a row, in seconds.
+
+    Doubles from 0.5 s up to 10 s; shorter by up to a fifth, by the reader's name and the attempt,
+    so that readers of one dead gateway do not all call at once.
+    """
+    full = min(SHORTEST_PAUSE_S * 2.0 ** min(attempt - 1, 10), LONGEST_PAUSE_S)
+    return full * (1.0 - 0.2 * zlib.crc32(f"{reader} {attempt}".encode()) / 2**32)
+
+
+class Reader:
+    """Decides what one reader does, one :meth:`step` at a time.
+
+    Readings are due at whole multiples of ``period_s`` on the run's clock; one that is missed is
+    skipped, not made up for. Whatever fails closes the session, is a row of its own, and is
+    followed by attempts to reopen with growing pauses. Until one succeeds, a row says once a
+    second (or once a period, if that is longer) that there is no answer.
+
+    When a row can't be recorded nothing is asked until one can be again.
+
+    Parameters
+    ----------
+    known_identity, wait : see :class:`acquire.dialogue.Dialogue`.
+    publish, now_s, note, complain : see :class:`acquire.recorder.Recorder`.
+    """
+
+    def __init__(
+        self,
+        section: ReaderSection,
+        instrument: Asked,
+        publish: Callable[..., int],
+        now_s: Callable[[], float],
+        *,
+        known_identity: str | None = None,
+        note: Callable[[dict[str, Any]], None] = lambda entry: None,
+        complain: Callable[[str], None] = lambda text: None,
+        wait: Callable[..., Any] = lambda call, *args: call(*args),
+    ) -> None:
+        self.section = section
+        self.missed = 0  # readings that were due while something else took its time
+        self.attempts = 0  # failures since the last good reading
+        self.connected = False
+        self._dialogue = Dialogue(section, instrument, known_identity, wait)
+        self._recorder = Recorder(section, publish, now_s, note, complain)
+        self._now = now_s
+        self._due = self._try_at = self._silent_at = now_s()
+        self._slot = math.floor(self._due / section.period_s)
+        self._why = "not tried yet"
+        self._told = False  # whether identity and settings as they are stand in the journal
+        self._to_ask: list[Setting] = []
+        self._settings_at = 0.0
+
+    def step(self) -> float:
+        """Do what is due and return when the next thing is, in seconds of the run."""
+        if self._now() < self._due:
+            return self._due
+        try:
+            if self._recorder.lost:
+                self._record_again()
+            elif self.connected:
+                self._read()
+            else:
+                self._reconnect()
+            self._recorder.note()
+        except JournalError:  # told by the recorder
+            self._due = self._now() + RETRY_RECORDING_S
+        return self._due
+
+    def end(self) -> None:
+        """Close the instrument and publish that nothing follows. Raises no JournalError."""
+        self.connected = False
+        self._dialogue.close()
+        with suppress(JournalError):  # told by the recorder
+            self._recorder.row("end")
+
+    def _read(self) -> None:
+        if not self._told:
+            self._tell()
+        began = self._now()
+        try:
+            reply = self._dialogue.reading()
+        except InstrumentError as error:
+            self._fail(error, began)
+            return
+        took = (began, self._now())
+        if reply.in_order:
+            self.attempts = 0
+        else:
+            self._disconnect(reply.detail)
+        self._recorder.row(reply.status, reply.detail, reply.values, took)
+        if self.connected:
+            self._refresh_settings()
+        if self.connected:
+            self._due = self._next_slot()
+
+    def _next_slot(self) -> float:
+        slot = max(math.floor(self._now() / self.section.period_s), self._slot) + 1
+        self.missed += slot - self._slot - 1
+        self._slot = slot
+        return slot * self.section.period_s
+
+    def _refresh_settings(self) -> None:
+        """Ask one setting again, if it is time: one a reading, so that readings stay in step."""
+        if not self._to_ask and self.section.settings_period_s and self._now() >= self._settings_at:
+            self._to_ask = list(self.section.settings)
+            self._settings_at = self._now() + self.section.settings_period_s
+        if not self._to_ask:
+            return
+        began = self._now()
+        try:
+            changed = self._dialogue.refresh(self._to_ask.pop(0))
+        except InstrumentError as error:
+            self._fail(error, began)
+            return
+        if changed:
+            self._tell()
+
+    def _fail(self, error: InstrumentError, began: float) -> None:
+        self._disconnect(str(error))
+        status = "bad_reply" if isinstance(error, BadReply) else "no_answer"
+        self._recorder.row(status, str(error), took=(began, self._now()))
+
+    def _disconnect(self, why: str) -> None:
+        self.connected, self._to_ask = False, []
+        self._silent_at = self._now() + max(SILENT_ROW_S, self.section.period_s)
+        self._failed(why)
+
+    def _failed(self, why: str) -> None:
+        self.attempts, self._why = self.attempts + 1, why
+        self._try_at = self._now() + pause_s(self.section.name, self.attempts)
+        self._due = min(self._try_at, self._silent_at)
+
+    def _reconnect(self) -> None:
+        if self._now() >= self._try_at:
+            try:
+                changed = self._dialogue.connect()
+            except InstrumentError as error:
+                self._dialogue.close()
+                self._failed(str(error))
+            else:
+                self._begin(changed)
+                return
+        if self._now() >= self._silent_at:
+            self._silent_at = self._now() + max(SILENT_ROW_S, self.section.period_s)
+            self._due = min(self._try_at, self._silent_at)
+            self._recorder.row("no_answer", f"not connected, {self.attempts} failures: {self._why}")
+
+    def _begin(self, changed: bool) -> None:
+        now = self._now()
+        self.connected = True
+        self._settings_at = now + self.section.settings_period_s
+        self._slot = math.floor(now / self.section.period_s)
+        self._due = self._next_slot()
+        if changed or not self._told:
+            self._tell()
+
+    def _tell(self) -> None:
+        self._told = False
+        self._recorder.settings(self._dialogue.identity, self._dialogue.settings)
+        self._told = True
+
+    def _record_again(self) -> None:
+        self._recorder.try_again()
+        self._due = self._next_slot() if self.connected else self._now()
+
+
+def run_reader(
+    reader: Reader,
+    stop: Stop,
+    now_s: Callable[[], float],
+    wanted: Callable[[], bool] = lambda: True,
+) -> None:
+    """Step a reader when it is due until a stop is requested or it is not ``wanted`` any more."""
+    due = now_s()
+    with suppress(Stopped):
+        while not stop.requested and wanted():
+            left = due - now_s()
+            if left > 0:
+                stop.wait(time.sleep, min(left, LONGEST_SLEEP_S))
+            else:
+                due = reader.step()
+    reader.end()
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """The process. Returns its exit status: 0 ended in order, 1 failed (one sentence says why)."""
+    parser = argparse.ArgumentParser(prog="python -m acquire.reader", description=__doc__)
+    parser.add_argument("run_folder")
+    parser.add_argument("reader")
+    parser.add_argument("--parent", type=int, metavar="PID", help="end when this process has died")
+    options = parser.parse_args(arguments)
+    faulthandler.enable()
+    stop = Stop()
+    stop.install()
+
+    def complain(text: str) -> None:
+        with suppress(OSError):  # a terminal that has gone
+            print(f"reader {options.reader}: {text}", file=sys.stderr, flush=True)
+
+    try:
+        _read_for_run(open_run(options.run_folder), options, stop, complain)
+    except RampsideError as error:
+        complain(str(error))
+        return 1
+    return 0
+
+
+def _read_for_run(
+    run: RunFolder, options: argparse.Namespace, stop: Stop, complain: Callable[[str], None]
+) -> None:
+    section, live = _section(run, options.reader), run.live()
+    table = reading_table(section.name, section)
+    if live is None or table.stream not in live.endpoints:
+        raise RunError(
+            f"{run.path}: does not wait for {section.name!r}; start it by rampside watch."
+        )
+    clock = RunClock(live.monotonic_start)
+    told = [entry for entry in run.instruments() if entry.get("reader") == section.name]
+    with (
+        Journal(run.journal_path(table), table) as journal,
+        Publisher(run.run_id, table, journal, live.endpoints[table.stream]) as publisher,
+    ):
+        if journal.torn:
+            complain(f"{journal.torn} bytes of a torn last line were cut away")
+        instrument = Instrument(section)
+        reader = Reader(
+            section,
+            instrument,
+            publisher.publish,
+            clock.now_s,
+            known_identity=told[0].get("identity") if told else None,
+            note=run.note_instrument,
+            complain=complain,
+            wait=stop.wait,
+        )
+        try:
+            run_reader(reader, stop, clock.now_s, lambda: options.parent in (None, os.getppid()))
+        finally:
+            instrument.close()
+
+
+def _section(run: RunFolder, name: str) -> ReaderSection:
+    for section in run.rig.readers:
+        if section.name == name and section.elsewhere is None:
+            return section
+    names = ", ".join(item.name for item in run.rig.readers if item.elsewhere is None)
+    raise RunError(f"{run.path}: has no reader {name!r} to start; it has {names or 'none'}.")
+
+
+if __name__ == "__main__":
+    sys.exit(main())
