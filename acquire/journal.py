@@ -12,7 +12,6 @@ import os
 import threading
 from array import array
 from bisect import bisect_right
-from collections.abc import Iterator
 from contextlib import suppress
 from dataclasses import dataclass
 from pathlib import Path
@@ -22,7 +21,10 @@ from typing import BinaryIO, Self
 from acquire.cells import RowCodec
 from acquire.disk import sync_folder, write_whole
 from acquire.errors import JournalError
+from acquire.journal_reader import check_header, read_rows, whole_lines
 from acquire.tables import Row, Table
+
+__all__ = ["Journal", "Piece", "read_rows"]
 
 
 @dataclass(frozen=True)
@@ -220,51 +222,14 @@ class Journal:
         return JournalError(f"{self.path}: {what} ({reason}); see to the disk, then try again.")
 
 
-def read_rows(path: str | Path, table: Table, start: int = 0) -> Iterator[Row]:
-    """The complete rows of a journal from number ``start`` on, also while another writes it.
-
-    A torn end is left out. Raises JournalError if the file can't be read, or where a line is not
-    what it must be.
-    """
-    codec = RowCodec(table)
-    try:
-        with open(path, "rb") as file:
-            _check_header(file.readline(), Path(path), codec.header)
-            for _ in range(start):
-                if _torn(file.readline()):
-                    return
-            yield from codec.rows(_complete_lines(file), start)
-    except OSError as error:
-        reason = error.strerror or str(error)
-        raise JournalError(f"{path}: can't be read ({reason}).") from None
-
-
-def _complete_lines(file: BinaryIO) -> Iterator[str]:
-    for line in file:
-        if _torn(line):
-            return
-        yield str(line, "utf-8")  # UnicodeDecodeError is a ValueError: told with its line's number
-
-
-def _torn(line: bytes) -> bool:
-    """Whether the journal ends before this line.
-
-    NUL bytes are never written; a power cut leaves them where the length of the file had reached
-    the disk and its content had not.
-    """
-    return not line.endswith(b"\n") or b"\0" in line
-
-
 def _scan(file: BinaryIO, path: Path, header: bytes) -> tuple[int, array[int]]:
     """Where the header ends (0: not complete) and where each complete row ends."""
     ends = array("q")
     first = file.readline()
-    if not _check_header(first, path, header):
+    if not check_header(first, path, header):
         return 0, ends
     position = len(first)
-    for number, line in enumerate(file):
-        if _torn(line):
-            break
+    for number, line in enumerate(whole_lines(file)):
         if not line.startswith(b"%d," % number):
             raise JournalError(
                 f"{path}, line {number + 2}: not the row number {number}; "
@@ -273,12 +238,3 @@ def _scan(file: BinaryIO, path: Path, header: bytes) -> tuple[int, array[int]]:
         position += len(line)
         ends.append(position)
     return len(first), ends
-
-
-def _check_header(line: bytes, path: Path, header: bytes) -> bool:
-    """Whether the header is complete; JournalError if it is another table's."""
-    if line == header:
-        return True
-    if not line.endswith(b"\n") and (header.startswith(line) or not line.strip(b"\0")):
-        return False
-    raise JournalError(f"{path}: its first line is not the header of this table; is it another's?")

@@ -17,6 +17,7 @@ from journal_writer import TABLE
 from acquire.cells import LONGEST_LINE
 from acquire.errors import JournalError
 from acquire.journal import Journal, read_rows
+from acquire.journal_reader import JournalFollower
 
 HEADER = b"seq,time_s,detail,x\n"
 ROWS = [(0, 0.1, None, 1e-05), (1, 0.2, 'µ,"x"', -0.0), (2, 0.30000000000000004, "ok", None)]
@@ -327,6 +328,44 @@ def test_reading_beside_a_writer_sees_whole_rows_in_order(path):
         count = len(rows) + count // 2
     writer.join()
     assert len(list(read_rows(path, TABLE))) == 3000
+
+
+def test_a_follower_reads_what_is_new(path):
+    with Journal(path, TABLE) as journal:
+        follower = JournalFollower(path, TABLE)
+        assert follower.read(0, 10) == []
+        rows = [journal.record((number, "", number)) for number in range(7)]
+        assert follower.read(0, 3) == rows[:3]
+        assert follower.read(3, 10) == rows[3:]
+        assert follower.read(7, 10) == []
+        assert follower.read(9, 10) == []
+        rows += [journal.record((number, "", number)) for number in range(3)]
+        assert follower.read(7, 10) == rows[7:]
+        assert follower.read(2, 2) == rows[2:4]
+        assert follower.read(8, 10) == rows[8:]
+        assert follower.next_seq == 10
+
+
+def test_a_follower_waits_for_whole_lines(path):
+    write(path)
+    whole, got = path.read_bytes(), []
+    follower = JournalFollower(path, TABLE)
+    for size in range(len(whole) + 1):
+        path.write_bytes(whole[:size])
+        got += follower.read(len(got), 10)
+        assert len(got) == max(whole[:size].count(b"\n") - 1, 0)
+    assert got == ROWS
+
+
+def test_a_follower_tells_what_it_can_not_read(path):
+    with pytest.raises(JournalError, match="No such file"):
+        JournalFollower(path, TABLE).read(0, 1)
+    path.write_text("something else\n")
+    with pytest.raises(JournalError, match="not the header"):
+        JournalFollower(path, TABLE).read(0, 1)
+    path.write_bytes(HEADER + b"4,0.1,,1.0\n")
+    with pytest.raises(JournalError, match="not the row number 0"):
+        JournalFollower(path, TABLE).read(0, 1)
 
 
 def test_a_killed_writer_loses_nothing_that_it_has_reported(path):

@@ -14,6 +14,7 @@ from acquire.errors import JournalError
 from acquire.tables import Row, Table
 
 SILENCE_S = 1.0  # after which a stream is asked whether there is anything new
+FIRST_SILENCE_S = 0.05  # the same, doubled each time, until rows come unasked: see take_answer
 PATIENCE_S = 1.0  # after which a question is held for lost
 MOST_AHEAD = 2000  # rows kept while a gap before them is filled; more are asked for again
 
@@ -50,6 +51,8 @@ class StreamProgress:
         self._ahead: dict[int, Row] = {}
         self._gap = True  # rows are known or supposed to be missing, and not asked for yet
         self._asked: float | None = None  # when the question was sent that is not answered yet
+        self._in_vain = False  # whether the question before it was not answered either
+        self._silence_s = FIRST_SILENCE_S
         self._heard: float | None = None
         self._filled = self._refused = self._rewound = 0
 
@@ -64,11 +67,12 @@ class StreamProgress:
         if self._asked is not None:
             times.append(self._asked + PATIENCE_S)
         if not self._gap and self._heard is not None:
-            times.append(self._heard + SILENCE_S)
+            times.append(self._heard + self._silence_s)
         return max(times, default=float("-inf"))
 
     def ask(self, now: float) -> int:
         """The number to ask from; counts as asked at ``now``."""
+        self._in_vain = self._asked is not None
         self._asked = now
         self._gap = False
         return NEWEST if self._next is None else self._next
@@ -89,6 +93,7 @@ class StreamProgress:
             self._refused += 1
             return []
         self._heard = now
+        self._silence_s = SILENCE_S
         if message.seq == self._next:
             return self._deliver([row])
         if self._next is None or message.seq > self._next:
@@ -98,7 +103,11 @@ class StreamProgress:
         return []
 
     def take_answer(self, data: bytes, now: float) -> list[Row]:
-        """Rows to deliver after an answer has come."""
+        """Rows to deliver after an answer has come.
+
+        A connection for rows may come about later than the one for questions, and what was sent
+        before is lost, so a new subscriber asks again after ever longer pauses.
+        """
         answer = unpack(Answer, data)
         if answer is None or not self._ours(answer):
             self._refused += 1
@@ -108,19 +117,29 @@ class StreamProgress:
         except JournalError:
             self._refused += 1
             return []
-        self._heard, self._asked = now, None
+        self._heard, self._asked, self._in_vain = now, None, False
+        self._silence_s = min(2 * self._silence_s, SILENCE_S)
         if self._next is None:
             self._next = answer.first
         if answer.next_seq < answer.start:
             self._rewound += 1
-        if answer.first > self._next:
-            return []
-        missing = rows[self._next - answer.first :]
-        self._filled += len(missing)
-        delivered = self._deliver(missing)
-        if answer.next_seq > self._next:
+        delivered = self.take_rows(rows, answer.first)
+        if answer.first <= self._next < answer.next_seq:
             self._gap = True
         return delivered
+
+    @property
+    def abandoned(self) -> int | None:
+        """The number wanted next when nobody answers questions, else None."""
+        return self._next if self._in_vain else None
+
+    def take_rows(self, rows: list[Row], first: int) -> list[Row]:
+        """Rows to deliver out of the journal's rows from number ``first`` on."""
+        if self._next is None or first > self._next:
+            return []
+        missing = rows[self._next - first :]
+        self._filled += len(missing)
+        return self._deliver(missing)
 
     def _ours(self, message: Message | Answer) -> bool:
         return message.run == self._run_id and message.stream == self._stream

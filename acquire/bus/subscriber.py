@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Mapping
+from pathlib import Path
 from types import TracebackType
 from typing import Self
 
@@ -13,7 +14,8 @@ from acquire.bus.addresses import Endpoint
 from acquire.bus.progress import StreamHealth, StreamProgress
 from acquire.bus.sockets import HIGH_WATER, connected, milliseconds
 from acquire.bus.wire import Question, pack, topic
-from acquire.errors import BusError
+from acquire.errors import BusError, JournalError
+from acquire.journal_reader import JournalFollower
 from acquire.tables import Row, Table
 
 QUESTIONS_QUEUED = 1  # while nobody is connected; one is enough, its answer tells the rest
@@ -26,8 +28,8 @@ class Subscriber:
 
     ``endpoints`` and ``tables`` have the same streams. ``start`` is the first number wanted, for
     all or by stream (0 where not named); -1 means from the newest row on. A publisher that has
-    ended answers no more: what is needed from before is read from the run's folder first, and
-    ``start`` is then the number after it. Raises BusError for an address not on loopback.
+    ended answers no more: with ``folder``, the run's on this machine, what it has recorded is
+    then read from there. Raises BusError for an address not on loopback.
     """
 
     def __init__(
@@ -37,6 +39,7 @@ class Subscriber:
         tables: Mapping[str, Table],
         start: Mapping[str, int] | int = 0,
         *,
+        folder: Path | None = None,
         high_water: int = HIGH_WATER,
     ) -> None:
         if set(endpoints) != set(tables):
@@ -49,7 +52,10 @@ class Subscriber:
         try:
             for name, endpoint in endpoints.items():
                 first = start if isinstance(start, int) else start.get(name, 0)
-                stream = _Stream(self._context, run_id, tables[name], endpoint, first, high_water)
+                table = tables[name]
+                stream = _Stream(self._context, run_id, table, endpoint, first, high_water)
+                if folder is not None:
+                    stream.follower = JournalFollower(folder / table.path, table)
                 self._streams[name] = stream
                 self._register(stream)
         except BaseException:
@@ -72,6 +78,8 @@ class Subscriber:
                 stream = self._by_socket[socket]
                 got += [(stream.name, row) for row in stream.take(socket)]
             next_question = self._ask()
+            for stream in self._streams.values():
+                got += [(stream.name, row) for row in stream.read_journal()]
             now = time.monotonic()
             if got or now >= deadline:
                 return got
@@ -142,6 +150,8 @@ class _Stream:
         self._endpoint = endpoint
         self._high_water = high_water
         self._topic = topic(table.stream)
+        self.follower: JournalFollower | None = None
+        self._reading = False  # whether there may be more in the journal
         self._connect(time.monotonic())
 
     @property
@@ -166,8 +176,22 @@ class _Stream:
                 self.progress.refuse()
         return rows
 
+    def read_journal(self) -> list[Row]:
+        """Rows to deliver out of the journal on disk, when the publisher does not answer."""
+        wanted = self.progress.abandoned
+        if wanted is None or self.follower is None or not self._reading:
+            return []
+        try:
+            rows = self.follower.read(wanted, MOST_AT_ONCE)
+        except JournalError:
+            rows = []
+            self.progress.refuse()
+        self._reading = len(rows) == MOST_AT_ONCE
+        return self.progress.take_rows(rows, wanted)
+
     def ask(self, now: float) -> None:
         """Send a question; one that can't be queued counts as lost."""
+        self._reading = True
         question = Question(self._run_id, self.name, self.progress.ask(now))
         try:
             self._asking.send(pack(question), zmq.NOBLOCK)
