@@ -1,0 +1,43 @@
+"""``rampside page RUN``: a run in the browser, while it goes on or long after."""
+
+from __future__ import annotations
+
+import argparse
+
+from acquire.run_folder import open_run
+from dashboard.browser import open_page
+from dashboard.child import python
+from dashboard.interrupts import asked_to_end
+from dashboard.ports import LOOPBACK, listens, page_port
+from dashboard.roles import PAGE
+from dashboard.supervisor import ProcessNews, Role, Supervisor
+
+LOOK_S = 0.2
+END_S = 1.0
+
+
+def run(arguments: argparse.Namespace) -> int:
+    """Show the run until Ctrl-C; exit status 0."""
+    run_folder = open_run(arguments.run_folder)
+    port = page_port(arguments.port)
+    address = f"http://{LOOPBACK}:{port}"
+
+    def tell(news: ProcessNews) -> None:
+        if news.happening != "ready":
+            print(f"{news.text}.", flush=True)
+        elif arguments.no_browser or not open_page(address):
+            print("Open it in a browser.", flush=True)
+
+    command = python("dashboard.page", run_folder.path, "--port", port)
+    page = Role(PAGE, command, lambda since: listens(port))
+    supervisor = Supervisor([page], tell, lambda role, line: print(line, flush=True))
+    print(f"Page: {address}\nRun:  {run_folder.path}\nCtrl-C ends it.", flush=True)
+    with asked_to_end() as wish:
+        try:
+            supervisor.start()
+            while not wish.wait(LOOK_S):
+                supervisor.poll()
+            supervisor.stop([PAGE], END_S)
+        finally:
+            supervisor.close()
+    return 0

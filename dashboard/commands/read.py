@@ -1,0 +1,144 @@
+"""``rampside read CONFIG READER``: one reader alone, with a run folder of its own."""
+
+from __future__ import annotations
+
+import argparse
+import time
+
+from acquire.bus import Endpoint, Subscriber, free_endpoints
+from acquire.bus.addresses import check_loopback
+from acquire.config import ConfigError, Rig, load
+from acquire.config.problems import Problem, nearest_name
+from acquire.config.reader import ReaderSection
+from acquire.errors import UsageError
+from acquire.readings import stream_of
+from acquire.run_folder import RunFolder, create_run
+from acquire.tables import Row, Table
+from dashboard.child import python
+from dashboard.interrupts import asked_to_end
+from dashboard.ports import LOOPBACK
+from dashboard.roles import reader_role
+from dashboard.streams import reading_tables
+from dashboard.supervisor import ProcessNews, Role, Supervisor
+
+LOOK_S = 0.2
+END_S = 1.5
+LINE_EVERY_S = 5.0
+
+
+def run(arguments: argparse.Namespace) -> int:
+    """Read until Ctrl-C, or for as long as asked; exit status 0."""
+    rig, config = load(arguments.config)
+    reader = _reader(rig, arguments.reader)
+    endpoint = _endpoint(reader, arguments.publish_port, arguments.answer_port)
+    table = reading_tables(rig)[stream_of(reader.name)]
+    run_folder = create_run(rig, config, [table], arguments.folder)
+    with asked_to_end() as wish:
+        live = run_folder.write_live({table.stream: endpoint}, "")
+        end = None if arguments.seconds is None else live.monotonic_start + arguments.seconds
+        with Subscriber(run_folder.run_id, live.endpoints, {table.stream: table}) as subscriber:
+            one = _One(run_folder, reader, table, subscriber)
+            try:
+                one.start()
+                while not wish.is_set() and (end is None or time.monotonic() < end):
+                    one.look()
+            finally:
+                one.end()
+    return 0
+
+
+def _reader(rig: Rig, name: str) -> ReaderSection:
+    names = [reader.name for reader in rig.readers]
+    if name not in names:
+        near = nearest_name(name, names)
+        hint = f"did you mean {near}?" if near else f"it has {', '.join(names) or 'none'}."
+        raise UsageError(f"The configuration has no reader {name!r}; {hint}")
+    reader = rig.reader(name)
+    needed = ("resource", "write_termination", "read_termination", "queries")
+    missing = [key for key in needed if not getattr(reader, key)]
+    if missing:
+        raise ConfigError(
+            f"reader {name}", [Problem(f"readers.{key}", "missing, to read here") for key in missing]
+        )
+    return reader
+
+
+def _endpoint(reader: ReaderSection, publish: int | None, answer: int | None) -> Endpoint:
+    """The addresses: as asked for, else as configured, else free ones. Raises BusError."""
+    free = free_endpoints([reader.name])[reader.name]
+    given = reader.elsewhere
+    addresses = []
+    for port, configured, other in (
+        (publish, given.publish if given else None, free.publish),
+        (answer, given.answer if given else None, free.answer),
+    ):
+        address = f"tcp://{LOOPBACK}:{port}" if port else configured or other
+        check_loopback(address)
+        addresses.append(address)
+    if addresses[0] == addresses[1]:
+        raise UsageError("--publish-port and --answer-port must differ.")
+    return Endpoint(*addresses)
+
+
+class _One:
+    """The reader's process and what it says."""
+
+    def __init__(
+        self, run: RunFolder, reader: ReaderSection, table: Table, subscriber: Subscriber
+    ) -> None:
+        self._run, self._reader, self._table = run, reader, table
+        self._subscriber = subscriber
+        self._role = reader_role(reader.name)
+        command = python("acquire.reader", run.path, reader.name)
+        self._supervisor = Supervisor(
+            [Role(self._role, command, self._ready)], self._tell, lambda role, line: _say(line)
+        )
+        self._count, self._newest, self._shown = 0, None, 0.0
+
+    def start(self) -> None:
+        """Start reading, and say where."""
+        live = self._run.live()
+        assert live is not None
+        endpoint = live.endpoints[self._table.stream]
+        _say(f"Readings at {endpoint.publish}, missed ones at {endpoint.answer}")
+        _say(f"Run: {self._run.path}\nCtrl-C ends it.")
+        self._supervisor.start()
+
+    def look(self) -> None:
+        """Take what has come, look after the process, say how it goes now and then."""
+        for _, row in self._subscriber.receive(LOOK_S):
+            self._count += row[3] == "ok"
+            self._newest: Row | None = row
+        self._supervisor.poll()
+        if self._newest is not None and time.monotonic() - self._shown >= LINE_EVERY_S:
+            self._shown = time.monotonic()
+            _say(f"{self._count} readings; {self._words(self._newest)}")
+
+    def end(self) -> None:
+        """End the process in order and close the run."""
+        try:
+            self._supervisor.stop([self._role], END_S)
+        finally:
+            self._supervisor.close()
+            self._run.end_live()
+
+    def _ready(self, since: float) -> bool:
+        heard = self._subscriber.health()[self._table.stream].last_heard_monotonic
+        return heard is not None and heard > since
+
+    def _tell(self, news: ProcessNews) -> None:
+        if news.happening != "ready":
+            _say(f"{news.text}.")
+
+    def _words(self, row: Row) -> str:
+        if row[3] != "ok":
+            return f"{row[3]}: {row[4] or 'settings and identity were asked'}"
+        return ", ".join(
+            f"{value.name} {number * value.scale:.6g} {value.unit}"
+            for value, number in zip(self._reader.values, row[5:])
+            if isinstance(number, float)
+        )
+
+
+def _say(text: str) -> None:
+    print(text, flush=True)

@@ -1,0 +1,166 @@
+"""A run in the terminal: a table that is kept up to date, or a plain line now and then.
+
+Nothing here may stop a run: once the terminal is gone, nothing is written to it any more.
+"""
+
+from __future__ import annotations
+
+import threading
+import time
+from collections.abc import Callable
+from types import TracebackType
+from typing import Self
+
+from rich.console import Console, Group, RenderableType
+from rich.live import Live
+from rich.table import Table
+from rich.text import Text
+
+from acquire.config import Rig
+from dashboard.progress import Progress
+from dashboard.summary import BarSummary
+from dashboard.watch import Moment, View
+from dashboard.words import NAMES, duration, field, left_to_target, number, numbers_of
+
+LINE_EVERY_S = 5.0
+_MARKS = {"ready": "green", "starting": "yellow", "waiting": "red", "ended": "dim"}
+
+
+def open_view(rig: Rig, console: Console | None = None) -> View:
+    """The view that suits where we write to: live in a terminal, else lines."""
+    console = console or Console(highlight=False)
+    return LiveView(rig, console) if console.is_terminal else LineView(rig, console)
+
+
+def printable(text: str) -> str:
+    """Text whose control characters, which may come from anywhere, do nothing to a terminal."""
+    return "".join(c if c.isprintable() or c == "\n" else f"\\x{ord(c):02x}" for c in text)
+
+
+class _Written:
+    """Writes to a console from any thread until that fails for the first time."""
+
+    def __init__(self, rig: Rig, console: Console) -> None:
+        self._rig = rig
+        self._console = console
+        self._lock = threading.RLock()
+        self._gone = False
+
+    def say(self, text: str) -> None:
+        """Show lines that stay."""
+        self._try(lambda: self._console.print(Text(printable(text)), soft_wrap=True))
+
+    def _try(self, write: Callable[[], object]) -> None:
+        with self._lock:
+            if self._gone:
+                return
+            try:
+                write()
+            except (OSError, ValueError):  # closed terminal, broken pipe, closed file
+                self._gone = True
+
+
+class LineView(_Written):
+    """For logs and pipes: one line every few seconds."""
+
+    def __init__(self, rig: Rig, console: Console, now_s: Callable[[], float] = time.monotonic):
+        super().__init__(rig, console)
+        self._now = now_s
+        self._next = float("-inf")
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self,
+        kind: type[BaseException] | None,
+        error: BaseException | None,
+        trace: TracebackType | None,
+    ) -> None:
+        self._try(self._console.file.flush)
+
+    def show(self, progress: Progress, moment: Moment) -> None:
+        """Write a line, if it is time for one."""
+        if self._now() >= self._next:
+            self._next = self._now() + LINE_EVERY_S
+            self.say(line(progress, moment))
+            self._try(self._console.file.flush)
+
+
+class LiveView(_Written):
+    """For a terminal: a few lines that are rewritten in place, what is said above them."""
+
+    def __init__(self, rig: Rig, console: Console) -> None:
+        super().__init__(rig, console)
+        self._live = Live(console=console, auto_refresh=False)
+
+    def __enter__(self) -> Self:
+        self._try(self._live.start)
+        return self
+
+    def __exit__(
+        self,
+        kind: type[BaseException] | None,
+        error: BaseException | None,
+        trace: TracebackType | None,
+    ) -> None:
+        self._try(self._live.stop)
+
+    def show(self, progress: Progress, moment: Moment) -> None:
+        """Bring the lines up to date."""
+        self._try(lambda: self._live.update(picture(self._rig, progress, moment), refresh=True))
+
+
+def line(progress: Progress, moment: Moment) -> str:
+    """The state of a run in one line."""
+    readings = sum(progress.readings.values())
+    parts = [f"{moment.time_s:6.1f} s", field(progress.field_T), f"{readings} readings"]
+    for name, bar in progress.summary.bars.items():
+        numbers = "  ".join(numbers_of(bar))
+        parts.append(f"{name}: {numbers}  {_state(bar)}")
+    parts += [f"{name} {state}" for name, state in moment.states.items() if state != "ready"]
+    return " | ".join(parts)
+
+
+def picture(rig: Rig, progress: Progress, moment: Moment) -> RenderableType:
+    """The state of a run as a few lines for a terminal."""
+    head = Text.assemble(
+        (duration(moment.time_s), "bold"), "   field ", (field(progress.field_T), "bold"), "   "
+    )
+    for name, count in progress.readings.items():
+        bad = progress.unusable[name]
+        head.append(f"{name} {count}" + (f" ({bad} unusable)" if bad else "") + "   ")
+    parts: list[RenderableType] = [head]
+    for name, bar in progress.summary.bars.items():
+        parts += [_numbers(name, bar, progress.summary.confidence), *_cautions(bar)]
+    parts += [Text(f"{name}: {why}", "red") for name, why in progress.trouble.items()]
+    parts.append(_processes(moment))
+    return Group(*parts)
+
+
+def _numbers(name: str, bar: BarSummary, confidence: float) -> Table:
+    table = Table(title=Text(f"{name}: {_state(bar)}"), title_justify="left", box=None)
+    for heading in ("", "value", f"{100 * confidence:g} % interval, at every look"):
+        table.add_column(heading)
+    for column, title in NAMES.items():
+        value, interval = number(bar, column)
+        table.add_row(title, Text(value, "bold"), interval)
+    return table
+
+
+def _state(bar: BarSummary) -> str:
+    left = left_to_target(bar)
+    return f"{bar.verdict}, {left}" if left else bar.verdict
+
+
+def _cautions(bar: BarSummary) -> list[RenderableType]:
+    return [Text(f"caution: {text or code}", "yellow") for code, text in bar.cautions.items()]
+
+
+def _processes(moment: Moment) -> Text:
+    text = Text()
+    for name, state in moment.states.items():
+        text.append("● ", _MARKS.get(state, "dim"))
+        again = moment.restarts.get(name, 0)
+        text.append(name + (f" (restarted {again} times)" if again else "") + "   ", "dim")
+    return text

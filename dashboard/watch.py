@@ -1,0 +1,262 @@
+"""Watching one run from its folder's making to its end; what ``watch`` and ``demo`` both do."""
+
+from __future__ import annotations
+
+import time
+import uuid
+from contextlib import AbstractContextManager
+from dataclasses import dataclass
+from pathlib import Path
+from threading import Event
+from typing import Protocol
+
+from acquire.bus import Endpoint, Subscriber, ask, free_address, free_endpoints
+from acquire.bus.addresses import check_loopback
+from acquire.config import Rig
+from acquire.errors import BusError, UsageError
+from acquire.readings import stream_of
+from acquire.run_folder import RunFolder, create_run
+from analyse.estimate_table import ESTIMATES, EVENTS
+from dashboard import roles
+from dashboard.browser import open_page
+from dashboard.event_sender import EventSender
+from dashboard.ports import LOOPBACK, page_port
+from dashboard.progress import Progress
+from dashboard.ramp_end import RampEnd
+from dashboard.streams import run_tables
+from dashboard.summary import Summary
+from dashboard.supervisor import ProcessNews, Role, Supervisor
+from dashboard.words import told
+
+LOOK_S = 0.2  # the longest wait between two looks at signals and processes
+SHOW_S = 0.25
+# The end, in order, has 3 s in all; these are the limits of its steps.
+READERS_END_S, EVENTS_END_S, FINISH_S, OTHERS_END_S = 0.8, 0.1, 0.9, 0.4
+HUNG_S = 60.0  # a reader says at least once a second that it has nothing, so it hangs by then
+
+
+@dataclass(frozen=True)
+class WatchPlan:
+    """What is to be watched, and how. ``laboratory``: start the simulated one of the rig too."""
+
+    rig: Rig
+    config: bytes
+    folder: Path | None = None
+    port: int = 0
+    browser: bool = False
+    exit_when_over: bool = False
+    seconds: float | None = None
+    laboratory: bool = False
+
+
+@dataclass(frozen=True)
+class Moment:
+    """What the view shows beside the progress: time since the run's start, and the processes."""
+
+    time_s: float
+    states: dict[str, str]
+    restarts: dict[str, int]
+
+
+class View(AbstractContextManager["View"], Protocol):
+    """Where a run is shown. Neither method raises, also when nobody can see it any more."""
+
+    def say(self, text: str) -> None:
+        """Show lines that stay."""
+
+    def show(self, progress: Progress, moment: Moment) -> None:
+        """Show the present state in place of the one before."""
+
+
+def watch(plan: WatchPlan, view: View, wish: Event) -> tuple[RunFolder, Summary]:
+    """Make a run, watch it until it is over or ``wish`` is set, and end everything in order.
+
+    Raises UsageError for a configuration that has nothing to watch, and what can go wrong
+    before anything was started; after that processes are restarted rather than given up.
+    """
+    if not plan.rig.readers:
+        raise UsageError(
+            "This configuration has a table, not readers: rampside replay TABLE --config CONFIG."
+        )
+    port = page_port(plan.port)
+    endpoints = endpoints_of(plan.rig)
+    run = create_run(plan.rig, plan.config, list(run_tables(plan.rig).values()), plan.folder)
+    watcher = _Watcher(plan, run, endpoints, port, view)
+    try:
+        watcher.go_on(wish)
+    finally:
+        watcher.end()
+    return run, watcher.progress.summary
+
+
+def endpoints_of(rig: Rig) -> dict[str, Endpoint]:
+    """Where each stream of a run meets its listeners: as configured for readers elsewhere.
+
+    Raises BusError for a configured address that is not on loopback.
+    """
+    elsewhere = {
+        stream_of(reader.name): Endpoint(reader.elsewhere.publish, reader.elsewhere.answer)
+        for reader in rig.readers
+        if reader.elsewhere is not None
+    }
+    for endpoint in elsewhere.values():
+        check_loopback(endpoint.publish)
+        check_loopback(endpoint.answer)
+    return elsewhere | free_endpoints(name for name in run_tables(rig) if name not in elsewhere)
+
+
+class _Watcher:
+    """One run under way: the processes, what they say, and when to stop."""
+
+    def __init__(
+        self,
+        plan: WatchPlan,
+        run: RunFolder,
+        endpoints: dict[str, Endpoint],
+        port: int,
+        view: View,
+    ) -> None:
+        self._plan, self._run, self._view = plan, run, view
+        self._address = f"http://{LOOPBACK}:{port}"
+        self._requests = free_address()
+        self._start = run.write_live(endpoints, self._requests).monotonic_start
+        self.progress = Progress(run.run_id, plan.rig)
+        ramp = plan.rig.ramp
+        self._ramp_end = None if ramp is None else RampEnd(ramp.path_T, ramp.duration_s)
+        self._field_time_s = -1.0
+        self._said_over = False
+        self._news_at = dict.fromkeys(endpoints, time.monotonic())
+        self._subscriber = Subscriber(run.run_id, endpoints, run_tables(plan.rig))
+        self._health = self._subscriber.health()
+        self._events = EventSender(self._requests, ask)
+        self._supervisor = Supervisor(self._roles(port), self._process_news, self._hear)
+
+    def go_on(self, wish: Event) -> None:
+        """Start everything and look after it until something ends it."""
+        self._view.say(f"Page: {self._address}\nRun:  {self._run.path}")
+        self._supervisor.start()
+        shown = 0.0
+        while not (wish.is_set() or self._time_is_up() or self._ended_with_the_ramp()):
+            self._listen()
+            self._supervisor.poll()
+            self._replace_hung_readers()
+            if time.monotonic() - shown >= SHOW_S:
+                shown = time.monotonic()
+                self._view.show(self.progress, self._moment())
+
+    def end(self) -> None:
+        """End all processes in order within 3 s, and leave the run's folder whole."""
+        try:
+            self._end_in_order()
+        finally:
+            self._supervisor.close()
+            self._subscriber.close()
+            self._run.end_live()
+        self._catch_up()
+
+    def _end_in_order(self) -> None:
+        readers = [roles.reader_role(name) for name in roles.local_readers(self._plan.rig)]
+        killed = self._supervisor.stop(readers, READERS_END_S)
+        unsent = self._events.close(EVENTS_END_S)
+        finished = self._finish_estimates()
+        others = [name for name in self._supervisor.names if name not in readers]
+        killed += self._supervisor.stop(others, OTHERS_END_S)
+        if killed:
+            self._view.say(f"Had to be killed, did not end in time: {', '.join(killed)}.")
+        if unsent:
+            self._view.say(f"{unsent} of the messages above are not in the run's events.")
+        if not finished:
+            self._view.say(
+                "The estimator could not finish, so the last estimates are missing; "
+                f"rampside replay {self._run.path} makes them out of the readings."
+            )
+
+    def _catch_up(self) -> None:
+        """Take the rows that were written after the last look, from the run's folder."""
+        for table in (ESTIMATES, EVENTS):
+            first = self._health[table.stream].last_seq + 1
+            for row in self._run.rows(table, first):
+                self.progress.take(table.stream, row)
+
+    def _finish_estimates(self) -> bool:
+        """Have the estimator work up all that the readers have written."""
+        if self._supervisor.pid(roles.ESTIMATOR) is None:
+            return False
+        message = {"kind": "run", "code": "finish", "text": "the run ends", "id": uuid.uuid4().hex}
+        try:
+            reply = ask(self._requests, message, FINISH_S)
+        except BusError:
+            return False
+        if reply.get("differing"):
+            self._view.say(
+                f"{reply['differing']} rows came out otherwise after a restart than before it: "
+                "this is a fault of rampside; keep the run's folder and report it."
+            )
+        return True
+
+    def _roles(self, port: int) -> list[Role]:
+        found = roles.roles_of(self._run, port, self._last_heard)
+        if self._plan.laboratory:
+            config = self._run.path / "config.toml"
+            ports = roles.laboratory_ports(self._plan.rig)
+            found.insert(0, roles.laboratory_role(config, ports))
+        return found
+
+    def _last_heard(self, stream: str) -> float | None:
+        return self._health[stream].last_heard_monotonic
+
+    def _listen(self) -> None:
+        for stream, row in self._subscriber.receive(LOOK_S):
+            self.progress.take(stream, row)
+            self._news_at[stream] = time.monotonic()
+            self._note_field()
+        self._health = self._subscriber.health()
+
+    def _note_field(self) -> None:
+        time_s, field_T = self.progress.field_time_s, self.progress.field_T
+        if self._ramp_end is None or time_s is None or field_T is None:
+            return
+        if time_s > self._field_time_s:
+            self._field_time_s = time_s
+            self._ramp_end.add(time_s, field_T)
+
+    def _replace_hung_readers(self) -> None:
+        for name in roles.local_readers(self._plan.rig):
+            reader, stream = self._plan.rig.reader(name), stream_of(name)
+            allowed_s = HUNG_S + 2 * reader.period_s
+            if time.monotonic() - self._news_at[stream] > allowed_s:
+                self._news_at[stream] = time.monotonic()
+                role = roles.reader_role(name)
+                self._supervisor.replace(role, f"published nothing for {allowed_s:g} s")
+
+    def _ended_with_the_ramp(self) -> bool:
+        if self._ramp_end is None or not self._ramp_end.over:
+            return False
+        if not self._said_over:
+            self._said_over = True
+            self._view.say("The ramp is over.")
+            if not self._plan.exit_when_over:
+                self._view.say(told(self.progress.summary))
+                self._view.say(f"Run:  {self._run.path}\nCtrl-C ends the watch and the page.")
+        return self._plan.exit_when_over
+
+    def _time_is_up(self) -> bool:
+        seconds = self._plan.seconds
+        return seconds is not None and time.monotonic() - self._start >= seconds
+
+    def _moment(self) -> Moment:
+        states = {name: self._supervisor.state(name) for name in self._supervisor.names}
+        return Moment(time.monotonic() - self._start, states, self._supervisor.restarts)
+
+    def _process_news(self, news: ProcessNews) -> None:
+        if news.happening == "ready":
+            if news.role == roles.PAGE and self._plan.browser and not open_page(self._address):
+                self._view.say(f"No browser to open here: open {self._address} yourself.")
+            return
+        self.progress.news.append(news.text)
+        self._view.say(f"{news.text}.")
+        self._events.send("process", news.happening, news.text)
+
+    def _hear(self, role: str, line: str) -> None:
+        if line != "ready":
+            self._view.say(line if line.startswith(f"{role}:") else f"{role}: {line}")

@@ -1,0 +1,109 @@
+"""The numbers of a run in words, for a terminal."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+
+from dashboard.summary import BarSummary, Summary
+
+
+@dataclass(frozen=True)
+class _Quantity:
+    """How a column is told: its name, the unit that its value is divided by, the unit's name."""
+
+    name: str
+    unit: float
+    unit_name: str
+
+
+_QUANTITIES = {
+    "sheet_density_per_m2": _Quantity("sheet density", 1e15, "1e15 m^-2 (1e11 cm^-2)"),
+    "mobility_m2_per_V_s": _Quantity("mobility", 1.0, "m^2/Vs (1e4 cm^2/Vs)"),
+    "scattering_time_s": _Quantity("scattering time", 1e-12, "ps"),
+}
+
+NAMES = {column: quantity.name for column, quantity in _QUANTITIES.items()}
+"""The three numbers: column of the table of estimates, and what a person calls it."""
+
+NOT_KNOWN = "not known yet"
+
+
+def told(summary: Summary) -> str:
+    """What a run has found, in a few lines for each Hall bar."""
+    return "\n".join(
+        line for name, bar in summary.bars.items() for line in _bar_lines(name, bar, summary)
+    )
+
+
+def number(bar: BarSummary, column: str) -> tuple[str, str]:
+    """One of the three numbers with its standard uncertainty, and its interval."""
+    value, u = bar.get(column), bar.get(f"{column}_u")
+    if value is None or u is None:
+        return NOT_KNOWN, ""
+    quantity = _QUANTITIES[column]
+    digits = _digits(u / quantity.unit)
+    low, mean, high = (
+        f"{x / quantity.unit:.{digits}f}"
+        for x in (bar.get(f"{column}_low"), value, bar.get(f"{column}_high"))
+    )
+    text = f"{mean} ± {u / quantity.unit:.{digits}f} {quantity.unit_name}"
+    return text, f"{low} to {high}"
+
+
+def numbers_of(bar: BarSummary) -> Iterator[str]:
+    """The three numbers with their intervals, for one line."""
+    for column, name in NAMES.items():
+        value, interval = number(bar, column)
+        yield f"{name} {value}" + (f" [{interval}]" if interval else "")
+
+
+def field(field_T: float | None) -> str:
+    """A field, or that there is none yet."""
+    return "no field yet" if field_T is None else f"{field_T:+.4f} T"
+
+
+def duration(seconds: float) -> str:
+    """A time in minutes and seconds, or hours and minutes."""
+    whole = round(seconds)
+    if whole < 60:
+        return f"{whole} s"
+    if whole < 3600:
+        return f"{whole // 60} min {whole % 60} s"
+    return f"{whole // 3600} h {whole % 3600 // 60} min"
+
+
+def left_to_target(bar: BarSummary) -> str:
+    """When the target is expected to be met, as far as that is known; empty if not."""
+    seconds, field_T = bar.get("time_to_target_s"), bar.get("field_to_target_T")
+    if bar.verdict == "stable" or seconds is None:
+        return ""
+    where = "" if field_T is None else f", near {field_T:.2f} T"
+    return f"about {duration(seconds)} left to the target{where}"
+
+
+def _bar_lines(name: str, bar: BarSummary, summary: Summary) -> Iterator[str]:
+    points = bar.get("field_points") or 0
+    yield f"{name}: {_verdict(bar)}"
+    for column, title in NAMES.items():
+        value, interval = number(bar, column)
+        inside = f"   {100 * summary.confidence:g} % interval {interval}" if interval else ""
+        yield f"  {title:<16} {value}{inside}"
+    low, high = bar.get("window_low_T"), bar.get("window_high_T")
+    window = "" if low is None or high is None else f", window {low:.3f} to {high:.3f} T"
+    yield f"  carriers {bar.get('carriers') or 'not known yet'}, {points} field points{window}"
+    for code, sentence in bar.cautions.items():
+        yield f"  caution {code}: {sentence}"
+
+
+def _verdict(bar: BarSummary) -> str:
+    if bar.stable_at is not None:
+        time_s, field_T = bar.stable_at
+        return f"stable since {field(field_T)}, {duration(time_s)} after the start"
+    waiting = bar.get("waiting_for")
+    return f"converging: {waiting}" if waiting else bar.verdict
+
+
+def _digits(u: float) -> int:
+    """Decimals that show two digits of an uncertainty."""
+    return max(0, 1 - int(f"{u:.1e}".split("e")[1])) if u > 0 else 6
