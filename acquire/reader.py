@@ -225,12 +225,13 @@ def run_reader(
 
 def main(arguments: Sequence[str] | None = None) -> int:
     """The process. Returns its exit status: 0 ended in order, 1 failed (one sentence says why)."""
-    parser = argparse.ArgumentParser(prog="python -m acquire.reader", description=__doc__)
+    parser = argparse.ArgumentParser(
+        prog="python -m acquire.reader", description="Read one instrument for a run."
+    )
     parser.add_argument("run_folder")
     parser.add_argument("reader")
     parser.add_argument("--parent", type=int, metavar="PID", help="end when this process has died")
     options = parser.parse_args(arguments)
-    faulthandler.enable()
     stop = Stop()
     stop.install()
 
@@ -281,12 +282,13 @@ def _read_for_run(
 
 
 def _section(run: RunFolder, name: str) -> ReaderSection:
-    for section in run.rig.readers:
-        if section.name == name and section.elsewhere is None:
-            return section
-    names = ", ".join(item.name for item in run.rig.readers if item.elsewhere is None)
-    raise RunError(f"{run.path}: has no reader {name!r} to start; it has {names or 'none'}.")
+    try:
+        return run.rig.reader(name)
+    except KeyError:
+        names = ", ".join(reader.name for reader in run.rig.readers) or "none"
+        raise RunError(f"{run.path}: has no reader {name!r}; it has {names}.") from None
 
 
 if __name__ == "__main__":
+    faulthandler.enable()
     sys.exit(main())
