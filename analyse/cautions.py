@@ -9,13 +9,16 @@ from dataclasses import dataclass
 
 from analyse.estimate import Caution
 from analyse.pairing import Pair
-from analyse.quick import QuickReading
+from analyse.quick import HALL_MARK_OHM, QuickReading
 from analyse.setup import Setup, Target
 from analyse.transport_fit import TransportFit
 from analyse.window import Bounds
 
 RECENT = 20
 MEMORY = 100
+MIN_EFFECTIVE = 20.0
+BEND_CERTAIN = 4.5
+"""Standard errors beyond the target at which a bend is called one; it is looked at all the time."""
 
 
 class RoleWatch:
@@ -91,7 +94,7 @@ class FitFacts:
 
 def fit_cautions(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
     """Cautions about the fit that hold now."""
-    yield from _noise(facts.fit)
+    yield from _noise(facts.fit, setup)
     yield from _straightness(facts.fit, setup.target)
     if facts.farthest_T > facts.bounds.high_T:
         yield Caution(
@@ -109,12 +112,12 @@ def fit_cautions(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
     yield from _quick(facts)
 
 
-def _noise(fit: TransportFit) -> Iterator[Caution]:
-    for role, excess in (
-        ("Hall", fit.noise_excess_hall),
-        ("longitudinal", fit.noise_excess_longitudinal),
+def _noise(fit: TransportFit, setup: Setup) -> Iterator[Caution]:
+    for role, excess, stages in (
+        ("Hall", fit.noise_excess_hall, setup.hall.filter),
+        ("longitudinal", fit.noise_excess_longitudinal, setup.longitudinal.filter),
     ):
-        if excess > 1.0:
+        if excess > 1.0 and stages is not None:
             yield Caution(
                 "noise_high",
                 f"the {role} readings scatter {math.sqrt(excess):.1f} times more over seconds than "
@@ -132,7 +135,9 @@ def _straightness(fit: TransportFit, target: Target) -> Iterator[Caution]:
         if coefficient is None or not math.isfinite(coefficient.bend_error):
             continue
         size = abs(coefficient.value)
-        if abs(coefficient.bend) - 3 * coefficient.bend_error > limit * size > 0:
+        if coefficient.effective < MIN_EFFECTIVE or not size:
+            continue
+        if abs(coefficient.bend) - BEND_CERTAIN * coefficient.bend_error > limit * size:
             yield Caution(
                 "not_straight",
                 f"the {what} bends within the window; taking the bend into account moves the "
@@ -142,20 +147,25 @@ def _straightness(fit: TransportFit, target: Target) -> Iterator[Caution]:
 
 
 def _quick(facts: FitFacts) -> Iterator[Caution]:
+    rho_0 = facts.fit.rho_0
+    offset = abs(facts.fit.offset_ohm or 0.0)
+    level = abs(rho_0.value) if rho_0 is not None and rho_0.value else math.inf
     pairs = (
         ("sheet density", "at 6.25 kOhm", facts.density_per_m2,
-         facts.quick_density and facts.quick_density.density_per_m2, facts.quick_density),
+         facts.quick_density and facts.quick_density.density_per_m2, facts.quick_density,
+         offset / HALL_MARK_OHM),
         ("mobility", "where rho_xx = rho_xy", facts.mobility_m2_per_V_s,
-         facts.quick_mobility and facts.quick_mobility.mobility_m2_per_V_s, facts.quick_mobility),
+         facts.quick_mobility and facts.quick_mobility.mobility_m2_per_V_s, facts.quick_mobility,
+         offset / level),
     )
-    for name, where, fitted, value, reading in pairs:
+    for name, where, fitted, value, reading, explained in pairs:
         if fitted is None or value is None or reading is None:
             continue
         apart = abs(value / fitted - 1.0)
-        if apart > 0.05 + 4 * reading.relative_uncertainty:
+        if apart > 0.05 + 5 * reading.relative_uncertainty + 1.2 * explained:
             yield Caution(
                 "quick_readings_apart",
                 f"the {name} read off the curve {where} is {100 * apart:.0f} % away from the fit: "
-                "look for an offset, a plateau or a bend.",
+                "look for a plateau, a bend or a wrong scale.",
                 touches_answer=False,
             )

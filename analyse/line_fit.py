@@ -10,26 +10,38 @@ fit, with its degrees of freedom. tests/bench shows the coverage.
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
-
-import numpy as np
 
 from analyse.basis import COLUMNS
 from analyse.confidence import t_radius
 from analyse.segments import OWN, Pool
+from analyse.square_root import inverse_root, triangle_of
 
 
 @dataclass(frozen=True)
 class LineFit:
-    """Coefficients (p,) in ohm, (X'X)^-1 (p, p), ``variance`` of an independent reading (kappa
-    s^2), its degrees of freedom ``nu``, and ``kappa``."""
+    """Coefficients (p,) in ohm, the inverse root of X'X (p, p), ``variance`` of an independent
+    reading (kappa s^2), its degrees of freedom ``nu``, and ``kappa``."""
 
     columns: tuple[int, ...]
-    theta: np.ndarray
-    inverse: np.ndarray
+    theta: tuple[float, ...]
+    root: list[list[float]]
     variance: float
     nu: float
     kappa: float
+
+    def inverse(self, j: int) -> float:
+        """[(X'X)^-1]_jj."""
+        return sum(one * one for one in self.root[j])
+
+    def predict(self, row: Sequence[float]) -> tuple[float, float]:
+        """Value at a row of regressors, and x' (X'X)^-1 x."""
+        chosen = [row[column] for column in self.columns]
+        value = sum(x * t for x, t in zip(chosen, self.theta))
+        p = len(chosen)
+        along = (sum(chosen[i] * self.root[i][k] for i in range(k + 1)) for k in range(p))
+        return value, sum(one * one for one in along)
 
     @property
     def s2(self) -> float:
@@ -38,11 +50,11 @@ class LineFit:
 
     def standard_error(self, j: int) -> float:
         """Standard error of coefficient j, for one look at the data."""
-        return math.sqrt(self.variance * float(self.inverse[j, j]))
+        return math.sqrt(self.variance * self.inverse(j))
 
     def z2(self, j: int) -> float:
         """Effective sum of squares of regressor j after the others are taken out."""
-        return 1.0 / (self.kappa * float(self.inverse[j, j]))
+        return 1.0 / (self.kappa * self.inverse(j))
 
     def half_width(self, j: int, phi: float, alpha: float) -> float:
         """Half-width of the confidence sequence of coefficient j."""
@@ -59,15 +71,17 @@ def fit_columns(pool: Pool, columns: tuple[int, ...], excess: bool = False) -> L
     nu = pool.count / kappa - p
     if nu <= 0.5:
         return None
-    triangle = pool.triangle[:, [*columns, COLUMNS]]
-    if columns != tuple(range(p)):
-        triangle = np.linalg.qr(triangle, mode="r")
-    block = triangle[:p, :p]
-    diagonal = np.abs(np.diag(block))
-    if not np.all(diagonal > 1e-9 * np.sqrt((block**2).sum(axis=0)) + 1e-300):
+    if columns == tuple(range(p)):
+        rows = pool.triangle.tolist()
+        y = COLUMNS
+    else:
+        rows = triangle_of(pool.triangle[:, [*columns, COLUMNS]]).tolist()
+        y = p
+    root = inverse_root(rows, p)
+    if root is None:
         return None
-    inverse = np.linalg.inv(block)
-    rss = float((triangle[p:, p] ** 2).sum())
+    theta = tuple(sum(root[i][k] * rows[k][y] for k in range(i, p)) for i in range(p))
+    rss = sum(row[y] ** 2 for row in rows[p:])
     variance = kappa * rss / (pool.count - p * kappa)
     if excess:
         between = OWN * pool.groups - p
@@ -75,7 +89,7 @@ def fit_columns(pool: Pool, columns: tuple[int, ...], excess: bool = False) -> L
             return None
         variance = max(variance, (rss - pool.own_rss) / between)
         nu = min(nu, float(between))
-    return LineFit(columns, inverse @ triangle[:p, p], inverse @ inverse.T, variance, nu, kappa)
+    return LineFit(columns, theta, root, variance, nu, kappa)
 
 
 def lack_of_fit(pool: Pool, columns: tuple[int, ...]) -> tuple[float, float, float] | None:

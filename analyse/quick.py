@@ -60,6 +60,11 @@ class Crossing:
             self.reading = _zero_of_line(points)
 
 
+SLOPE_SEEN = 8.0
+"""Standard errors that the piece's slope must have, or there is no crossing to be read yet; many,
+since neighbouring readings share their noise."""
+
+
 def _zero_of_line(points: list[tuple[float, float]]) -> QuickReading | None:
     n = len(points)
     x0 = sum(x for x, _ in points) / n
@@ -68,14 +73,14 @@ def _zero_of_line(points: list[tuple[float, float]]) -> QuickReading | None:
     if sxx <= 0.0:
         return None
     slope = sum((x - x0) * (y - y0) for x, y in points) / sxx
-    if slope <= 0.0:
+    rss = sum((y - y0 - slope * (x - x0)) ** 2 for x, y in points)
+    scatter = math.sqrt(rss / (n - 2))
+    if slope <= 0 or slope <= SLOPE_SEEN * scatter / math.sqrt(sxx):
         return None
     zero = x0 - y0 / slope
     low, high = min(x for x, _ in points), max(x for x, _ in points)
     if not (low <= zero <= high and zero > 0):
         return None
-    rss = sum((y - y0 - slope * (x - x0)) ** 2 for x, y in points)
-    scatter = math.sqrt(rss / (n - 2))
     return QuickReading(zero, scatter / slope)
 
 

@@ -12,7 +12,7 @@ import math
 import numpy as np
 
 from analyse.basis import COLUMNS, regressors
-from analyse.square_root import SquareRootInformation
+from analyse.square_root import SquareRootInformation, triangle_of
 
 MIN_EFFECTIVE = 6.0      # effective readings before a segment may be closed
 MAX_EFFECTIVE = 40.0     # and at which it is closed in any case
@@ -202,8 +202,7 @@ class Pool:
 
     def take(self, segment: Segment) -> None:
         """Add one segment."""
-        stacked = np.vstack([self.triangle, segment.qr.rows])
-        self.triangle = np.linalg.qr(stacked, mode="r")
+        self.triangle = triangle_of(np.concatenate((self.triangle, segment.qr.rows)))
         self.count += segment.count
         self.kappa_sum += segment.kappa_sum
         self.own_rss += segment.own_rss()

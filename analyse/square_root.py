@@ -11,8 +11,10 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
+from scipy.linalg.lapack import dgeqrf
 
 
 @dataclass(frozen=True)
@@ -97,3 +99,29 @@ def solve_triangle(triangle: np.ndarray, count: int) -> Solution:
     return Solution(
         inverse @ triangle[:p, p], inverse @ inverse.T, float(triangle[p, p] ** 2), count
     )
+
+
+def triangle_of(rows: np.ndarray) -> np.ndarray:
+    """The triangle (k, k) of at least k rows of k columns, by LAPACK's QR without its frame."""
+    k = rows.shape[1]
+    factored = dgeqrf(rows)[0]
+    return factored[:k] * _upper(k)
+
+
+@lru_cache(maxsize=8)
+def _upper(k: int) -> np.ndarray:
+    return np.triu(np.ones((k, k)))
+
+
+def inverse_root(rows: Sequence[Sequence[float]], p: int) -> list[list[float]] | None:
+    """Inverse of the leading p x p upper triangle; None if it is singular to 1e-9."""
+    inverse = [[0.0] * p for _ in range(p)]
+    for j in range(p):
+        norm = math.sqrt(sum(rows[i][j] ** 2 for i in range(j + 1)))
+        if not abs(rows[j][j]) > 1e-9 * norm:
+            return None
+        inverse[j][j] = 1.0 / rows[j][j]
+        for i in range(j - 1, -1, -1):
+            total = sum(rows[i][k] * inverse[k][j] for k in range(i + 1, j + 1))
+            inverse[i][j] = -total / rows[i][i]
+    return inverse

@@ -133,7 +133,7 @@ def fit_transport(
     if line is not None:
         bent = fit_columns(hall, HALL_BENT + columns[2:], excess[0] > 1)
         slope = _coefficient(line, 1, bent, phis.slope, SLOPE_SHARE * alpha, hall.effective)
-        offset = float(line.theta[0])
+        offset = line.theta[0]
     columns = longitudinal_columns(along)
     level = fit_columns(along, columns, excess[1] > 1)
     rho_0 = None
@@ -151,8 +151,8 @@ def fit_transport(
 def _bend(fit: LineFit, bent: LineFit, j: int) -> tuple[float, float]:
     """The difference that the richer model makes, and its standard error: the plain model is
     efficient, so the variance of the difference is the difference of the variances."""
-    extra = float(bent.inverse[j, j] - fit.inverse[j, j])
-    return float(bent.theta[j] - fit.theta[j]), math.sqrt(max(0.0, bent.variance * extra))
+    extra = bent.inverse(j) - fit.inverse(j)
+    return bent.theta[j] - fit.theta[j], math.sqrt(max(0.0, bent.variance * extra))
 
 
 def _coefficient(
@@ -163,6 +163,6 @@ def _coefficient(
     if bent is not None and bent.nu > 2:
         bend, bend_error = _bend(fit, bent, j)
     return Coefficient(
-        float(fit.theta[j]), fit.standard_error(j), fit.half_width(j, phi, alpha),
+        fit.theta[j], fit.standard_error(j), fit.half_width(j, phi, alpha),
         bend, bend_error, effective, math.sqrt(fit.variance), order,
     )

@@ -11,8 +11,10 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import lru_cache
 
-import numpy as np
+from scipy.stats import f as f_distribution
+from scipy.stats import t as t_distribution
 
 from analyse.basis import HALL_LINE, SLOPING, regressors
 from analyse.line_fit import LineFit, fit_columns
@@ -20,12 +22,13 @@ from analyse.segments import Pool, Segment
 from analyse.setup import Window
 
 CORE_EFFECTIVE = 16.0        # effective readings before a segment is compared with them
-SIGNIFICANT = 4.5            # standard errors
-ROUGH = 3.0                  # times the variance of the others
+ODD_LEVEL = 1e-7             # chance of calling a good segment odd; many are looked at, often
 TOLERANCE = {"longitudinal": 0.03, "hall": 0.01}
 """Departures smaller than this share of rho_0, or of the Hall resistivity, do not end the window:
 what they do to the numbers is what the model part of the uncertainty is for."""
 MODEL = {"longitudinal": SLOPING, "hall": HALL_LINE}
+WANTED = {"longitudinal": 0, "hall": 1}
+"""The coefficient that the window is for: rho at zero field, and the slope."""
 
 
 @dataclass(frozen=True)
@@ -47,22 +50,33 @@ def agrees(segment: Segment, pool: Pool, role: str, scale_T: float) -> bool:
     if fit is None or fit.nu < 4:
         return True
     u = segment.mean_field_T / scale_T
-    row = np.array(regressors(role, u))[list(columns)]
-    predicted = float(row @ fit.theta)
+    predicted, leverage = fit.predict(regressors(role, u))
     limit = TOLERANCE[role] * _size(fit, role, u)
-    variance = fit.variance * (1.0 / segment.effective + float(row @ fit.inverse @ row) )
+    variance = fit.variance * (1.0 / segment.count + leverage)
     departure = abs(segment.mean() - predicted)
-    if departure > limit and departure > SIGNIFICANT * math.sqrt(variance):
+    if departure > limit and departure > _t_limit(int(fit.nu)) * math.sqrt(variance):
         return False
-    if segment.own_dof() > 2 * segment.kappa:
+    dof = segment.own_dof() / segment.kappa
+    if dof > 2:
         own = segment.own_rss() / segment.own_dof()
-        if own > ROUGH * fit.s2 and math.sqrt(own - fit.s2) > limit:
+        rough = own - fit.s2
+        if rough > limit**2 and own > _f_limit(int(dof), int(fit.nu)) * fit.s2:
             return False
     return True
 
 
+@lru_cache(maxsize=4096)
+def _t_limit(nu: int) -> float:
+    return float(t_distribution.isf(ODD_LEVEL / 2, nu))
+
+
+@lru_cache(maxsize=4096)
+def _f_limit(one: int, two: int) -> float:
+    return float(f_distribution.isf(ODD_LEVEL, one, two))
+
+
 def _size(fit: LineFit, role: str, u: float) -> float:
-    return abs(float(fit.theta[0])) if role == "longitudinal" else abs(float(fit.theta[1]) * u)
+    return abs(fit.theta[0]) if role == "longitudinal" else abs(fit.theta[1] * u)
 
 
 def homogeneous_run(
@@ -101,7 +115,7 @@ def _grow(
 
 def _information(pool: Pool, role: str) -> float:
     fit = fit_columns(pool, MODEL[role])
-    return 0.0 if fit is None else fit.z2(1)
+    return 0.0 if fit is None else fit.z2(WANTED[role])
 
 
 def find_bounds(

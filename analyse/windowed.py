@@ -51,10 +51,12 @@ class WindowedFit:
         self.bounds = Bounds(given.low_T or 0.0, high)
         self.excess = (1.0, 1.0)
         self._searched = 0
+        self._now: tuple[Pool, Pool] | None = None
         self._time_s = [math.inf, -math.inf]
 
     def add(self, sweep: int, pair: Pair) -> None:
         """Take one usable pair."""
+        self._now = None
         self._time_s = [min(self._time_s[0], pair.time_s), max(self._time_s[1], pair.time_s)]
         kappa = self._inflation[pair.role].next(pair.time_s, pair.stages)
         if self._segments[pair.role].add(sweep, pair.time_s, pair.field_T, pair.rho_ohm, kappa):
@@ -62,7 +64,9 @@ class WindowedFit:
 
     def pools(self) -> tuple[Pool, Pool]:
         """(hall, longitudinal): all in the window, the growing segments included."""
-        return self._with_active("hall"), self._with_active("longitudinal")
+        if self._now is None:
+            self._now = (self._with_active("hall"), self._with_active("longitudinal"))
+        return self._now
 
     @property
     def window_T(self) -> tuple[float, float] | None:
