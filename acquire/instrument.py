@@ -15,7 +15,6 @@ threads. Tried on TCP sockets and serial lines; USB and GPIB (``_read_message``)
 from __future__ import annotations
 
 import gc
-import re
 import socket
 import time
 import warnings
@@ -30,7 +29,8 @@ from pyvisa.resources import MessageBasedResource, SerialInstrument, TCPIPSocket
 
 from acquire.config.reader import ReaderSection, SerialLine
 from acquire.errors import BadReply, ConnectError, InstrumentError, ReplyTimeout, SessionLost
-from acquire.reply import escaped, fits
+from acquire.identity import identity_problem
+from acquire.reply import escaped
 from acquire.socket_line import (
     connection_problem,
     is_readable,
@@ -43,6 +43,7 @@ OPEN_TIMEOUT_MS = 2000  # a second try at reaching the host comes after 1 s on T
 LONGEST_REPLY = 16_384  # bytes; far above 64 numbers, far below what hurts
 LONGEST_QUESTION = 4096  # bytes; pyvisa-py would wait for ever between two pieces of a longer one
 _SLICE_MS = 100  # how finely a wait on a line that can't be watched is cut
+_POLL_S = 0.001
 _GULP = 64  # bytes read at once there; many more would take pyvisa-py longer than a slice
 
 _managers: Counter[str] = Counter()  # pyvisa has one manager a library: the last user closes it
@@ -82,7 +83,7 @@ class Instrument:
             identity = self.ask(self.section.identity.query)
         except InstrumentError as error:
             raise ConnectError(f"{self.section.resource}: {error}") from error
-        problem = self._stranger(identity, known_identity)
+        problem = identity_problem(self.section.identity, identity, known_identity)
         if problem is not None:
             self.close()
             raise ConnectError(f"{self.section.resource}: {problem}")
@@ -156,17 +157,6 @@ class Instrument:
         if self._socket is not None:
             self._socket.settimeout(self._timeout_s)  # a full line would block a write for ever
 
-    def _stranger(self, identity: str, known: str | None) -> str | None:
-        asked, pattern = self.section.identity.query, self.section.identity.pattern
-        who = f"{asked!r} was answered by {escaped(identity)!r}"
-        if not fits(identity) or identity.strip() in ("", asked.strip()):
-            return f"{who}, which proves nothing; mend identity.query, or switch the echo off"
-        if not re.search(pattern, identity):
-            return f"{who}, which does not match {pattern!r}; is it the right instrument?"
-        if known is not None and identity != known:
-            return f"{who}, but the run began with {escaped(known)!r}; put that one back"
-        return None
-
     def _expect_silence(self) -> None:
         """Bytes that wait before a question is asked answer an earlier one."""
         if self._socket is not None:
@@ -203,8 +193,10 @@ class Instrument:
 
     def _read_some(self, deadline: float) -> bytes:
         """What is there, up to a terminator; nothing if nothing comes in time or in a slice."""
+        if isinstance(self._resource, SerialInstrument):
+            return self._read_serial(deadline)
         if self._socket is None:
-            return self._read_slice()
+            return self._read_byte()
         if not is_readable(self._socket, max(deadline - self._now(), 0.0)):
             return b""
         line, end, _ = waiting_bytes(self._socket).partition(self._end[-1:])
@@ -212,19 +204,23 @@ class Instrument:
         # asked for more, the library keeps the rest to itself and hands it out as an answer.
         return bytes(self._resource.read_bytes(len(line + end)))
 
-    def _read_slice(self) -> bytes:
-        """One byte, and those that wait behind it: asking for more would lose what came."""
+    def _read_serial(self, deadline: float) -> bytes:
+        """Waits by itself: pyvisa-py counts by the wall clock, which may be set back."""
+        waiting = self._resource.bytes_in_buffer
+        while not waiting and self._now() < deadline:
+            time.sleep(_POLL_S)
+            waiting = self._resource.bytes_in_buffer
+        size = min(waiting, _GULP)
+        return bytes(self._resource.read_bytes(size, break_on_termchar=True)) if size else b""
+
+    def _read_byte(self) -> bytes:
+        """One byte, for asking for more would lose what came before a timeout."""
         try:
-            first = bytes(self._resource.read_bytes(1))
+            return bytes(self._resource.read_bytes(1))
         except pyvisa.VisaIOError as error:
             if error.error_code == StatusCode.error_timeout:
                 return b""
             raise
-        waiting = getattr(self._resource, "bytes_in_buffer", 0)
-        if first == self._end[-1:] or not waiting:
-            return first
-        more = self._resource.read_bytes(min(waiting, _GULP), break_on_termchar=True)
-        return first + bytes(more)
 
     def _read_message(self) -> bytes:
         """A reply over a bus that marks its end by itself (USB, GPIB, VXI-11)."""

@@ -321,6 +321,19 @@ def test_a_line_that_takes_nothing_more_is_given_up(scripted: ScriptedInstrument
     deaf.set()
 
 
+def test_a_wall_clock_that_stands_still_does_not_put_off_a_timeout(
+    opened: Callable[..., Instrument],
+    on_serial: Callable[..., Instrument],
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    """pyvisa-py ends its waits by the wall clock; set back by an hour it would wait an hour."""
+    lines = [opened(timeout_ms=SHORT_MS), on_serial(timeout_ms=SHORT_MS)]
+    monkeypatch.setattr(time, "time", lambda: 0.0)
+    for instrument in lines:
+        with pytest.raises(ReplyTimeout):
+            instrument.ask("SILENT?")
+
+
 def test_two_instruments_of_one_process_do_not_close_each_other(
     opened: Callable[..., Instrument],
 ) -> None:
