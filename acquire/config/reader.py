@@ -14,7 +14,8 @@ Unit = Literal["V", "A", "T", "Ohm", "K", "Hz", "s", "1"]
 class Value(Section):
     """One number in a reply. ``position`` counts the reply's fields from 1.
 
-    The journal keeps the number as read; number times ``scale`` is in ``unit``.
+    The journal keeps the number as read; number times ``scale`` is in ``unit``, and so are
+    ``lowest``, ``highest`` and ``overload_above`` (a magnitude).
     """
 
     name: Name
