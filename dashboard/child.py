@@ -12,6 +12,7 @@ from collections.abc import Callable, Sequence
 from contextlib import suppress
 
 LINES_KEPT = 20
+READY = "ready"  # what some processes write when they are; told from what they do, all the same
 
 
 class Child:
@@ -83,7 +84,7 @@ class Child:
     def _read(self) -> None:
         assert self._process.stdout is not None
         for line in self._process.stdout:
-            if text := line.rstrip():
+            if (text := line.rstrip()) and text != READY:
                 self._lines.append(text)
                 self._hear(text)
 

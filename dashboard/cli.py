@@ -15,6 +15,7 @@ import traceback
 from collections.abc import Sequence
 from importlib.metadata import version
 from pathlib import Path
+from typing import TypeAlias
 
 from acquire.config.problems import ConfigError
 from acquire.errors import RampsideError, UsageError
@@ -87,12 +88,12 @@ def parser() -> argparse.ArgumentParser:
     return root
 
 
-Commands = argparse._SubParsersAction  # argparse has no public name for it
+Commands: TypeAlias = "argparse._SubParsersAction[argparse.ArgumentParser]"  # no public name
 
 
 def _add(commands: Commands, name: str, summary: str, more: str = "") -> argparse.ArgumentParser:
     text = f"{summary[:1].upper()}{summary[1:]}. {more}".strip()
-    command: argparse.ArgumentParser = commands.add_parser(name, help=summary, description=text)
+    command = commands.add_parser(name, help=summary, description=text)
     command.add_argument(
         "--debug", action="store_true", help="show tracebacks and what the processes say"
     )
@@ -102,6 +103,12 @@ def _add(commands: Commands, name: str, summary: str, more: str = "") -> argpars
 def _add_demo(commands: Commands) -> None:
     more = "The same processes, sockets and VISA traffic as with real instruments."
     demo = _add(commands, "demo", "watch a ramp on a simulated laboratory", more)
+    demo.add_argument(
+        "--config",
+        metavar="CONFIG",
+        type=Path,
+        help="a rig with another [laboratory] than the one that comes along",
+    )
     _add_watching(demo)
 
 

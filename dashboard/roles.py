@@ -65,8 +65,8 @@ def laboratory_ports(rig: Rig) -> tuple[int, ...]:
     """The fixed ports of the simulated instruments; empty without a laboratory."""
     if rig.laboratory is None:
         return ()
-    instruments = (rig.laboratory.magnet, *rig.laboratory.lockins)
-    return tuple(instrument.port for instrument in instruments if instrument.port)
+    ports = [rig.laboratory.magnet.port, *(lockin.port for lockin in rig.laboratory.lockins)]
+    return tuple(port for port in ports if port)
 
 
 def with_ports(config: bytes, new: Mapping[int, int]) -> bytes:

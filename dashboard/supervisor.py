@@ -37,11 +37,20 @@ class Role:
 
 @dataclass(frozen=True)
 class ProcessNews:
-    """Something that happened to a process, with the sentence for it."""
+    """Something that happened to a process, with the sentence for it.
+
+    ``last_words`` is the last line that it wrote before it died, which ``hear`` has had already.
+    """
 
     role: str
     happening: Happening
     text: str
+    last_words: str = ""
+
+    @property
+    def in_full(self) -> str:
+        """The sentence with the last words."""
+        return f"{self.text} (it said: {self.last_words})" if self.last_words else self.text
 
 
 @dataclass
@@ -147,7 +156,7 @@ class Supervisor:
     def _look_at(self, post: _Post, now: float) -> None:
         assert post.child is not None
         if (status := post.child.status) is not None:
-            self._died(post, "died", _manner(status, post.child.last_words()))
+            self._died(post, "died", _manner(status), post.child.last_words())
         elif post.state == "starting" and post.role.ready(post.started_s):
             post.state = "ready"
             again = f" again, {now - post.started_s:.1f} s after its start" if post.restarts else ""
@@ -156,12 +165,15 @@ class Supervisor:
             post.child.kill()
             self._died(post, "not_ready", f"was not ready within {post.role.ready_within_s:g} s")
 
-    def _died(self, post: _Post, happening: Happening, manner: str) -> None:
+    def _died(
+        self, post: _Post, happening: Happening, manner: str, last_words: str = ""
+    ) -> None:
         now = self.clock()
         pause_s = post.pauses.after(now - post.started_s)
         self._end(post)
         post.state, post.again_s = "waiting", now + pause_s
-        self._tell(post, happening, f"{manner}; it is started again in {pause_s:g} s")
+        text = f"{manner}; it is started again in {pause_s:g} s"
+        self._tell(post, happening, text, last_words)
 
     def _end(self, post: _Post) -> None:
         if post.child is not None:
@@ -169,13 +181,14 @@ class Supervisor:
             post.child = None
         post.state = "ended"
 
-    def _tell(self, post: _Post, happening: Happening, text: str) -> None:
-        self.tell(ProcessNews(post.role.name, happening, f"{post.role.name} {text}"))
+    def _tell(
+        self, post: _Post, happening: Happening, text: str, last_words: str = ""
+    ) -> None:
+        name = post.role.name
+        self.tell(ProcessNews(name, happening, f"{name} {text}", last_words))
 
 
-def _manner(status: int, last_words: str) -> str:
+def _manner(status: int) -> str:
     if status < 0:
-        manner = f"was killed by signal {-status} ({signal.strsignal(-status) or 'unnamed'})"
-    else:
-        manner = f"ended with status {status}"
-    return f"{manner}, saying: {last_words}" if last_words else manner
+        return f"was killed by signal {-status} ({signal.strsignal(-status) or 'unnamed'})"
+    return f"ended with status {status}"

@@ -118,6 +118,7 @@ def line(progress: Progress, moment: Moment) -> str:
     for name, bar in progress.summary.bars.items():
         numbers = "  ".join(numbers_of(bar))
         parts.append(f"{name}: {numbers}  {_state(bar)}")
+    parts += [f"{name}: {why}" for name, why in progress.trouble.items()]
     parts += [f"{name} {state}" for name, state in moment.states.items() if state != "ready"]
     return " | ".join(parts)
 

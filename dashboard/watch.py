@@ -4,18 +4,19 @@ from __future__ import annotations
 
 import time
 import uuid
+from collections.abc import Mapping
 from contextlib import AbstractContextManager
 from dataclasses import dataclass
 from pathlib import Path
 from threading import Event
 from typing import Protocol
 
-from acquire.bus import Endpoint, Subscriber, ask, free_address, free_endpoints
+from acquire.bus import Endpoint, Subscriber, ask, free_endpoints
 from acquire.bus.addresses import check_loopback
 from acquire.config import Rig
 from acquire.errors import BusError, UsageError
 from acquire.readings import stream_of
-from acquire.run_folder import RunFolder, create_run
+from acquire.run_folder import LiveRun, RunFolder, create_run
 from analyse.estimate_table import ESTIMATES, EVENTS
 from dashboard import roles
 from dashboard.browser import open_page
@@ -30,8 +31,9 @@ from dashboard.words import told
 
 LOOK_S = 0.2  # the longest wait between two looks at signals and processes
 SHOW_S = 0.25
-# The end, in order, has 3 s in all; these are the limits of its steps.
-READERS_END_S, EVENTS_END_S, FINISH_S, OTHERS_END_S = 0.8, 0.1, 0.9, 0.4
+# The end, in order, has 3 s in all: so much for all steps, and at most so much for each but the
+# last, which has what is left.
+END_S, READERS_END_S, EVENTS_END_S, FINISH_S = 2.4, 0.8, 0.1, 0.9
 HUNG_S = 60.0  # a reader says at least once a second that it has nothing, so it hangs by then
 
 
@@ -54,8 +56,8 @@ class Moment:
     """What the view shows beside the progress: time since the run's start, and the processes."""
 
     time_s: float
-    states: dict[str, str]
-    restarts: dict[str, int]
+    states: Mapping[str, str]
+    restarts: Mapping[str, int]
 
 
 class View(AbstractContextManager["View"], Protocol):
@@ -79,9 +81,10 @@ def watch(plan: WatchPlan, view: View, wish: Event) -> tuple[RunFolder, Summary]
             "This configuration has a table, not readers: rampside replay TABLE --config CONFIG."
         )
     port = page_port(plan.port)
-    endpoints = endpoints_of(plan.rig)
+    endpoints, requests = endpoints_of(plan.rig)
     run = create_run(plan.rig, plan.config, list(run_tables(plan.rig).values()), plan.folder)
-    watcher = _Watcher(plan, run, endpoints, port, view)
+    live = run.write_live(endpoints, requests)
+    watcher = _Watcher(plan, run, live, port, view)
     try:
         watcher.go_on(wish)
     finally:
@@ -89,9 +92,10 @@ def watch(plan: WatchPlan, view: View, wish: Event) -> tuple[RunFolder, Summary]
     return run, watcher.progress.summary
 
 
-def endpoints_of(rig: Rig) -> dict[str, Endpoint]:
-    """Where each stream of a run meets its listeners: as configured for readers elsewhere.
+def endpoints_of(rig: Rig) -> tuple[dict[str, Endpoint], str]:
+    """Where each stream meets its listeners, and the address of the estimator's inbox.
 
+    As configured for readers elsewhere, free addresses for all others, all different.
     Raises BusError for a configured address that is not on loopback.
     """
     elsewhere = {
@@ -102,33 +106,28 @@ def endpoints_of(rig: Rig) -> dict[str, Endpoint]:
     for endpoint in elsewhere.values():
         check_loopback(endpoint.publish)
         check_loopback(endpoint.answer)
-    return elsewhere | free_endpoints(name for name in run_tables(rig) if name not in elsewhere)
+    free = free_endpoints([*(name for name in run_tables(rig) if name not in elsewhere), "requests"])
+    requests = free.pop("requests").answer
+    return elsewhere | free, requests
 
 
 class _Watcher:
     """One run under way: the processes, what they say, and when to stop."""
 
     def __init__(
-        self,
-        plan: WatchPlan,
-        run: RunFolder,
-        endpoints: dict[str, Endpoint],
-        port: int,
-        view: View,
+        self, plan: WatchPlan, run: RunFolder, live: LiveRun, port: int, view: View
     ) -> None:
-        self._plan, self._run, self._view = plan, run, view
+        self._plan, self._run, self._live, self._view = plan, run, live, view
         self._address = f"http://{LOOPBACK}:{port}"
-        self._requests = free_address()
-        self._start = run.write_live(endpoints, self._requests).monotonic_start
         self.progress = Progress(run.run_id, plan.rig)
         ramp = plan.rig.ramp
         self._ramp_end = None if ramp is None else RampEnd(ramp.path_T, ramp.duration_s)
         self._field_time_s = -1.0
         self._said_over = False
-        self._news_at = dict.fromkeys(endpoints, time.monotonic())
-        self._subscriber = Subscriber(run.run_id, endpoints, run_tables(plan.rig))
+        self._news_at = dict.fromkeys(live.endpoints, time.monotonic())
+        self._subscriber = Subscriber(run.run_id, live.endpoints, run_tables(plan.rig))
         self._health = self._subscriber.health()
-        self._events = EventSender(self._requests, ask)
+        self._events = EventSender(live.requests, ask)
         self._supervisor = Supervisor(self._roles(port), self._process_news, self._hear)
 
     def go_on(self, wish: Event) -> None:
@@ -155,12 +154,13 @@ class _Watcher:
         self._catch_up()
 
     def _end_in_order(self) -> None:
+        deadline = time.monotonic() + END_S
         readers = [roles.reader_role(name) for name in roles.local_readers(self._plan.rig)]
         killed = self._supervisor.stop(readers, READERS_END_S)
         unsent = self._events.close(EVENTS_END_S)
         finished = self._finish_estimates()
         others = [name for name in self._supervisor.names if name not in readers]
-        killed += self._supervisor.stop(others, OTHERS_END_S)
+        killed += self._supervisor.stop(others, deadline - time.monotonic())
         if killed:
             self._view.say(f"Had to be killed, did not end in time: {', '.join(killed)}.")
         if unsent:
@@ -184,7 +184,7 @@ class _Watcher:
             return False
         message = {"kind": "run", "code": "finish", "text": "the run ends", "id": uuid.uuid4().hex}
         try:
-            reply = ask(self._requests, message, FINISH_S)
+            reply = ask(self._live.requests, message, FINISH_S)
         except BusError:
             return False
         if reply.get("differing"):
@@ -242,11 +242,11 @@ class _Watcher:
 
     def _time_is_up(self) -> bool:
         seconds = self._plan.seconds
-        return seconds is not None and time.monotonic() - self._start >= seconds
+        return seconds is not None and time.monotonic() - self._live.monotonic_start >= seconds
 
     def _moment(self) -> Moment:
         states = {name: self._supervisor.state(name) for name in self._supervisor.names}
-        return Moment(time.monotonic() - self._start, states, self._supervisor.restarts)
+        return Moment(time.monotonic() - self._live.monotonic_start, states, self._supervisor.restarts)
 
     def _process_news(self, news: ProcessNews) -> None:
         if news.happening == "ready":
@@ -255,8 +255,7 @@ class _Watcher:
             return
         self.progress.news.append(news.text)
         self._view.say(f"{news.text}.")
-        self._events.send("process", news.happening, news.text)
+        self._events.send("process", news.happening, news.in_full)
 
     def _hear(self, role: str, line: str) -> None:
-        if line != "ready":
-            self._view.say(line if line.startswith(f"{role}:") else f"{role}: {line}")
+        self._view.say(line if line.startswith(f"{role}:") else f"{role}: {line}")

@@ -112,8 +112,8 @@ def test_one_that_cannot_live_leaves_the_others_working(wait_for: Wait) -> None:
                 lambda deaths=deaths: stand.happened().count("bad: died") == deaths, "it dies again"
             )
             stand.now += 10.0
-        assert "ended with status 1, saying: no such instrument" in stand.news[-1].text
-        assert "started again in 4 s" in stand.news[-1].text
+        assert "ended with status 1; it is started again in 4 s" in stand.news[-1].text
+        assert "it said: no such instrument" in stand.news[-1].in_full
         assert stand.supervisor.state("good") == "ready"
 
 

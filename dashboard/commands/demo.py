@@ -4,8 +4,10 @@ from __future__ import annotations
 
 import argparse
 from importlib.resources import files
+from pathlib import Path
 
-from acquire.config import parse
+from acquire.config import load, parse
+from acquire.errors import UsageError
 from dashboard.commands.watch import run_plan
 from dashboard.ports import free_ports, is_free
 from dashboard.roles import laboratory_ports, with_ports
@@ -16,10 +18,10 @@ DEMO = "demo.toml"
 
 def run(arguments: argparse.Namespace) -> int:
     """Start the laboratory, then do what ``watch`` does."""
-    config = with_free_ports((files("configs") / DEMO).read_bytes())
+    config, source = _configuration(arguments.config)
     return run_plan(
         WatchPlan(
-            parse(config, DEMO),
+            parse(config, source),
             config,
             arguments.folder,
             arguments.port,
@@ -31,7 +33,14 @@ def run(arguments: argparse.Namespace) -> int:
     )
 
 
-def with_free_ports(config: bytes) -> bytes:
-    """The configuration with other ports where those of its instruments are taken."""
-    taken = [port for port in laboratory_ports(parse(config, DEMO)) if not is_free(port)]
-    return with_ports(config, dict(zip(taken, free_ports(len(taken)))))
+def _configuration(path: Path | None) -> tuple[bytes, str]:
+    """The configuration, with other ports where those of its instruments are taken."""
+    if path is None:
+        config, source = (files("configs") / DEMO).read_bytes(), DEMO
+    else:
+        config, source = load(path)[1], str(path)
+    rig = parse(config, source)
+    if rig.laboratory is None:
+        raise UsageError(f"{source} has no [laboratory]: rampside watch {source} is what it is for.")
+    taken = [port for port in laboratory_ports(rig) if not is_free(port)]
+    return with_ports(config, dict(zip(taken, free_ports(len(taken))))), source

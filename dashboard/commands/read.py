@@ -93,7 +93,8 @@ class _One:
         self._supervisor = Supervisor(
             [Role(self._role, command, self._ready)], self._tell, lambda role, line: _say(line)
         )
-        self._count, self._newest, self._shown = 0, None, 0.0
+        self._newest: Row | None = None
+        self._count, self._shown = 0, 0.0
 
     def start(self) -> None:
         """Start reading, and say where."""
@@ -108,7 +109,7 @@ class _One:
         """Take what has come, look after the process, say how it goes now and then."""
         for _, row in self._subscriber.receive(LOOK_S):
             self._count += row[3] == "ok"
-            self._newest: Row | None = row
+            self._newest = row
         self._supervisor.poll()
         if self._newest is not None and time.monotonic() - self._shown >= LINE_EVERY_S:
             self._shown = time.monotonic()
