@@ -161,7 +161,9 @@ class Estimator:
             if rho_xx is not None and rho_xy is not None:
                 self._quick.add(field_T, rho_xx, rho_xy)
         hall, along = self._fit.pools()
-        fit = fit_transport(self.setup, hall, along, self._phis, self._fit.excess)
+        fit = fit_transport(
+            self.setup, hall, along, self._fit.inner_pools, self._phis, self._fit.excess
+        )
         return self._estimate(time_s, field_T, rho_xx, rho_xy, fit)
 
     def _estimate(

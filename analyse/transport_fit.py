@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 from scipy.stats import f as f_distribution
 
-from analyse.basis import CURVED, HALL_BENT, HALL_LINE, LEVEL, OTHER_PARITY, SLOPING
+from analyse.basis import CUBIC, CURVED, HALL_BENT, HALL_LINE, LEVEL, OTHER_PARITY, SLOPING
 from analyse.confidence import best_phi
 from analyse.line_fit import LineFit, fit_columns, lack_of_fit
 from analyse.segments import Pool
@@ -123,9 +124,11 @@ def noise_excess(pool: Pool, columns: tuple[int, ...]) -> float:
 
 
 def fit_transport(
-    setup: Setup, hall: Pool, along: Pool, phis: Phis, excess: tuple[float, float]
+    setup: Setup, hall: Pool, along: Pool, inner: Sequence[Pool], phis: Phis,
+    excess: tuple[float, float],
 ) -> TransportFit:
-    """Both fits. ``excess``: noise factors (hall, longitudinal); above 1 they widen."""
+    """Both fits. ``excess``: noise factors (hall, longitudinal); above 1 they widen. ``inner``:
+    smaller parts of the window, from which rho_0 is taken where that makes it more certain."""
     alpha = 1.0 - setup.target.confidence
     columns = hall_columns(hall)
     line = fit_columns(hall, columns, excess[0] > 1)
@@ -134,18 +137,29 @@ def fit_transport(
         bent = fit_columns(hall, HALL_BENT + columns[2:], excess[0] > 1)
         slope = _coefficient(line, 1, bent, phis.slope, SLOPE_SHARE * alpha, hall.effective)
         offset = line.theta[0]
-    columns = longitudinal_columns(along)
-    level = fit_columns(along, columns, excess[1] > 1)
-    rho_0 = None
-    if level is not None:
-        odd = tuple(column for column in columns if column == OTHER_PARITY)
-        order = len(columns) - len(odd) - 1
-        richer = ((SLOPING, CURVED, CURVED)[order]) + odd
-        bent = fit_columns(along, richer, excess[1] > 1)
-        rho_0 = _coefficient(
-            level, 0, bent, phis.rho_0, (1 - SLOPE_SHARE) * alpha, along.effective, order
-        )
+    level = (1 - SLOPE_SHARE) * alpha
+    parts = [zero_field(along, excess[1] > 1, phis.rho_0, level)]
+    for pool in inner:
+        part_excess = excess[1] > 1 and noise_excess(pool, longitudinal_columns(pool)) > 1
+        parts.append(zero_field(pool, part_excess, phis.rho_0, level))
+    rho_0 = min((part for part in parts if part is not None), key=_total, default=None)
     return TransportFit(slope, offset, rho_0, excess[0], excess[1])
+
+
+def zero_field(pool: Pool, excess: bool, phi: float, alpha: float) -> Coefficient | None:
+    """The longitudinal resistivity at zero field from one pool."""
+    columns = longitudinal_columns(pool)
+    fit = fit_columns(pool, columns, excess)
+    if fit is None:
+        return None
+    odd = tuple(column for column in columns if column == OTHER_PARITY)
+    order = len(columns) - len(odd) - 1
+    bent = fit_columns(pool, (SLOPING, CURVED, CUBIC)[order] + odd, excess)
+    return _coefficient(fit, 0, bent, phi, alpha, pool.effective, order)
+
+
+def _total(part: Coefficient) -> float:
+    return part.half_width + part.spread
 
 
 def _bend(fit: LineFit, bent: LineFit, j: int) -> tuple[float, float]:

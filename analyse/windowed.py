@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 
+from analyse.basis import LEVEL, OTHER_PARITY
 from analyse.lockin import LockinFilter
 from analyse.pairing import Pair
 from analyse.segments import Pool, Segments
@@ -12,6 +13,9 @@ from analyse.transport_fit import hall_columns, longitudinal_columns, noise_exce
 from analyse.window import Bounds, agrees, find_bounds
 
 ROLES = ("hall", "longitudinal")
+HALVINGS = 5
+MIN_INNER = 30.0
+"""Effective readings that a part of the window needs."""
 REACH = 0.5
 """Zero field is in reach when the window begins below this share of its upper end."""
 
@@ -52,6 +56,7 @@ class WindowedFit:
         self.excess = (1.0, 1.0)
         self._searched = 0
         self._now: tuple[Pool, Pool] | None = None
+        self._inner: list[Pool] = []
         self._time_s = [math.inf, -math.inf]
 
     def add(self, sweep: int, pair: Pair) -> None:
@@ -67,6 +72,12 @@ class WindowedFit:
         if self._now is None:
             self._now = (self._with_active("hall"), self._with_active("longitudinal"))
         return self._now
+
+    @property
+    def inner_pools(self) -> list[Pool]:
+        """Longitudinal readings from ever smaller parts of the window, down to zero field; empty
+        while the whole window shows no bend and no excess of noise."""
+        return self._inner
 
     @property
     def window_T(self) -> tuple[float, float] | None:
@@ -119,6 +130,23 @@ class WindowedFit:
             noise_excess(hall, hall_columns(hall)),
             noise_excess(along, longitudinal_columns(along)),
         )
+        self._inner = self._halve(along)
+
+    def _halve(self, along: Pool) -> list[Pool]:
+        plain = longitudinal_columns(along)[:2] in (LEVEL, (*LEVEL, OTHER_PARITY))
+        if plain and self.excess[1] == 1.0:
+            return []
+        pools, high_T = [], along.high_T
+        for _ in range(HALVINGS):
+            high_T /= 2
+            pool = Pool()
+            for segment in self._segments["longitudinal"].closed:
+                if segment.high_T <= high_T and self.bounds.holds(segment):
+                    pool.take(segment)
+            if pool.effective < MIN_INNER or pool.groups < 4:
+                break
+            pools.append(pool)
+        return pools
 
     def _search(self) -> None:
         closed = {role: one.closed for role, one in self._segments.items()}
