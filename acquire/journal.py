@@ -54,7 +54,7 @@ class Journal:
         self._lock = threading.Lock()
         self._sync_lock = threading.Lock()
         self._unsure = False  # bytes after _end() may be left of a write that failed
-        self._unsynced = False
+        self._unsynced = True  # a killed predecessor may have left rows that are not on disk yet
         try:
             self._fd = os.open(
                 self.path, os.O_RDWR | os.O_APPEND | os.O_CREAT | os.O_CLOEXEC, 0o644

@@ -240,6 +240,15 @@ def test_a_failed_sync_is_told_and_tried_again(path, monkeypatch):
         assert len(synced) == 1
 
 
+def test_rows_of_a_killed_predecessor_are_synced(path, monkeypatch):
+    write(path)
+    synced = []
+    monkeypatch.setattr(os, "fsync", synced.append)
+    with Journal(path, TABLE) as journal:
+        journal.sync()
+        assert len(synced) == 1
+
+
 def test_a_closed_journal_takes_nothing(path):
     journal = Journal(path, TABLE)
     journal.close()
