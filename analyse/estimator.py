@@ -7,7 +7,7 @@ from collections.abc import Iterable
 from dataclasses import dataclass
 
 from analyse.budget import combined, systematic_lines
-from analyse.cautions import FitFacts, RoleWatch, fit_cautions
+from analyse.cautions import FieldWatch, FitFacts, RoleWatch, fit_cautions
 from analyse.drude import density_from_slope, mobility_from, scattering_time_from, transport
 from analyse.estimate import BudgetLine, Caution, Estimate, Measured, Moment
 from analyse.forecast import State, field_to_target
@@ -79,6 +79,7 @@ class Estimator:
         self._systematic = systematic_lines(bar, self.setup)
         self._sweeps = Sweeps(max(2e-3, 0.01 * self._scale_T))
         self._watch = {role: RoleWatch(role) for role in ("longitudinal", "hall")}
+        self._field_watch = FieldWatch(ramp.rate_T_per_s if ramp is not None else None)
         self._quick = QuickReadings()
         self._field_points = 0
         self._point = _Point(set(), [], {"longitudinal": [], "hall": []})
@@ -148,7 +149,9 @@ class Estimator:
         self._last_rate = pair.rate_T_per_s
         self._point.fields.append(pair.field_T)
         self._point.rho[pair.role].append(pair.rho_ohm)
-        self._fit.add(self._sweeps.add(pair.field_T), pair)
+        kappa = self._fit.add(self._sweeps.add(pair.field_T), pair)
+        if pair.role == "hall":
+            self._field_watch.add(pair, kappa)
 
     def _complete(self, time_s: float) -> Estimate:
         point, self._point = self._point, _Point(set(), [], {"longitudinal": [], "hall": []})
@@ -252,8 +255,11 @@ class Estimator:
             fit, self._fit.bounds, self._farthest_T, carriers,
             density.value if density else None, mobility.value if mobility else None,
             self._quick.density, self._quick.mobility,
+            self._fit.window_T[1] if self._fit.window_T is not None else None, self._fit.shapes,
         )
+        slope = fit.slope.value / self._scale_T if density and fit.slope else None
         found = [c for watch in self._watch.values() for c in watch.cautions()]
+        found += self._field_watch.cautions(slope, facts.bounds_high_T)
         return (*found, *fit_cautions(facts, self.setup))
 
     def _forecast(

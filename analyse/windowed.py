@@ -9,6 +9,7 @@ from analyse.lockin import LockinFilter
 from analyse.pairing import Pair
 from analyse.segments import Pool, Segments
 from analyse.setup import Setup
+from analyse.shapes import Shapes, fall_off, straight, sweeps_apart
 from analyse.transport_fit import hall_columns, longitudinal_columns, noise_excess
 from analyse.window import Bounds, agrees, find_bounds
 
@@ -57,15 +58,17 @@ class WindowedFit:
         self._searched = 0
         self._now: tuple[Pool, Pool] | None = None
         self._inner: list[Pool] = []
+        self.shapes = Shapes()
         self._time_s = [math.inf, -math.inf]
 
-    def add(self, sweep: int, pair: Pair) -> None:
-        """Take one usable pair."""
+    def add(self, sweep: int, pair: Pair) -> float:
+        """Take one usable pair; returns its inflation by the filter."""
         self._now = None
         self._time_s = [min(self._time_s[0], pair.time_s), max(self._time_s[1], pair.time_s)]
         kappa = self._inflation[pair.role].next(pair.time_s, pair.stages)
         if self._segments[pair.role].add(sweep, pair.time_s, pair.field_T, pair.rho_ohm, kappa):
             self._closed(pair.role)
+        return kappa
 
     def pools(self) -> tuple[Pool, Pool]:
         """(hall, longitudinal): all in the window, the growing segments included."""
@@ -131,6 +134,17 @@ class WindowedFit:
             noise_excess(along, longitudinal_columns(along)),
         )
         self._inner = self._halve(along)
+        self.shapes = self._seen_shapes(hall, along)
+
+    def _seen_shapes(self, hall: Pool, along: Pool) -> Shapes:
+        inside = [one for one in self._segments["hall"].closed if self.bounds.holds(one)]
+        return Shapes(
+            fall_off(along, "longitudinal", self._scale_T),
+            fall_off(hall, "hall", self._scale_T),
+            straight(along, "longitudinal", self._scale_T),
+            straight(hall, "hall", self._scale_T),
+            sweeps_apart(inside, self._scale_T),
+        )
 
     def _halve(self, along: Pool) -> list[Pool]:
         plain = longitudinal_columns(along)[:2] in (LEVEL, (*LEVEL, OTHER_PARITY))

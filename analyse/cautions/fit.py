@@ -1,86 +1,30 @@
-"""Cautions raised from the pairs of one Hall bar, and from its fit. Pure: numbers in, texts out."""
+"""Cautions about the fit: noise, bends, exchanged channels, sweeps apart, quick readings."""
 
 from __future__ import annotations
 
 import math
-from collections import deque
 from collections.abc import Iterator
 from dataclasses import dataclass
 
 from analyse.estimate import Caution
-from analyse.pairing import Pair
 from analyse.quick import HALL_MARK_OHM, QuickReading
 from analyse.setup import Setup, Target
+from analyse.shapes import Shapes
 from analyse.transport_fit import TransportFit
 from analyse.window import Bounds
 
-RECENT = 20
-MEMORY = 100
 MIN_EFFECTIVE = 20.0
 BEND_CERTAIN = 4.5
 """Standard errors beyond the target at which a bend is called one; it is looked at all the time."""
 
 
-class RoleWatch:
-    """Counts what became of one role's readings, and watches the recent ones."""
-
-    def __init__(self, role: str) -> None:
-        self.role = role
-        self.counts: dict[str, int] = {}
-        self._recent: deque[str] = deque(maxlen=MEMORY)
-        self._quadrature: deque[tuple[float, float]] = deque(maxlen=MEMORY)
-
-    def add(self, pair: Pair) -> None:
-        """Take note of one pair."""
-        self.counts[pair.kind] = self.counts.get(pair.kind, 0) + 1
-        self._recent.append(pair.kind)
-        if pair.kind == "ok" and pair.quadrature_ohm is not None:
-            self._quadrature.append((pair.rho_ohm, pair.quadrature_ohm))
-
-    def cautions(self) -> Iterator[Caution]:
-        """Cautions about this role's readings that hold now."""
-        recent = list(self._recent)
-        overloads = recent[-RECENT:].count("overload")
-        if overloads:
-            yield Caution(
-                "overload",
-                f"{overloads} of the last {len(recent[-RECENT:])} {self.role} readings are "
-                "overloads or out of range: set a larger range; they are not used.",
-            )
-        lost = recent[-RECENT:].count("lost")
-        if len(recent) >= RECENT and lost == RECENT:
-            yield Caution(
-                "stream_silent",
-                f"no usable {self.role} reading among the last {RECENT}: look at the instrument, "
-                "its line and its settings.",
-            )
-        bad = sum(kind in ("lost", "wild", "overload") for kind in recent)
-        if len(recent) >= MEMORY // 2 and bad > 0.1 * len(recent):
-            yield Caution(
-                "unusable_readings",
-                f"{bad} of the last {len(recent)} {self.role} readings can't be used (no answer, "
-                "overload, or wild): look at the line, the range and for interference.",
-            )
-        yield from self._phase()
-
-    def _phase(self) -> Iterator[Caution]:
-        if len(self._quadrature) < RECENT:
-            return
-        in_phase = math.sqrt(sum(x * x for x, _ in self._quadrature))
-        across = math.sqrt(sum(y * y for _, y in self._quadrature))
-        aligned = abs(sum(x * y for x, y in self._quadrature))
-        if across > 0.1 * in_phase and aligned > 0.7 * in_phase * across:
-            angle = math.degrees(math.atan2(across, in_phase))
-            yield Caution(
-                "phase_wrong",
-                f"the {self.role} signal stands {angle:.0f} degrees off the reading's phase: "
-                "check the lock-in's phase, the wiring and capacitive pick-up.",
-            )
+SAG_CLEAR = 4.5
+"""Standard errors at which a fall-off is called one."""
 
 
 @dataclass(frozen=True)
 class FitFacts:
-    """What the cautions about the fit look at; slope and offset in ohm and tesla."""
+    """What the cautions about the fit look at."""
 
     fit: TransportFit
     bounds: Bounds
@@ -90,12 +34,30 @@ class FitFacts:
     mobility_m2_per_V_s: float | None
     quick_density: QuickReading | None
     quick_mobility: QuickReading | None
+    bounds_high_T: float | None
+    shapes: Shapes
 
 
 def fit_cautions(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
     """Cautions about the fit that hold now."""
     yield from _noise(facts.fit, setup)
-    yield from _straightness(facts.fit, setup.target)
+    sagging = _sag_share(facts)
+    if sagging is not None:
+        yield Caution(
+            "current_sag",
+            f"both resistivities fall off alike with field, by {100 * sagging:.2g} % at the "
+            "window's end, as if the current did: the sample's resistance takes a share of a "
+            "source behind a series resistor; measure the current or state source and resistor.",
+        )
+    else:
+        yield from _straightness(facts.fit, setup.target)
+    if _exchanged(facts):
+        yield Caution(
+            "channels_exchanged",
+            "what is configured as longitudinal grows linearly from zero with the field and what "
+            "is configured as Hall does not: the two are exchanged, in wiring or configuration.",
+        )
+    yield from _sweeps(facts, setup.target)
     if facts.farthest_T > facts.bounds.high_T:
         yield Caution(
             "oscillations",
@@ -124,6 +86,48 @@ def _noise(fit: TransportFit, setup: Setup) -> Iterator[Caution]:
                 "white noise behind the stated filter would: drift, 1/f noise, mains, or a wrong "
                 "time constant; the intervals are widened.",
             )
+
+
+def _sag_share(facts: FitFacts) -> float | None:
+    """Share by which both fall off at the window's end, if they do so alike; else None."""
+    along, hall = facts.shapes.along_bend, facts.shapes.hall_bend
+    if along is None or hall is None:
+        return None
+    (a, error_a), (b, error_b) = along, hall
+    if a < SAG_CLEAR * error_a or b < SAG_CLEAR * error_b:
+        return None
+    if abs(a - b) > 3 * math.hypot(error_a, error_b) + 0.3 * max(a, b):
+        return None
+    return (a + b) / 2
+
+
+def _exchanged(facts: FitFacts) -> bool:
+    """Whether the longitudinal readings look like a Hall line and the Hall readings level."""
+    line, level = facts.shapes.along_line, facts.shapes.hall_line
+    if line is None or level is None:
+        return False
+    rise, rise_error, start = line
+    slope, _, offset = level
+    grows = abs(rise) > 10 * rise_error and abs(start) < 0.3 * abs(rise)
+    return grows and abs(slope) < 0.5 * abs(offset)
+
+
+def _sweeps(facts: FitFacts, target: Target) -> Iterator[Caution]:
+    apart = facts.shapes.sweeps_apart
+    if apart is None or not facts.bounds_high_T:
+        return
+    size = abs(apart.field_T)
+    if size < 5 * apart.error_T or size < 0.5 * target.sheet_density * facts.bounds_high_T:
+        return
+    cause = "the time constant or the poles are not what is stated, the clocks are apart, or the "
+    cause += "field meter is slow" if apart.delay_s is None else (
+        f"field meter is slow (as if by {abs(apart.delay_s):.2g} s)"
+    )
+    yield Caution(
+        "sweeps_differ",
+        f"up and down sweep are {1e3 * size:.3g} mT apart after the filter's delay was taken "
+        f"out: {cause}.",
+    )
 
 
 def _straightness(fit: TransportFit, target: Target) -> Iterator[Caution]:

@@ -1,0 +1,106 @@
+"""Shapes of the two curves inside the window, for the cautions: fall-off, rise, sweeps apart."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+from analyse.basis import HALL_BENT, HALL_LINE, SLOPING
+from analyse.line_fit import LineFit, fit_columns
+from analyse.segments import Pool, Segment
+
+Line = tuple[float, float, float]
+
+
+@dataclass(frozen=True)
+class Shapes:
+    """What was seen when a segment was last closed; see the functions here."""
+
+    along_bend: tuple[float, float] | None = None
+    hall_bend: tuple[float, float] | None = None
+    along_line: Line | None = None
+    hall_line: Line | None = None
+    sweeps_apart: SweepsApart | None = None
+
+
+@dataclass(frozen=True)
+class SweepsApart:
+    """Distance of two sweeps' Hall lines along the field, its standard error, and the delay in
+    seconds that would explain it (None if they went at different rates)."""
+
+    field_T: float
+    error_T: float
+    delay_s: float | None
+
+
+def fall_off(pool: Pool, role: str, scale_T: float) -> tuple[float, float] | None:
+    """(share by which a curve falls off at the window's end, standard error): for the Hall line
+    the bend over the slope, for the longitudinal resistivity its slope over the level."""
+    fit = fit_columns(pool, HALL_BENT if role == "hall" else SLOPING)
+    if fit is None or fit.nu < 10:
+        return None
+    top, bottom = (2, 1) if role == "hall" else (1, 0)
+    end = pool.high_T / scale_T
+    if not fit.theta[bottom]:
+        return None
+    share = -fit.theta[top] / fit.theta[bottom] * end
+    return share, abs(fit.standard_error(top) / fit.theta[bottom]) * end
+
+
+def straight(pool: Pool, role: str, scale_T: float) -> Line | None:
+    """(rise over the window, its standard error, value at zero field) of a straight line."""
+    fit = fit_columns(pool, HALL_LINE if role == "hall" else SLOPING)
+    if fit is None or fit.nu < 20:
+        return None
+    end = pool.high_T / scale_T
+    return fit.theta[1] * end, fit.standard_error(1) * end, fit.theta[0]
+
+
+def sweeps_apart(segments: list[Segment], scale_T: float) -> SweepsApart | None:
+    """How far the last two sweeps' Hall lines are apart along the field.
+
+    ``segments``: closed ones of the Hall resistivity inside the window. None unless two sweeps
+    cover a common stretch of field well enough.
+    """
+    numbers = sorted({segment.sweep for segment in segments})[-2:]
+    if len(numbers) < 2:
+        return None
+    groups = [[one for one in segments if one.sweep == number] for number in numbers]
+    fits = [_fit(group) for group in groups]
+    if any(fit is None or fit.nu < 10 for fit in fits):
+        return None
+    ranges = [(min(map(_field, g)), max(map(_field, g))) for g in groups]
+    low, high = max(r[0] for r in ranges), min(r[1] for r in ranges)
+    if high <= low:
+        return None
+    row = (1.0, (low + high) / 2 / scale_T)
+    values = [(*fit.predict(row), fit.variance) for fit in fits if fit is not None]
+    slope = sum(fit.theta[1] for fit in fits if fit is not None) / 2 / scale_T
+    if not slope:
+        return None
+    apart = (values[1][0] - values[0][0]) / slope
+    error = math.sqrt(sum(variance * leverage for _, leverage, variance in values)) / abs(slope)
+    return SweepsApart(apart, error, _delay(groups, apart))
+
+
+def _fit(group: list[Segment]) -> LineFit | None:
+    pool = Pool()
+    for segment in group:
+        pool.take(segment)
+    return fit_columns(pool, HALL_LINE)
+
+
+def _field(segment: Segment) -> float:
+    return segment.mean_field_T
+
+
+def _delay(groups: list[list[Segment]], apart: float) -> float | None:
+    rates = []
+    for group in groups:
+        seconds = group[-1].start_s - group[0].start_s
+        if seconds <= 0:
+            return None
+        rates.append((group[-1].mean_field_T - group[0].mean_field_T) / seconds)
+    if not rates[0] or not 0.8 < -rates[1] / rates[0] < 1.25:
+        return None
+    return apart / (rates[1] - rates[0])
