@@ -34,6 +34,7 @@ SHOW_S = 0.25
 # The end, in order, has 3 s in all: so much for all steps, and at most so much for each but the
 # last, which has what is left.
 END_S, READERS_END_S, EVENTS_END_S, FINISH_S = 2.4, 0.8, 0.1, 0.9
+LABORATORY_S = 15.0  # how long the simulated instruments may take to be there
 HUNG_S = 60.0  # a reader says at least once a second that it has nothing, so it hangs by then
 
 
@@ -133,7 +134,9 @@ class _Watcher:
     def go_on(self, wish: Event) -> None:
         """Start everything and look after it until something ends it."""
         self._view.say(f"Page: {self._address}\nRun:  {self._run.path}")
-        self._supervisor.start()
+        if self._plan.laboratory:
+            self._start_laboratory(wish)
+        self._supervisor.start(name for name in self._supervisor.names if name != roles.LABORATORY)
         shown = 0.0
         while not (wish.is_set() or self._time_is_up() or self._ended_with_the_ramp()):
             self._listen()
@@ -142,6 +145,15 @@ class _Watcher:
             if time.monotonic() - shown >= SHOW_S:
                 shown = time.monotonic()
                 self._view.show(self.progress, self._moment())
+
+    def _start_laboratory(self, wish: Event) -> None:
+        """Have the instruments there before anybody asks them; go on without if they don't come."""
+        deadline = time.monotonic() + LABORATORY_S
+        self._supervisor.start([roles.LABORATORY])
+        while self._supervisor.state(roles.LABORATORY) != "ready":
+            if time.monotonic() > deadline or wish.wait(0.05):
+                return
+            self._supervisor.poll()
 
     def end(self) -> None:
         """End all processes in order within 3 s, and leave the run's folder whole."""

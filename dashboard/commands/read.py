@@ -1,9 +1,14 @@
-"""``rampside read CONFIG READER``: one reader alone, with a run folder of its own."""
+"""``rampside read CONFIG READER``: one reader alone, for a run of its own or one that goes on.
+
+With ``--run`` the reader writes into the folder of a run that is being watched, and so both must
+see the same folder and the same clock: one computer, or a later way of comparing clocks.
+"""
 
 from __future__ import annotations
 
 import argparse
 import time
+from pathlib import Path
 
 from acquire.bus import Endpoint, Subscriber, free_endpoints
 from acquire.bus.addresses import check_loopback
@@ -12,7 +17,7 @@ from acquire.config.problems import Problem, nearest_name
 from acquire.config.reader import ReaderSection
 from acquire.errors import UsageError
 from acquire.readings import stream_of
-from acquire.run_folder import RunFolder, create_run
+from acquire.run_folder import LiveRun, RunFolder, create_run, open_run
 from acquire.tables import Row, Table
 from dashboard.child import python
 from dashboard.interrupts import asked_to_end
@@ -30,21 +35,43 @@ def run(arguments: argparse.Namespace) -> int:
     """Read until Ctrl-C, or for as long as asked; exit status 0."""
     rig, config = load(arguments.config)
     reader = _reader(rig, arguments.reader)
-    endpoint = _endpoint(reader, arguments.publish_port, arguments.answer_port)
     table = reading_tables(rig)[stream_of(reader.name)]
-    run_folder = create_run(rig, config, [table], arguments.folder)
-    with asked_to_end() as wish:
+    if arguments.run is None:
+        endpoint = _endpoint(reader, arguments.publish_port, arguments.answer_port)
+        run_folder = create_run(rig, config, [table], arguments.folder)
         live = run_folder.write_live({table.stream: endpoint}, "")
-        end = None if arguments.seconds is None else live.monotonic_start + arguments.seconds
-        with Subscriber(run_folder.run_id, live.endpoints, {table.stream: table}) as subscriber:
-            one = _One(run_folder, reader, table, subscriber)
-            try:
-                one.start()
-                while not wish.is_set() and (end is None or time.monotonic() < end):
-                    one.look()
-            finally:
-                one.end()
+    else:
+        run_folder, live = _joined(arguments.run, config, reader)
+    seconds = arguments.seconds
+    end = float("inf") if seconds is None else time.monotonic() + seconds
+    endpoints = {table.stream: live.endpoints[table.stream]}
+    with (
+        asked_to_end() as wish,
+        Subscriber(run_folder.run_id, endpoints, {table.stream: table}) as subscriber,
+    ):
+        one = _One(run_folder, reader, table, subscriber)
+        try:
+            one.start(endpoints[table.stream])
+            while not wish.is_set() and time.monotonic() < end:
+                one.look()
+        finally:
+            one.end()
+            if arguments.run is None:
+                run_folder.end_live()
     return 0
+
+
+def _joined(path: Path, config: bytes, reader: ReaderSection) -> tuple[RunFolder, LiveRun]:
+    """A run that goes on and waits for this reader. Raises UsageError or RunError."""
+    run_folder = open_run(path)
+    live = run_folder.live()
+    if live is None or not live.alive:
+        raise UsageError(f"{path}: nobody watches this run any more; read without --run.")
+    if config != run_folder.config_bytes:
+        raise UsageError(f"{path}: was started with another configuration; take {path}/config.toml.")
+    if reader.elsewhere is None:
+        raise UsageError(f"{path}: reads {reader.name} itself, as its [elsewhere] is not given.")
+    return run_folder, live
 
 
 def _reader(rig: Rig, name: str) -> ReaderSection:
@@ -96,11 +123,8 @@ class _One:
         self._newest: Row | None = None
         self._count, self._shown = 0, 0.0
 
-    def start(self) -> None:
+    def start(self, endpoint: Endpoint) -> None:
         """Start reading, and say where."""
-        live = self._run.live()
-        assert live is not None
-        endpoint = live.endpoints[self._table.stream]
         _say(f"Readings at {endpoint.publish}, missed ones at {endpoint.answer}")
         _say(f"Run: {self._run.path}\nCtrl-C ends it.")
         self._supervisor.start()
@@ -116,12 +140,11 @@ class _One:
             _say(f"{self._count} readings; {self._words(self._newest)}")
 
     def end(self) -> None:
-        """End the process in order and close the run."""
+        """End the process in order."""
         try:
             self._supervisor.stop([self._role], END_S)
         finally:
             self._supervisor.close()
-            self._run.end_live()
 
     def _ready(self, since: float) -> bool:
         heard = self._subscriber.health()[self._table.stream].last_heard_monotonic

@@ -1,0 +1,172 @@
+"""End to end: commands as typed, instruments on sockets, a run's folder at the end."""
+
+from __future__ import annotations
+
+import signal
+import subprocess
+import urllib.request
+from collections.abc import Callable, Iterator
+from pathlib import Path
+
+import psutil
+import pytest
+from ramp_bench import DENSITY_PER_M2, MOBILITY, RampBench
+from running import RAMPSIDE, Running
+
+from acquire.run_folder import open_run
+from analyse.estimate_table import ESTIMATES, EVENTS
+from dashboard.streams import reading_tables
+
+ENDS_WITHIN_S = 3.0
+
+
+@pytest.fixture
+def bench() -> Iterator[RampBench]:
+    """Three instruments before a Hall bar; the ramp takes 8 s."""
+    with RampBench(steps=80, wait=5, period_s=0.1) as bench:
+        yield bench
+
+
+@pytest.fixture
+def watch(bench: RampBench, tmp_path: Path) -> Iterator[Running]:
+    """A watch on them, with all of its processes at work."""
+    config = bench.write_config(tmp_path / "rig.toml")
+    words = ("watch", config, "--port", 0, "--no-browser", "--folder", tmp_path / "runs")
+    with Running(*words) as watch:
+        watch.wait_for("T | ")
+        yield watch
+
+
+def replay(run: Path, copy: Path) -> subprocess.CompletedProcess[str]:
+    """Replay a run and write its estimates to a new file."""
+    line = [str(RAMPSIDE), "replay", str(run), "--estimates", str(copy)]
+    return subprocess.run(line, capture_output=True, text=True, timeout=60, check=False)
+
+
+def assert_whole(run: Path, tmp_path: Path) -> None:
+    """Every table is complete, nothing says that the run goes on, a replay gives it again."""
+    assert not (run / "live.json").exists()
+    folder = open_run(run)
+    for table in reading_tables(folder.rig).values():
+        rows = list(folder.rows(table))
+        assert [row[0] for row in rows] == list(range(len(rows)))
+        assert rows[-1][3] == "end"
+    copy = tmp_path / f"again-{run.name}.csv"
+    done = replay(run, copy)
+    assert done.returncode == 0, done.stderr
+    assert "came out again to the last bit." in done.stderr
+    assert copy.read_bytes() == (run / "estimates.csv").read_bytes()
+
+
+def test_from_the_first_reading_to_the_end_of_the_ramp(bench: RampBench, tmp_path: Path) -> None:
+    config = bench.write_config(tmp_path / "rig.toml")
+    runs = tmp_path / "runs"
+    with Running(
+        "watch", config, "--exit", "--port", 0, "--no-browser", "--folder", runs
+    ) as watch:
+        address = watch.after("Page:")
+        watch.wait_for("readings | bar:", 2)
+        with urllib.request.urlopen(address, timeout=10) as page:
+            assert page.status == 200
+        assert watch.wait() == 0
+        text = watch.text
+    assert "The ramp is over." in text
+    assert "bar: stable since" in text
+    assert f"Run:  {watch.run}" in text
+    assert_whole(watch.run, tmp_path)
+    names = ESTIMATES.names
+    last = dict(zip(names, list(open_run(watch.run).rows(ESTIMATES))[-1]))
+    assert last["sheet_density_per_m2_low"] < DENSITY_PER_M2 < last["sheet_density_per_m2_high"]
+    assert last["mobility_m2_per_V_s_low"] < MOBILITY < last["mobility_m2_per_V_s_high"]
+    assert (watch.run / "config.toml").read_bytes() == config.read_bytes()
+    assert {entry["reader"] for entry in open_run(watch.run).instruments()} == {
+        "magnet", "lockin_xx", "lockin_xy",
+    }  # fmt: skip
+
+
+@pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM, signal.SIGHUP])
+def test_ended_by_a_signal_in_time_and_in_order(
+    watch: Running, tmp_path: Path, number: signal.Signals
+) -> None:
+    children = watch.children()
+    assert set(children) == {
+        "magnet", "lockin_xx", "lockin_xy", "analyse.service", "dashboard.page",
+    }  # fmt: skip
+    status, took_s = watch.end(number)
+    assert status == 0, watch.text
+    assert took_s < ENDS_WITHIN_S
+    assert not any(child.is_running() for child in children.values())
+    assert "killed" not in watch.text
+    assert_whole(watch.run, tmp_path)
+
+
+def test_any_process_killed_in_mid_ramp_changes_nothing(
+    watch: Running, bench: RampBench, tmp_path: Path
+) -> None:
+    roles = {
+        "reader lockin_xy": "lockin_xy",
+        "reader magnet": "magnet",
+        "estimator": "analyse.service",
+        "page": "dashboard.page",
+    }
+    for role, name in roles.items():
+        watch.children()[name].kill()
+        watch.wait_for(f"{role} was killed by signal 9")
+    for role in roles:
+        watch.wait_for(f"{role} works again")
+    watch.wait_for("readings | bar:", watch.text.count("readings | bar:") + 1)
+    status, took_s = watch.end()
+    assert (status, took_s < ENDS_WITHIN_S) == (0, True), watch.text
+    assert_whole(watch.run, tmp_path)
+    events = [row[2:6] for row in open_run(watch.run).rows(EVENTS)]
+    for role in roles:
+        for code in ("died", "back"):
+            assert any(
+                (kind, told) == ("process", code) and str(text).startswith(role)
+                for kind, _, told, text in events
+            ), (role, code, events)
+
+
+def test_no_orphan_when_the_watch_itself_is_killed(
+    watch: Running, tmp_path: Path, wait_for: Callable[..., None]
+) -> None:
+    children = watch.children()
+    watch.send(signal.SIGKILL)
+    watch.wait()
+    wait_for(
+        lambda: not any(_lives(child) for child in children.values()), "its processes end"
+    )
+    assert (watch.run / "live.json").exists()
+    done = replay(watch.run, tmp_path / "again.csv")
+    assert done.returncode == 0
+    assert "came out again to the last bit" in done.stderr
+    logged = (watch.run / "estimates.csv").read_bytes()
+    assert (tmp_path / "again.csv").read_bytes().startswith(logged)
+
+
+def test_a_process_that_cannot_be_asked_is_killed_in_time(watch: Running) -> None:
+    stopped = watch.children()["lockin_xx"]
+    stopped.suspend()
+    status, took_s = watch.end()
+    assert status == 0
+    assert took_s < ENDS_WITHIN_S
+    assert "Had to be killed, did not end in time: reader lockin_xx." in watch.text
+    assert not stopped.is_running()
+
+
+def test_bounded_by_seconds(bench: RampBench, tmp_path: Path) -> None:
+    config = bench.write_config(tmp_path / "rig.toml")
+    runs = tmp_path / "runs"
+    with Running(
+        "watch", config, "--seconds", 4, "--port", 0, "--no-browser", "--folder", runs
+    ) as watch:
+        assert watch.wait() == 0
+    assert "The ramp is over" not in watch.text
+    assert not (watch.run / "live.json").exists()
+
+
+def _lives(process: psutil.Process) -> bool:
+    try:
+        return process.is_running() and process.status() != psutil.STATUS_ZOMBIE
+    except psutil.NoSuchProcess:
+        return False
