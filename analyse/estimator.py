@@ -79,7 +79,7 @@ class Estimator:
         self._systematic = systematic_lines(bar, self.setup)
         self._sweeps = Sweeps(max(2e-3, 0.01 * self._scale_T))
         self._watch = {role: RoleWatch(role) for role in ("longitudinal", "hall")}
-        self._field_watch = FieldWatch(ramp.rate_T_per_s if ramp is not None else None)
+        self._field_watch = FieldWatch(ramp)
         self._quick = QuickReadings()
         self._field_points = 0
         self._point = _Point(set(), [], {"longitudinal": [], "hall": []})
@@ -259,7 +259,7 @@ class Estimator:
         )
         slope = fit.slope.value / self._scale_T if density and fit.slope else None
         found = [c for watch in self._watch.values() for c in watch.cautions()]
-        found += self._field_watch.cautions(slope, facts.bounds_high_T)
+        found += self._field_watch.cautions(slope)
         return (*found, *fit_cautions(facts, self.setup))
 
     def _forecast(

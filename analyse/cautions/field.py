@@ -10,10 +10,15 @@ from dataclasses import dataclass
 
 from analyse.estimate import Caution
 from analyse.pairing import Pair
+from analyse.setup import Ramp
 
 MEMORY = 60
 CLEAR = 10.0
 """Standard errors by which the Hall resistivity must have moved for a standing field to be odd."""
+
+
+TOO_FAST = 0.05
+"""Share of the planned (or farthest) field that it may move by during the filter's delay."""
 
 
 @dataclass(frozen=True)
@@ -29,38 +34,39 @@ class _Move:
 class FieldWatch:
     """Compares how the field moves with how the Hall resistivity does."""
 
-    def __init__(self, planned_rate_T_per_s: float | None) -> None:
-        self._planned = planned_rate_T_per_s
+    def __init__(self, ramp: Ramp | None) -> None:
+        self._planned = ramp.rate_T_per_s if ramp is not None else None
+        self._planned_T = ramp.largest_T if ramp is not None else 0.0
         self._pairs: deque[tuple[float, float, float]] = deque(maxlen=MEMORY)
         self._kappa = 1.0
         self._fastest = 0.0
-        self._lag_T = 0.0
-        self._last: float | None = None
-        self._zero_steps = 0
-        self._steps: deque[float] = deque(maxlen=MEMORY)
+        self._delay_s = 0.0
+        self._farthest_T = 0.0
 
     def add(self, pair: Pair, kappa: float) -> None:
         """Take a usable Hall pair with its inflation by the filter."""
         self._pairs.append((pair.time_s, pair.field_T, pair.rho_ohm))
         self._kappa = kappa
-        self._fastest = max(self._fastest, abs(pair.rate_T_per_s))
-        if pair.stages is not None:
-            self._lag_T = abs(pair.rate_T_per_s) * pair.stages.delay_s
+        self._farthest_T = max(self._farthest_T, abs(pair.field_T))
+        self._delay_s = pair.stages.delay_s if pair.stages is not None else 0.0
 
-    def cautions(
-        self, slope_ohm_per_T: float | None, window_high_T: float | None
-    ) -> Iterator[Caution]:
+    def cautions(self, slope_ohm_per_T: float | None) -> Iterator[Caution]:
         """Cautions that hold now; the slope is None while it is not known."""
-        if window_high_T and self._lag_T > 0.1 * window_high_T:
+        move = self._move()
+        if move is None:
+            return
+        rate = abs(move.field_T) / move.seconds if move.seconds > 0 else 0.0
+        self._fastest = max(self._fastest, rate)
+        lag_T = rate * self._delay_s
+        if lag_T > TOO_FAST * max(self._farthest_T, self._planned_T):
             yield Caution(
                 "ramp_too_fast",
-                f"while the filter settles the field moves by {1e3 * self._lag_T:.3g} mT: that is "
+                f"during the filter's delay the field moves by {1e3 * lag_T:.3g} mT: that is "
                 "corrected for, but sharp features are smeared; ramp slower or shorten the time "
                 "constant.",
                 touches_answer=False,
             )
-        move = self._move()
-        if move is None or abs(move.rho_ohm) < CLEAR * move.error_ohm:
+        if abs(move.rho_ohm) < CLEAR * move.error_ohm:
             return
         yield from self._standing(move, slope_ohm_per_T)
 

@@ -151,21 +151,21 @@ def _straightness(fit: TransportFit, target: Target) -> Iterator[Caution]:
 
 
 def _quick(facts: FitFacts) -> Iterator[Caution]:
-    rho_0 = facts.fit.rho_0
+    slope, rho_0 = facts.fit.slope, facts.fit.rho_0
+    if slope is None or rho_0 is None or not rho_0.value:
+        return
     offset = abs(facts.fit.offset_ohm or 0.0)
-    level = abs(rho_0.value) if rho_0 is not None and rho_0.value else math.inf
-    pairs = (
-        ("sheet density", "at 6.25 kOhm", facts.density_per_m2,
-         facts.quick_density and facts.quick_density.density_per_m2, facts.quick_density,
-         offset / HALL_MARK_OHM),
-        ("mobility", "where rho_xx = rho_xy", facts.mobility_m2_per_V_s,
-         facts.quick_mobility and facts.quick_mobility.mobility_m2_per_V_s, facts.quick_mobility,
-         offset / level),
+    noise = math.hypot(slope.noise, rho_0.noise)
+    cases = (
+        ("sheet density", "at 6.25 kOhm", facts.density_per_m2, facts.quick_density,
+         "density_per_m2", (offset + 3 * slope.noise) / HALL_MARK_OHM),
+        ("mobility", "where rho_xx = rho_xy", facts.mobility_m2_per_V_s, facts.quick_mobility,
+         "mobility_m2_per_V_s", (offset + 3 * noise) / abs(rho_0.value)),
     )
-    for name, where, fitted, value, reading, explained in pairs:
-        if fitted is None or value is None or reading is None:
+    for name, where, fitted, reading, attribute, explained in cases:
+        if fitted is None or reading is None:
             continue
-        apart = abs(value / fitted - 1.0)
+        apart = abs(getattr(reading, attribute) / fitted - 1.0)
         if apart > 0.05 + 5 * reading.relative_uncertainty + 1.2 * explained:
             yield Caution(
                 "quick_readings_apart",
