@@ -16,8 +16,8 @@ from analyse.lockin import LockinFilter
 from analyse.setup import Ramp, Setup, Signal, Target
 from analyse.transport_fit import SLOPE_SHARE, Phis, fixed_phis
 
-LINE_BEND_FACTOR = math.sqrt(15.0)
-"""Standard error of the bend over that of the slope: [1, u, u|u|] against [1, u], evenly spread
+LINE_BEND_FACTOR = math.sqrt(5.25)
+"""Standard error of the bend over that of the slope: [1, u, u^3] against [1, u], evenly spread
 over one polarity."""
 
 

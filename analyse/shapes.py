@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
-from analyse.basis import HALL_BENT, HALL_LINE, SLOPING
+from analyse.basis import HALL_LINE, HALL_SAGGING, SLOPING
 from analyse.line_fit import LineFit, fit_columns
 from analyse.segments import Pool, Segment
 
@@ -36,7 +36,7 @@ class SweepsApart:
 def fall_off(pool: Pool, role: str, scale_T: float) -> tuple[float, float] | None:
     """(share by which a curve falls off at the window's end, standard error): for the Hall line
     the bend over the slope, for the longitudinal resistivity its slope over the level."""
-    fit = fit_columns(pool, HALL_BENT if role == "hall" else SLOPING)
+    fit = fit_columns(pool, HALL_SAGGING if role == "hall" else SLOPING)
     if fit is None or fit.nu < 10:
         return None
     top, bottom = (2, 1) if role == "hall" else (1, 0)
