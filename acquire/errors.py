@@ -12,6 +12,7 @@ RampsideError                 its text says what happened and what to do next
   BusError                    acquire.bus: an address can't be bound or used
   TableError                  acquire.table: a table measured elsewhere can't be used
   RunError                    acquire.run_folder: a folder that is not a run
+  LaboratoryError             acquire.laboratory: a simulated instrument can't listen
 """
 
 from __future__ import annotations
@@ -59,3 +60,7 @@ class TableError(RampsideError):
 
 class RunError(RampsideError):
     """A folder that is not a run, or a run that can't be used so."""
+
+
+class LaboratoryError(RampsideError):
+    """A simulated instrument can't listen."""
