@@ -8,10 +8,10 @@ from collections.abc import Iterator, Sequence
 from acquire.config.problems import nearest_name
 from acquire.table.separator import Separator
 
-_UNIT = re.compile(r"\s*(?:\([^()]*\)|\[[^\[\]]*\]|\{[^{}]*\}|/[^/]*)$")
+_UNIT = re.compile(r"(?:\([^()]*\)|\[[^\[\]]*\]|\{[^{}]*\}|/[^/]*)$")
 _TWO_BLANKS = re.compile(r"\s{2,}|\t")
-_BRACKETED = re.compile(r"\s+(?=[(\[{][^)\]}]*[)\]}])")
-_JOINT = "\x1f"
+_IN_BRACKETS = r"[(\[{][^)\]}]{0,40}[)\]}]"
+_WITH_UNIT = re.compile(rf"(?:[^\s(\[{{]|{_IN_BRACKETS}|\s{{1,9}}(?={_IN_BRACKETS}))+")
 COMMENT_MARKS = "#%!;/*"  # of other programs than the one that the configuration knows
 LONGEST_LIST = 30  # headings shown in an error
 
@@ -79,5 +79,4 @@ def _cuts_of(body: str, separators: Sequence[Separator]) -> Iterator[list[str]]:
         yield separator.filled_cells(body)
     if any(separator.mark is None for separator in separators):
         yield [cell.strip('" ') for cell in _TWO_BLANKS.split(body) if cell]
-        joined = Separator(None).filled_cells(_BRACKETED.sub(_JOINT, body))
-        yield [cell.replace(_JOINT, " ") for cell in joined]
+        yield [cell.strip() for cell in _WITH_UNIT.findall(body)]
