@@ -384,6 +384,13 @@ def test_a_long_bad_row_is_kept_in_part(read: Make) -> None:
     assert len(row.text) == 200
 
 
+def test_a_bad_row_can_be_shown_in_a_terminal(read: Make) -> None:
+    table = read("B\x1b[2J\tµ\n1\t2\n\x1b[31m\tµ\n", columns=[1, "µ"])
+    assert str(table.bad_rows[0]).isprintable()
+    assert table.bad_rows[0].text == "\\x1b[31m\\tµ"
+    assert table.columns[0].isprintable()
+
+
 def test_line_numbers_are_those_of_an_editor(read: Make) -> None:
     text = "# c\r\n\r\nB,Rxx,Rxy\r\n1,2,3\r\n\r\n# c\r\nbad\r\n1,2,3\r\nbad\r\n"
     assert [row.line for row in read(text).bad_rows] == [7, 9]

@@ -17,7 +17,7 @@ from acquire.errors import TableError
 from acquire.table import heading, sampling
 from acquire.table.complaint import no_heading, nothing_fits
 from acquire.table.numbers import read_number
-from acquire.table.separator import Separator
+from acquire.table.separator import Separator, printable
 
 DEEPEST_HEADING = 10_000  # lines looked through for headings
 MOST_HEADINGS = 20  # lines with all the wanted headings that are tried
@@ -43,7 +43,7 @@ class Layout:
 
     def name(self, place: int) -> str:
         """A column's heading, or its number counted from 1."""
-        return self.headings[place] if self.headings else str(place + 1)
+        return printable(self.headings[place]) if self.headings else str(place + 1)
 
 
 def find_layout(lines: Sequence[str], section: TableSection) -> Layout:

@@ -15,7 +15,10 @@ READER = "table"
 
 
 class BadRow(NamedTuple):
-    """A row that is counted and shown, and never used. Lines count from 1."""
+    """A row that is counted and shown, and never used. Lines count from 1.
+
+    ``text`` is the row as far as it can be printed, its beginning if it is long.
+    """
 
     file: Path
     line: int

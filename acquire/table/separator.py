@@ -57,3 +57,10 @@ class Separator:
 def outside_quotes(line: str) -> str:
     """A line without what stands in quotes."""
     return _QUOTED.sub("", line) if '"' in line else line
+
+
+def printable(text: str) -> str:
+    """Text from a file for a terminal: what can't be printed as an escape."""
+    if text.isprintable():
+        return text
+    return "".join([c if c.isprintable() else repr(c)[1:-1] for c in text])

@@ -14,6 +14,7 @@ from acquire.table.decoding import decode, lines_of
 from acquire.table.dialect import Layout, find_layout
 from acquire.table.measured import BadRow, MeasuredFile, MeasuredTable, TableReadings
 from acquire.table.rows import FileRows, read_rows
+from acquire.table.separator import printable
 from acquire.table.time_line import join_times
 
 LONGEST_TEXT = 200  # characters of a bad row that are kept
@@ -89,7 +90,7 @@ def _read(section: TableSection, path: Path) -> _Read:
     rows = read_rows(lines, layout, section)
     _check_marks(rows, section)
     bad = {
-        row: BadRow(path, line, reason, lines[line - 1].strip()[:LONGEST_TEXT])
+        row: BadRow(path, line, reason, printable(lines[line - 1].strip()[:LONGEST_TEXT]))
         for row, (line, reason) in rows.refused.items()
     }
     if not rows.good:
