@@ -12,7 +12,7 @@ from collections.abc import Callable, Sequence
 from contextlib import suppress
 
 LINES_KEPT = 20
-READY = "ready"  # what some processes write when they are; told from what they do, all the same
+READY = "ready"  # some say so when they are, and more; no news for a person
 
 
 class Child:
@@ -84,7 +84,7 @@ class Child:
     def _read(self) -> None:
         assert self._process.stdout is not None
         for line in self._process.stdout:
-            if (text := line.rstrip()) and text != READY:
+            if (text := line.rstrip()) and text.partition(" ")[0] != READY:
                 self._lines.append(text)
                 self._hear(text)
 

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import argparse
 import importlib
+import io
 import os
 import sys
 import traceback
@@ -28,6 +29,7 @@ DEFAULT_PAGE_PORT = 5410
 def main(words: Sequence[str] | None = None) -> int:
     """Obey one command line (``sys.argv`` by default) and return the exit status."""
     arguments = parser().parse_args(words)
+    _never_fail_on_a_letter()
     try:
         command = importlib.import_module(f"dashboard.commands.{arguments.command}")
         status = int(command.run(arguments))
@@ -47,6 +49,13 @@ def main(words: Sequence[str] | None = None) -> int:
     except Exception as error:  # noqa: BLE001  the last door: whatever comes is told in a sentence
         what = f"Unexpected {type(error).__name__}: {error}. This is a fault of rampside"
         return _told(f"{what}: run again with --debug and report it.", FAILED, arguments.debug)
+
+
+def _never_fail_on_a_letter() -> None:
+    """Names, notes and tables may hold letters that the terminal's encoding does not have."""
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="backslashreplace")
 
 
 def _told(text: str, status: int, debug: bool) -> int:

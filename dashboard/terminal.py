@@ -20,9 +20,9 @@ from acquire.config import Rig
 from dashboard.progress import Progress
 from dashboard.summary import BarSummary
 from dashboard.watch import Moment, View
-from dashboard.words import NAMES, duration, field, left_to_target, number, numbers_of
+from dashboard.words import NAMES, duration, field, fitting, left_to_target, number, numbers_of
 
-LINE_EVERY_S = 5.0
+LINE_EVERY_S, NEWS_EVERY_S = 5.0, 1.0
 _MARKS = {"ready": "green", "starting": "yellow", "waiting": "red", "ended": "dim"}
 
 
@@ -48,7 +48,8 @@ class _Written:
 
     def say(self, text: str) -> None:
         """Show lines that stay."""
-        self._try(lambda: self._console.print(Text(printable(text)), soft_wrap=True))
+        shown = fitting(printable(text), self._console.encoding)
+        self._try(lambda: self._console.print(Text(shown), soft_wrap=True))
 
     def _try(self, write: Callable[[], object]) -> None:
         with self._lock:
@@ -61,12 +62,13 @@ class _Written:
 
 
 class LineView(_Written):
-    """For logs and pipes: one line every few seconds."""
+    """For logs and pipes: one line every few seconds, sooner when something begins or ends."""
 
     def __init__(self, rig: Rig, console: Console, now_s: Callable[[], float] = time.monotonic):
         super().__init__(rig, console)
         self._now = now_s
-        self._next = float("-inf")
+        self._last_s = float("-inf")
+        self._last: object = None
 
     def __enter__(self) -> Self:
         return self
@@ -81,8 +83,10 @@ class LineView(_Written):
 
     def show(self, progress: Progress, moment: Moment) -> None:
         """Write a line, if it is time for one."""
-        if self._now() >= self._next:
-            self._next = self._now() + LINE_EVERY_S
+        now = (progress.field_T is None, tuple(progress.trouble), tuple(moment.states.values()))
+        pause_s = LINE_EVERY_S if now == self._last else NEWS_EVERY_S
+        if self._now() - self._last_s >= pause_s:
+            self._last_s, self._last = self._now(), now
             self.say(line(progress, moment))
             self._try(self._console.file.flush)
 

@@ -3,30 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
 
+from dashboard.quantities import NOT_KNOWN, QUANTITIES, ascii_text, write, write_interval
 from dashboard.summary import BarSummary, Summary
 
-
-@dataclass(frozen=True)
-class _Quantity:
-    """How a column is told: its name, the unit that its value is divided by, the unit's name."""
-
-    name: str
-    unit: float
-    unit_name: str
-
-
-_QUANTITIES = {
-    "sheet_density_per_m2": _Quantity("sheet density", 1e15, "1e15 m^-2 (1e11 cm^-2)"),
-    "mobility_m2_per_V_s": _Quantity("mobility", 1.0, "m^2/Vs (1e4 cm^2/Vs)"),
-    "scattering_time_s": _Quantity("scattering time", 1e-12, "ps"),
-}
-
-NAMES = {column: quantity.name for column, quantity in _QUANTITIES.items()}
+NAMES = {column: quantity.name for column, quantity in QUANTITIES.items()}
 """The three numbers: column of the table of estimates, and what a person calls it."""
-
-NOT_KNOWN = "not known yet"
 
 
 def told(summary: Summary) -> str:
@@ -41,21 +23,32 @@ def number(bar: BarSummary, column: str) -> tuple[str, str]:
     value, u = bar.get(column), bar.get(f"{column}_u")
     if value is None or u is None:
         return NOT_KNOWN, ""
-    quantity = _QUANTITIES[column]
-    digits = _digits(u / quantity.unit)
-    low, mean, high = (
-        f"{x / quantity.unit:.{digits}f}"
-        for x in (bar.get(f"{column}_low"), value, bar.get(f"{column}_high"))
-    )
-    text = f"{mean} ± {u / quantity.unit:.{digits}f} {quantity.unit_name}"
-    return text, f"{low} to {high}"
+    text = " = ".join(write(QUANTITIES[column], value, u).texts)
+    return text, interval(bar, column)
+
+
+def interval(bar: BarSummary, column: str) -> str:
+    """The interval of one of the three numbers, without its unit; empty if it is not known."""
+    value, low, high = (bar.get(f"{column}{end}") for end in ("", "_low", "_high"))
+    if value is None or low is None or high is None:
+        return ""
+    return " to ".join(write_interval(QUANTITIES[column], value, low, high))
 
 
 def numbers_of(bar: BarSummary) -> Iterator[str]:
     """The three numbers with their intervals, for one line."""
     for column, name in NAMES.items():
-        value, interval = number(bar, column)
-        yield f"{name} {value}" + (f" [{interval}]" if interval else "")
+        value, u = bar.get(column), bar.get(f"{column}_u")
+        if value is None or u is None:
+            yield f"{name} {NOT_KNOWN}"
+        else:
+            text = write(QUANTITIES[column], value, u).texts[0]
+            yield f"{name} {text} [{interval(bar, column)}]"
+
+
+def fitting(text: str, encoding: str | None) -> str:
+    """Text for a file or terminal of this encoding: without what only Unicode has, if need be."""
+    return text if (encoding or "").lower().startswith("utf") else ascii_text(text)
 
 
 def field(field_T: float | None) -> str:
@@ -86,8 +79,8 @@ def _bar_lines(name: str, bar: BarSummary, summary: Summary) -> Iterator[str]:
     points = bar.get("field_points") or 0
     yield f"{name}: {_verdict(bar)}"
     for column, title in NAMES.items():
-        value, interval = number(bar, column)
-        inside = f"   {100 * summary.confidence:g} % interval {interval}" if interval else ""
+        value, ends = number(bar, column)
+        inside = f"   {100 * summary.confidence:g} % interval {ends}" if ends else ""
         yield f"  {title:<16} {value}{inside}"
     low, high = bar.get("window_low_T"), bar.get("window_high_T")
     window = "" if low is None or high is None else f", window {low:.3f} to {high:.3f} T"
@@ -103,7 +96,3 @@ def _verdict(bar: BarSummary) -> str:
     waiting = bar.get("waiting_for")
     return f"converging: {waiting}" if waiting else bar.verdict
 
-
-def _digits(u: float) -> int:
-    """Decimals that show two digits of an uncertainty."""
-    return max(0, 1 - int(f"{u:.1e}".split("e")[1])) if u > 0 else 6

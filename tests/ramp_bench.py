@@ -65,7 +65,7 @@ class RampBench:
         self.moving = threading.Event()  # while it is not set the field stays where it is
         self.moving.set()
         self._count = itertools.count()
-        self._field_T = 0.0
+        self.field_T = 0.0
         self._random = random.Random(7)
         self._stack = ExitStack()
         self.magnet = self._instrument({"*IDN?": "BENCH,MAGNET,1,1", "FIELD?": self._field})
@@ -112,13 +112,13 @@ class RampBench:
 
     def _field(self) -> str:
         if self.moving.is_set():
-            self._field_T = min(max(next(self._count) - self.wait, 0) / self.steps, 1.0)
-        return f"{self._field_T:+.6f}"
+            self.field_T = min(max(next(self._count) - self.wait, 0) / self.steps, 1.0)
+        return f"{self.field_T:+.6f}"
 
     def _along(self) -> str:
         volts = SQUARES * CURRENT_A / (DENSITY_PER_M2 * ELECTRON_C * MOBILITY)
         return f"{volts + self._random.gauss(0, NOISE_V):.7E},0.0E+00"
 
     def _across(self) -> str:
-        volts = CURRENT_A * self._field_T / (DENSITY_PER_M2 * ELECTRON_C)
+        volts = CURRENT_A * self.field_T / (DENSITY_PER_M2 * ELECTRON_C)
         return f"{volts + self._random.gauss(0, NOISE_V):.7E},0.0E+00"

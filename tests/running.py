@@ -50,6 +50,18 @@ class Running:
             )
             assert found and self._count(text) >= times, f"no {text!r} in:\n" + "\n".join(self.lines)
 
+    def wait_until_all_work(self) -> None:
+        """Wait for a line with a field that names no process as still starting or waiting."""
+
+        def works(line: str) -> bool:
+            return " T | " in line and not line.endswith((" starting", " waiting"))
+
+        with self._said:
+            found = self._said.wait_for(
+                lambda: any(map(works, self.lines)) or not self._thread.is_alive(), DEADLINE_S
+            )
+            assert found and self._thread.is_alive(), "\n".join(self.lines)
+
     def after(self, label: str) -> str:
         """What follows a label at the beginning of a line, once that has been printed."""
         self.wait_for(label)

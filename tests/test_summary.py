@@ -7,7 +7,7 @@ import pytest
 from acquire.tables import Cell, Row
 from analyse.estimate_table import ESTIMATES, EVENTS
 from dashboard.summary import Summary
-from dashboard.words import duration, told
+from dashboard.words import duration, fitting, told
 
 
 def estimate(**cells: Cell) -> Row:
@@ -48,8 +48,9 @@ def test_numbers_with_two_digits_of_their_uncertainty(summary: Summary) -> None:
         )
     )
     text = told(summary)
-    assert "2.401 ± 0.012" in text
+    assert "2.401(12) × 10¹⁵ m⁻² = 2.401(12) × 10¹¹ cm⁻²" in text
     assert "95 % interval 2.371 to 2.431" in text
+    assert "2.401(12) x 10^15 m^-2" in fitting(text, "ascii")
     assert "electrons, 7 field points" in text
 
 

@@ -108,6 +108,16 @@ def test_a_line_only_every_few_seconds(rig: Rig, progress: Progress) -> None:
     assert console.file.getvalue().count("\n") == 2  # type: ignore[attr-defined]
 
 
+def test_a_line_at_once_when_a_process_changes(rig: Rig, progress: Progress) -> None:
+    now = [0.0]
+    console = Console(file=io.StringIO(), width=200)
+    view = LineView(rig, console, lambda: now[0])
+    view.show(progress, MOMENT)
+    now[0] = 1.0
+    view.show(progress, Moment(13.0, {"reader magnet": "ready", "page": "ready"}, {"page": 3}))
+    assert console.file.getvalue().count("\n") == 2  # type: ignore[attr-defined]
+
+
 def test_lines_where_there_is_no_terminal(rig: Rig) -> None:
     assert isinstance(open_view(rig, Console(file=io.StringIO())), LineView)
     assert isinstance(open_view(rig, Console(file=io.StringIO(), force_terminal=True)), LiveView)

@@ -10,14 +10,17 @@ from pathlib import Path
 
 import psutil
 import pytest
-from ramp_bench import DENSITY_PER_M2, MOBILITY, RampBench
+from ramp_bench import RampBench
 from running import RAMPSIDE, Running
+from small_laboratory import DENSITY_PER_M2, MOBILITY, write_small_laboratory
 
 from acquire.run_folder import open_run
 from analyse.estimate_table import ESTIMATES, EVENTS
 from dashboard.streams import reading_tables
 
 ENDS_WITHIN_S = 3.0
+READERS = {"magnet", "lockin_xx", "lockin_xy"}
+WATCHING = {*READERS, "analyse.service", "dashboard.page"}
 
 
 @pytest.fixture
@@ -28,12 +31,22 @@ def bench() -> Iterator[RampBench]:
 
 
 @pytest.fixture
+def demo(tmp_path: Path) -> Iterator[Running]:
+    """A demo on a small laboratory, with all of its processes at work."""
+    config = write_small_laboratory(tmp_path / "small.toml")
+    words = ("--config", config, "--port", 0, "--no-browser", "--folder", tmp_path / "runs")
+    with Running("demo", "--exit", *words) as demo:
+        demo.wait_until_all_work()
+        yield demo
+
+
+@pytest.fixture
 def watch(bench: RampBench, tmp_path: Path) -> Iterator[Running]:
     """A watch on them, with all of its processes at work."""
     config = bench.write_config(tmp_path / "rig.toml")
     words = ("watch", config, "--port", 0, "--no-browser", "--folder", tmp_path / "runs")
     with Running(*words) as watch:
-        watch.wait_for("T | ")
+        watch.wait_until_all_work()
         yield watch
 
 
@@ -58,30 +71,53 @@ def assert_whole(run: Path, tmp_path: Path) -> None:
     assert copy.read_bytes() == (run / "estimates.csv").read_bytes()
 
 
-def test_from_the_first_reading_to_the_end_of_the_ramp(bench: RampBench, tmp_path: Path) -> None:
-    config = bench.write_config(tmp_path / "rig.toml")
-    runs = tmp_path / "runs"
-    with Running(
-        "watch", config, "--exit", "--port", 0, "--no-browser", "--folder", runs
-    ) as watch:
-        address = watch.after("Page:")
-        watch.wait_for("readings | bar:", 2)
-        with urllib.request.urlopen(address, timeout=10) as page:
-            assert page.status == 200
-        assert watch.wait() == 0
-        text = watch.text
-    assert "The ramp is over." in text
-    assert "bar: stable since" in text
-    assert f"Run:  {watch.run}" in text
-    assert_whole(watch.run, tmp_path)
-    names = ESTIMATES.names
-    last = dict(zip(names, list(open_run(watch.run).rows(ESTIMATES))[-1]))
+def test_the_demo_from_the_first_reading_to_the_end_of_the_ramp(
+    demo: Running, tmp_path: Path
+) -> None:
+    assert set(demo.children()) == {*WATCHING, "acquire.laboratory"}
+    demo.wait_for("readings | bar:", 3)
+    with urllib.request.urlopen(demo.after("Page:"), timeout=10) as page:
+        assert page.status == 200
+    assert demo.wait() == 0
+    assert "The ramp is over." in demo.text
+    assert "bar: stable since" in demo.text
+    assert demo.text.rstrip().endswith(f"Run:  {demo.run}")
+    assert_whole(demo.run, tmp_path)
+    run = open_run(demo.run)
+    last = dict(zip(ESTIMATES.names, list(run.rows(ESTIMATES))[-1]))
     assert last["sheet_density_per_m2_low"] < DENSITY_PER_M2 < last["sheet_density_per_m2_high"]
     assert last["mobility_m2_per_V_s_low"] < MOBILITY < last["mobility_m2_per_V_s_high"]
+    assert last["carriers"] == "electrons"
+    assert {entry["reader"] for entry in run.instruments()} == READERS
+
+
+def test_the_laboratory_killed_in_mid_ramp(demo: Running, tmp_path: Path) -> None:
+    demo.children()["acquire.laboratory"].kill()
+    demo.wait_for("simulated laboratory works again")
+    demo.wait_for("T | ", demo.text.count("T | ") + 2)
+    assert demo.end()[0] == 0
+    assert_whole(demo.run, tmp_path)
+    statuses = {
+        row[3]
+        for table in reading_tables(open_run(demo.run).rig).values()
+        for row in open_run(demo.run).rows(table)
+    }
+    assert "no_answer" in statuses
+
+
+def test_the_page_stays_when_the_ramp_is_over(
+    bench: RampBench, tmp_path: Path
+) -> None:
+    config = bench.write_config(tmp_path / "rig.toml")
+    words = ("--port", 0, "--no-browser", "--folder", tmp_path / "runs")
+    with Running("watch", config, *words) as watch:
+        watch.wait_for("The ramp is over.")
+        watch.wait_for("Ctrl-C ends the watch and the page.")
+        with urllib.request.urlopen(watch.after("Page:"), timeout=10) as page:
+            assert page.status == 200
+        assert watch.end()[0] == 0
     assert (watch.run / "config.toml").read_bytes() == config.read_bytes()
-    assert {entry["reader"] for entry in open_run(watch.run).instruments()} == {
-        "magnet", "lockin_xx", "lockin_xy",
-    }  # fmt: skip
+    assert_whole(watch.run, tmp_path)
 
 
 @pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM, signal.SIGHUP])
@@ -89,9 +125,7 @@ def test_ended_by_a_signal_in_time_and_in_order(
     watch: Running, tmp_path: Path, number: signal.Signals
 ) -> None:
     children = watch.children()
-    assert set(children) == {
-        "magnet", "lockin_xx", "lockin_xy", "analyse.service", "dashboard.page",
-    }  # fmt: skip
+    assert set(children) == WATCHING
     status, took_s = watch.end(number)
     assert status == 0, watch.text
     assert took_s < ENDS_WITHIN_S
@@ -101,7 +135,7 @@ def test_ended_by_a_signal_in_time_and_in_order(
 
 
 def test_any_process_killed_in_mid_ramp_changes_nothing(
-    watch: Running, bench: RampBench, tmp_path: Path
+    watch: Running, bench: RampBench, tmp_path: Path, wait_for: Callable[..., None]
 ) -> None:
     roles = {
         "reader lockin_xy": "lockin_xy",
@@ -109,11 +143,13 @@ def test_any_process_killed_in_mid_ramp_changes_nothing(
         "estimator": "analyse.service",
         "page": "dashboard.page",
     }
+    wait_for(lambda: bench.field_T > 0.1, "the ramp has begun")
     for role, name in roles.items():
         watch.children()[name].kill()
         watch.wait_for(f"{role} was killed by signal 9")
     for role in roles:
         watch.wait_for(f"{role} works again")
+    assert bench.field_T < 1.0, "the ramp still goes on"
     watch.wait_for("readings | bar:", watch.text.count("readings | bar:") + 1)
     status, took_s = watch.end()
     assert (status, took_s < ENDS_WITHIN_S) == (0, True), watch.text

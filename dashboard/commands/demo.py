@@ -3,11 +3,11 @@
 from __future__ import annotations
 
 import argparse
-from importlib.resources import files
 from pathlib import Path
 
+import configs
 from acquire.config import load, parse
-from acquire.errors import UsageError
+from acquire.errors import RampsideError, UsageError
 from dashboard.commands.watch import run_plan
 from dashboard.ports import free_ports, is_free
 from dashboard.roles import laboratory_ports, with_ports
@@ -33,10 +33,22 @@ def run(arguments: argparse.Namespace) -> int:
     )
 
 
+def shipped(name: str) -> Path:
+    """A file that came along in configs/. Raises RampsideError if it did not.
+
+    By hand: importlib.resources fails on a folder without modules that is installed as editable,
+    since one of the places where it may lie is no directory (python/cpython#106532).
+    """
+    for place in configs.__path__:
+        if (path := Path(place, name)).is_file():
+            return path
+    raise RampsideError(f"{name} is missing from the installation: install rampside anew.")
+
+
 def _configuration(path: Path | None) -> tuple[bytes, str]:
     """The configuration, with other ports where those of its instruments are taken."""
     if path is None:
-        config, source = (files("configs") / DEMO).read_bytes(), DEMO
+        config, source = shipped(DEMO).read_bytes(), DEMO
     else:
         config, source = load(path)[1], str(path)
     rig = parse(config, source)

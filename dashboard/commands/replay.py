@@ -9,10 +9,13 @@ import sys
 from acquire.config import load
 from acquire.errors import UsageError
 from acquire.run_folder import open_run
+from acquire.table import MeasuredTable, read_table
 from analyse.estimate_table import ESTIMATES
 from dashboard.progress_bar import counted
 from dashboard.replay import Replayed, count_readings, logged_readings, replay
-from dashboard.words import told
+from dashboard.words import fitting, told
+
+BAD_ROWS_SHOWN = 5
 
 
 def run(arguments: argparse.Namespace) -> int:
@@ -21,7 +24,7 @@ def run(arguments: argparse.Namespace) -> int:
     if arguments.json:
         print(json.dumps(replayed.result, indent=2, allow_nan=False))
     else:
-        print(told(replayed.summary))
+        print(fitting(told(replayed.summary), sys.stdout.encoding))
     return 0
 
 
@@ -42,8 +45,6 @@ def _of_run(arguments: argparse.Namespace) -> Replayed:
 
 
 def _of_tables(arguments: argparse.Namespace) -> Replayed:
-    from acquire.table import read_table
-
     rig, _ = load(arguments.config)
     if rig.table is None:
         raise UsageError(
@@ -51,12 +52,20 @@ def _of_tables(arguments: argparse.Namespace) -> Replayed:
             "a run is replayed without --config."
         )
     table = read_table(rig.table, arguments.source)
+    _say("\n".join([*table.notes, *bad_rows(table)]))
     return replay(
         arguments.source[0].stem,
         rig,
         lambda maker: counted(table.readings, len(table.readings), "readings"),
         copy=arguments.estimates,
     )
+
+
+def bad_rows(table: MeasuredTable) -> list[str]:
+    """The first rows that can't be used, and how many more there are."""
+    shown = [f"  {row}" for row in table.bad_rows[:BAD_ROWS_SHOWN]]
+    left = len(table.bad_rows) - len(shown)
+    return [*shown, f"  and {left} more rows that can't be used"] if left else shown
 
 
 def compared(replayed: Replayed) -> str:
@@ -72,4 +81,5 @@ def compared(replayed: Replayed) -> str:
 
 
 def _say(text: str) -> None:
-    print(text, file=sys.stderr)
+    if text:
+        print(text, file=sys.stderr)

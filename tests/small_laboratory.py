@@ -1,0 +1,74 @@
+"""A simulated laboratory whose ramp takes 8 s, as a configuration. For tests."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+from dashboard.ports import free_ports
+from dashboard.roles import with_ports
+
+DENSITY_PER_M2 = 3e15
+MOBILITY = 20.0  # m^2/(V s)
+
+_LOCKIN = """
+[[readers]]
+name = "{name}"
+resource = "TCPIP::127.0.0.1::{port}::SOCKET"
+write_termination = "\\n"
+read_termination = "\\n"
+queries = ["XY?"]
+fields = 2
+period_s = 0.1
+values = [{{ name = "X", position = 1 }}, {{ name = "Y", position = 2 }}]
+
+[[laboratory.lockins]]
+name = "{name}"
+port = {port}
+measures = "{measures}"
+time_constant_s = 0.03
+poles = 2
+noise_V_per_rtHz = 1e-7
+"""
+
+_RIG = b"""
+[run]
+title = "small"
+[ramp]
+path_T = [0.0, 1.0]
+rate_T_per_min = 7.5
+[target]
+sheet_density_relative = 0.02
+mobility_relative = 0.02
+[field]
+reader = "magnet"
+value = "B"
+[[readers]]
+name = "magnet"
+resource = "TCPIP::127.0.0.1::47101::SOCKET"
+write_termination = "\\n"
+read_termination = "\\n"
+queries = ["FIELD?"]
+period_s = 0.1
+values = [{ name = "B", position = 1, unit = "T" }]
+[[hall_bars]]
+name = "bar"
+squares = 4.0
+material = "GaAs"
+longitudinal = { reader = "lockin_xx", x = "X", filter = { time_constant_s = 0.03, poles = 2 } }
+hall = { reader = "lockin_xy", x = "X", filter = { time_constant_s = 0.03, poles = 2 } }
+excitation = { current_A = 1e-6 }
+[laboratory]
+current_A = 1e-6
+sample = { sheet_density_per_m2 = 3e15, mobility_m2_per_V_s = 20.0, quantum_lifetime_s = 1e-13 }
+magnet = { port = 47101, path_T = [0.0, 1.0], rate_T_per_min = 7.5, wait_s = 4.0 }
+"""
+
+
+def write_small_laboratory(path: Path) -> Path:
+    """The configuration, on ports that are free now."""
+    lockins = [("lockin_xx", 47102, "longitudinal"), ("lockin_xy", 47103, "hall")]
+    text = _RIG + "".join(
+        _LOCKIN.format(name=name, port=port, measures=measures) for name, port, measures in lockins
+    ).encode()
+    path.write_bytes(with_ports(text, dict(zip((47101, 47102, 47103), free_ports(3)))))
+    return path
