@@ -25,14 +25,23 @@ class Sample:
     quadrature: float | None = None
 
 
+OVERLOAD_SENTINEL = 9.9e37
+"""What instruments answer for a reading beyond their range (IEEE 488.2 and SCPI: 9.9E37)."""
+
+
 class Channel:
-    """Readings of one signal. ``passed_s``: no sample from before this time will come any more."""
+    """Readings of one signal. ``passed_s``: no sample from before this time will come any more.
+
+    A reading whose time lies before that of the one before it stands for no moment: it is counted
+    as lost, at the time that the channel has come to.
+    """
 
     def __init__(self, signal: Signal, track: FieldTrack | None = None) -> None:
         self.signal = signal
         self.track = track
         self.queue: deque[Sample] = deque()
         self.passed_s = -math.inf
+        self._newest_s = -math.inf
         self._gate: SpikeGate[Sample] = SpikeGate()
         self._last: tuple[float, float] | None = None
 
@@ -41,9 +50,12 @@ class Channel:
         good = status == "ok" and x is not None and math.isfinite(x)
         if good and self.signal.detection == "XY":
             good = y is not None and math.isfinite(y)
-        if not good:
+        backwards = time_s < self._newest_s
+        time_s = self._newest_s = max(time_s, self._newest_s)
+        beyond = x is not None and abs(x) >= OVERLOAD_SENTINEL
+        if not good or backwards or beyond:
             self._release(self._gate.flush())
-            kind = "overload" if status in ("overload", "range") else "lost"
+            kind = "overload" if beyond or status in ("overload", "range") else "lost"
             self.queue.append(Sample(time_s, kind, self.track))
             self.passed_s = max(self.passed_s, time_s)
             return

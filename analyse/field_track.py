@@ -54,11 +54,18 @@ class FieldTrack:
     """Field readings, and the filtered field at any moment between them.
 
     ``filter`` None gives the field itself. ``longest_gap_s``: after a longer gap between field
-    readings the stages' states are not known, until they have settled again.
+    readings the stages' states are not known, until they have settled again. ``start_s``: field
+    readings from before are passed over, whenever they come.
     """
 
-    def __init__(self, stages: LockinFilter | None, longest_gap_s: float | None) -> None:
+    def __init__(
+        self,
+        stages: LockinFilter | None,
+        longest_gap_s: float | None,
+        start_s: float = -math.inf,
+    ) -> None:
         self.stages = stages
+        self._start_s = start_s
         self._longest_gap_s = longest_gap_s
         self._knots: deque[_Knot] = deque()
 
@@ -69,6 +76,8 @@ class FieldTrack:
 
     def append(self, time_s: float, field_T: float) -> None:
         """Take a field reading. One that is not later than the last is passed over."""
+        if time_s < self._start_s:
+            return
         if not self._knots:
             self._knots.append(self._fresh(time_s, field_T))
             return
@@ -83,7 +92,7 @@ class FieldTrack:
 
     def forget_before(self, time_s: float) -> None:
         """Drop the readings that no moment from ``time_s`` on needs."""
-        while len(self._knots) > 2 and self._knots[1].time_s <= time_s:
+        while len(self._knots) > 2 and self._knots[1].time_s < time_s:
             self._knots.popleft()
 
     def at(self, time_s: float) -> tuple[float, float] | None:

@@ -20,6 +20,10 @@ from analyse.setup import Setup
 from analyse.spikes import SpikeGate
 
 CHANNELS = ("field", "longitudinal", "hall", "current")
+LARGEST_T = 1e4
+"""No field that was ever made is larger; a larger reading is none."""
+LARGEST_OHM = 1e30
+"""Nothing conducts less; a larger resistivity comes of a current that is none."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -86,10 +90,9 @@ class Pairing:
         once it has settled. Which field readings are here already does not matter.
         """
         channel = self._voltages[role]
-        track = FieldTrack(stages, self._gap_s)
+        track = FieldTrack(stages, self._gap_s, channel.passed_s)
         for time_s, field_T in self._knots:
-            if time_s >= channel.passed_s:
-                track.append(time_s, field_T)
+            track.append(time_s, field_T)
         channel.settle()
         channel.track = track
         self._tracks.append(track)
@@ -107,7 +110,7 @@ class Pairing:
         return self._released()
 
     def _push_field(self, time_s: float, field_T: float | None, status: str) -> None:
-        if status == "ok" and field_T is not None and math.isfinite(field_T):
+        if status == "ok" and field_T is not None and abs(field_T) <= LARGEST_T:
             self._add_knot(self._gate.push(field_T, (time_s, field_T)))
         else:
             self._add_knot(self._gate.flush())
@@ -121,6 +124,8 @@ class Pairing:
         if wild:
             self.wild_field_readings += 1
             return
+        if self._knots and time_s <= self._knots[-1][0]:
+            return
         self._knots.append((time_s, field_T))
         for track in self._tracks:
             track.append(time_s, field_T)
@@ -132,11 +137,12 @@ class Pairing:
                 return
             channel = self._voltages[role]
             sample = channel.queue[0]
-            if sample.kind == "ok" and not self._ready(sample.time_s):
+            if sample.kind in ("ok", "wild") and not self._ready(sample.time_s):
                 return
             channel.queue.popleft()
             pair = self._pair(role, sample)
             channel.remember(sample)
+            self._forget(sample.time_s)
             yield pair
 
     def _next_role(self) -> str | None:
@@ -144,21 +150,26 @@ class Pairing:
         if not heads:
             return None
         time_s, role = min(heads)
-        for channel in self._voltages.values():
-            if not channel.queue and channel.passed_s < time_s:
+        for other, channel in self._voltages.items():
+            if other != role and channel.passed_s <= time_s:
                 return None
         return role
 
     def _ready(self, time_s: float) -> bool:
-        if self._current is not None and self._current.passed_s < time_s:
-            return False
-        if self._field_passed_s < time_s:
+        """Whether nothing that comes later can change what is known of the moment.
+
+        A channel has to be past it, not just at it: a row of the same time, or the row after it
+        that is interpolated to, may be here already or not.
+        """
+        if self._current is not None and self._current.passed_s <= time_s:
             return False
         last = self._knots[-1][0] if self._knots else -math.inf
-        gap = self._gap_s
-        if last >= time_s or math.isinf(self._field_passed_s):
+        if last >= time_s or self._field_passed_s == math.inf:
             return True
-        return gap is not None and self._field_passed_s - last > gap
+        gap = self._gap_s
+        return gap is not None and self._field_passed_s > time_s and (
+            self._field_passed_s - last > gap
+        )
 
     def _pair(self, role: str, sample: Sample) -> Pair:
         if sample.kind not in ("ok", "wild"):
@@ -166,11 +177,12 @@ class Pairing:
         assert sample.track is not None
         known = sample.track.at(sample.time_s)
         current = self._current_at(role, sample)
-        self._forget(sample.time_s)
         if known is None or current is None:
             return Pair(role, sample.time_s, "no_field" if known is None else "lost")
         field_T, rate = known
         per_rho = current * (self._bar.squares if role == "longitudinal" else 1.0)
+        if not abs(sample.value) <= LARGEST_OHM * abs(per_rho) or not per_rho:
+            return Pair(role, sample.time_s, "lost")
         quadrature = None if sample.quadrature is None else sample.quadrature / per_rho
         return Pair(
             role, sample.time_s, sample.kind, field_T, rate, sample.value / per_rho, current,
@@ -178,12 +190,22 @@ class Pairing:
         )
 
     def _forget(self, time_s: float) -> None:
-        """Drop field readings from before everything that can still come."""
+        """Drop what was read before everything that can still come."""
+        if len(self._tracks) > len(self._voltages):
+            self._drop_unused_tracks()
         for track in self._tracks:
             track.forget_before(time_s)
+        current = self._current
+        while current is not None and current.queue and current.queue[0].time_s <= time_s:
+            current.remember(current.queue.popleft())
         passed = min(time_s, *(channel.passed_s for channel in self._voltages.values()))
         while len(self._knots) > 1 and self._knots[0][0] < passed:
             self._knots.popleft()
+
+    def _drop_unused_tracks(self) -> None:
+        used = {id(channel.track) for channel in self._voltages.values()}
+        used |= {id(one.track) for channel in self._voltages.values() for one in channel.queue}
+        self._tracks = [track for track in self._tracks if id(track) in used]
 
     def _current_at(self, role: str, sample: Sample) -> float | None:
         if self._voltages[role].signal.resistance:
@@ -194,8 +216,6 @@ class Pairing:
             return excitation.current_A
         if self._current is not None:
             value = self._current.interpolated(sample.time_s)
-            while self._current.queue and self._current.queue[0].time_s <= sample.time_s:
-                self._current.remember(self._current.queue.popleft())
             if value is None or value == 0.0:
                 return None
             return value / excitation.shunt_ohm if excitation.shunt_ohm is not None else value

@@ -19,6 +19,8 @@ SLOPE_SHARE = 0.8
 commonly known far better, so that a smaller share costs it little."""
 DEFAULT_EFFECTIVE = 100.0
 LACK_OF_FIT_LEVEL = 1e-5
+PARITY_COST = 1.3
+"""Factor in variance at which the other parity is left to the model part of the uncertainty."""
 BEND_SEEN = 3.5
 """Standard errors at which the next richer model of the longitudinal resistivity is taken."""
 
@@ -93,18 +95,28 @@ def fixed_phis(setup: Setup, scale_T: float) -> Phis:
 
 
 def hall_columns(pool: Pool) -> tuple[int, ...]:
-    """The Hall line, with the even part where both directions were measured."""
-    return (*HALL_LINE, OTHER_PARITY) if pool.both_directions else HALL_LINE
+    """The Hall line, with the even part where both directions tell it apart at little cost."""
+    return HALL_LINE + _other_parity(pool, HALL_LINE, 1)
 
 
 def longitudinal_columns(pool: Pool) -> tuple[int, ...]:
     """The plainest model that shows no significant bend, with the odd part likewise."""
-    odd = (OTHER_PARITY,) if pool.both_directions else ()
+    odd = _other_parity(pool, LEVEL, 0)
     for plain, richer in ((LEVEL, SLOPING), (SLOPING, CURVED)):
         one, two = fit_columns(pool, plain + odd), fit_columns(pool, richer + odd)
         if one is None or two is None or not _bend_seen(one, two):
             return plain + odd
     return CURVED + odd
+
+
+def _other_parity(pool: Pool, columns: tuple[int, ...], j: int) -> tuple[int, ...]:
+    """The regressor of the other parity, if it costs coefficient j less than PARITY_COST."""
+    if not pool.both_directions:
+        return ()
+    one, two = fit_columns(pool, columns), fit_columns(pool, (*columns, OTHER_PARITY))
+    if one is None or two is None or two.inverse(j) > PARITY_COST * one.inverse(j):
+        return ()
+    return (OTHER_PARITY,)
 
 
 def _bend_seen(plain: LineFit, richer: LineFit) -> bool:
@@ -130,13 +142,9 @@ def fit_transport(
     """Both fits. ``excess``: noise factors (hall, longitudinal); above 1 they widen. ``inner``:
     smaller parts of the window, from which rho_0 is taken where that makes it more certain."""
     alpha = 1.0 - setup.target.confidence
-    columns = hall_columns(hall)
-    line = fit_columns(hall, columns, excess[0] > 1)
-    slope, offset = None, None
-    if line is not None:
-        bent = fit_columns(hall, HALL_BENT + columns[2:], excess[0] > 1)
-        slope = _coefficient(line, 1, bent, phis.slope, SLOPE_SHARE * alpha, hall.effective)
-        offset = line.theta[0]
+    line = fit_columns(hall, hall_columns(hall))
+    offset = line.theta[0] if line is not None else None
+    slope = hall_slope(hall, excess[0] > 1, phis, alpha)
     level = (1 - SLOPE_SHARE) * alpha
     parts = [zero_field(along, excess[1] > 1, phis.rho_0, level)]
     for pool in inner:
@@ -144,6 +152,16 @@ def fit_transport(
         parts.append(zero_field(pool, part_excess, phis.rho_0, level))
     rho_0 = min((part for part in parts if part is not None), key=_total, default=None)
     return TransportFit(slope, offset, rho_0, excess[0], excess[1])
+
+
+def hall_slope(pool: Pool, excess: bool, phis: Phis, alpha: float) -> Coefficient | None:
+    """The slope of the Hall line, per unit of u, from one pool."""
+    columns = hall_columns(pool)
+    line = fit_columns(pool, columns, excess)
+    if line is None:
+        return None
+    bent = fit_columns(pool, HALL_BENT + columns[2:], excess)
+    return _coefficient(line, 1, bent, phis.slope, SLOPE_SHARE * alpha, pool.effective)
 
 
 def zero_field(pool: Pool, excess: bool, phi: float, alpha: float) -> Coefficient | None:

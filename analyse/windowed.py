@@ -10,10 +10,21 @@ from analyse.pairing import Pair
 from analyse.segments import Pool, Segments
 from analyse.setup import Setup
 from analyse.shapes import Shapes, fall_off, straight, sweeps_apart
-from analyse.transport_fit import hall_columns, longitudinal_columns, noise_excess
+from analyse.transport_fit import (
+    BEND_SEEN,
+    fixed_phis,
+    hall_columns,
+    hall_slope,
+    longitudinal_columns,
+    noise_excess,
+)
 from analyse.window import Bounds, agrees, find_bounds
 
 ROLES = ("hall", "longitudinal")
+NARROWINGS = 8
+NARROWER = 0.8
+CLEARLY = 0.8
+"""A narrower window must bring the uncertainty down to this share to be worth its change."""
 HALVINGS = 5
 MIN_INNER = 30.0
 """Effective readings that a part of the window needs."""
@@ -49,11 +60,13 @@ class WindowedFit:
         self._setup = setup
         self._scale_T = scale_T
         self._segments = {role: Segments(role, scale_T) for role in ROLES}
-        self._pools = {role: Pool() for role in ROLES}
+        self._phis = fixed_phis(setup, scale_T)
+        self._wide = {role: Pool() for role in ROLES}
+        self._pools = dict(self._wide)
         self._inflation = {role: _Inflation() for role in ROLES}
         given = setup.window
         high = given.high_T if given.high_T is not None else math.inf
-        self.bounds = Bounds(given.low_T or 0.0, high)
+        self.bounds = self._widest = Bounds(given.low_T or 0.0, high)
         self.excess = (1.0, 1.0)
         self._searched = 0
         self._now: tuple[Pool, Pool] | None = None
@@ -121,18 +134,15 @@ class WindowedFit:
     def _closed(self, role: str) -> None:
         newest = self._segments[role].closed[-1]
         total = sum(len(one.closed) for one in self._segments.values())
-        inside = self.bounds.holds(newest)
-        odd = inside and not agrees(newest, self._pools[role], role, self._scale_T)
+        inside = self._widest.holds(newest)
+        odd = inside and not agrees(newest, self._wide[role], role, self._scale_T)
         if odd or total >= self._searched * 1.15 + 1:
             self._searched = total
             self._search()
         elif inside:
-            self._pools[role].take(newest)
+            self._wide[role].take(newest)
+        self._narrow()
         hall, along = (self._pools[each] for each in ROLES)
-        self.excess = (
-            noise_excess(hall, hall_columns(hall)),
-            noise_excess(along, longitudinal_columns(along)),
-        )
         self._inner = self._halve(along)
         self.shapes = self._seen_shapes(hall, along)
 
@@ -153,10 +163,7 @@ class WindowedFit:
         pools, high_T = [], along.high_T
         for _ in range(HALVINGS):
             high_T /= 2
-            pool = Pool()
-            for segment in self._segments["longitudinal"].closed:
-                if segment.high_T <= high_T and self.bounds.holds(segment):
-                    pool.take(segment)
+            pool = self._pool("longitudinal", Bounds(self.bounds.low_T, high_T))
             if pool.effective < MIN_INNER or pool.groups < 4:
                 break
             pools.append(pool)
@@ -164,12 +171,53 @@ class WindowedFit:
 
     def _search(self) -> None:
         closed = {role: one.closed for role, one in self._segments.items()}
-        self.bounds = find_bounds(
+        self._widest = find_bounds(
             self._setup.window, closed["longitudinal"], closed["hall"], self._scale_T
         )
-        for role in ROLES:
-            pool = Pool()
-            for segment in closed[role]:
-                if self.bounds.holds(segment):
-                    pool.take(segment)
-            self._pools[role] = pool
+        self._wide = {role: self._pool(role, self._widest) for role in ROLES}
+
+    def _narrow(self) -> None:
+        """Leave out the upper part of the window where that makes the Hall slope more certain:
+        what lies there is then structure (oscillations that set in), not information."""
+        self.bounds, self._pools = self._widest, dict(self._wide)
+        hall = self._pools["hall"]
+        self.excess = self._excesses()
+        best = self._uncertainty(hall, self.excess[0] > 1)
+        if self._setup.window.high_T is not None or not self._structured(hall):
+            return
+        high_T = hall.high_T
+        for _ in range(NARROWINGS):
+            high_T *= NARROWER
+            bounds = Bounds(self._widest.low_T, high_T)
+            pool = self._pool("hall", bounds)
+            if pool.effective < MIN_INNER or pool.groups < 4:
+                break
+            total = self._uncertainty(pool, noise_excess(pool, hall_columns(pool)) > 1)
+            if total < CLEARLY * best:
+                best, self.bounds = total, bounds
+        if self.bounds is not self._widest:
+            self._pools = {role: self._pool(role, self.bounds) for role in ROLES}
+            self.excess = self._excesses()
+
+    def _structured(self, hall: Pool) -> bool:
+        slope = hall_slope(hall, self.excess[0] > 1, self._phis, 1 - self._setup.target.confidence)
+        bent = slope is not None and abs(slope.bend) > BEND_SEEN * slope.bend_error
+        return max(self.excess) > 1 or bent
+
+    def _excesses(self) -> tuple[float, float]:
+        hall, along = (self._pools[role] for role in ROLES)
+        return (
+            noise_excess(hall, hall_columns(hall)),
+            noise_excess(along, longitudinal_columns(along)),
+        )
+
+    def _uncertainty(self, pool: Pool, excess: bool) -> float:
+        slope = hall_slope(pool, excess, self._phis, 1 - self._setup.target.confidence)
+        return math.inf if slope is None else slope.half_width + slope.spread
+
+    def _pool(self, role: str, bounds: Bounds) -> Pool:
+        pool = Pool()
+        for segment in self._segments[role].closed:
+            if bounds.holds(segment):
+                pool.take(segment)
+        return pool
