@@ -137,7 +137,7 @@ def picture(rig: Rig, progress: Progress, moment: Moment) -> RenderableType:
         head.append(f"{name} {count}" + (f" ({bad} unusable)" if bad else "") + "   ")
     parts: list[RenderableType] = [head]
     for name, bar in progress.summary.bars.items():
-        parts += [_numbers(name, bar, progress.summary.confidence), *_cautions(bar)]
+        parts += [_numbers(name, bar, progress.summary.confidence), *_in_the_way(bar)]
     parts += [Text(f"{name}: {why}", "red") for name, why in progress.trouble.items()]
     parts.append(_processes(moment))
     return Group(*parts)
@@ -158,8 +158,12 @@ def _state(bar: BarSummary) -> str:
     return f"{bar.verdict}, {left}" if left else bar.verdict
 
 
-def _cautions(bar: BarSummary) -> list[RenderableType]:
-    return [Text(f"caution: {text or code}", "yellow") for code, text in bar.cautions.items()]
+def _in_the_way(bar: BarSummary) -> list[RenderableType]:
+    """What is between a Hall bar and a stable answer, and its open cautions."""
+    missing = bar.get("waiting_for")
+    lines: list[RenderableType] = [Text(f"in the way: {missing}")] if missing else []
+    cautions = bar.cautions.items()
+    return lines + [Text(f"caution: {text or code}", "yellow") for code, text in cautions]
 
 
 def _processes(moment: Moment) -> Text:
