@@ -81,6 +81,8 @@ def watch(plan: WatchPlan, view: View, wish: Event) -> tuple[RunFolder, Summary]
         raise UsageError(
             "This configuration has a table, not readers: rampside replay TABLE --config CONFIG."
         )
+    if plan.exit_when_over and plan.rig.ramp is None:
+        raise UsageError("--exit needs a [ramp] in the configuration, which says when it is over.")
     port = page_port(plan.port)
     endpoints, requests = endpoints_of(plan.rig)
     run = create_run(plan.rig, plan.config, list(run_tables(plan.rig).values()), plan.folder)

@@ -11,6 +11,7 @@ from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
+from ramp_bench import RampBench
 
 from dashboard.cli import parser
 
@@ -62,7 +63,7 @@ values = [{ name = "B", position = 1, unit = "T" }]
 [[hall_bars]]
 name = "bar"
 squares = -1.0
-material = "GaAs"
+material = "GaAz"
 longitudinal = { reader = "metre", x = "X" }
 hall = { reader = "metre", x = "B" }
 """
@@ -163,6 +164,8 @@ def test_all_mistakes_of_a_configuration_at_once(command: str, tmp_path: Path) -
         "(found 5)",
         "field.reader: no reader has this name (found 'meter'); did you mean metre?",
         "hall_bars[0].squares: ",
+        "hall_bars[0].material: not in the table of materials",
+        "did you mean GaAs?",
         "hall_bars[0].longitudinal.x: 'metre' has no such value (found 'X')",
     ):
         assert wanted in done.stderr
@@ -174,6 +177,26 @@ def test_a_configuration_that_is_not_there(tmp_path: Path) -> None:
     done = rampside("watch", "rig.toml", cwd=tmp_path)
     assert done.returncode == 2
     assert "can't be read: No such file" in done.stderr
+
+
+def test_an_unknown_material_alone(config: Path) -> None:
+    config.write_text(config.read_text().replace('"GaAs"', '"kryptonite"'))
+    done = rampside("check", config)
+    assert done.returncode == 2
+    assert "hall_bars[0].material: not in the table of materials" in done.stderr
+    assert "(found 'kryptonite')" in done.stderr
+
+
+def test_to_exit_with_the_ramp_needs_a_ramp(tmp_path: Path) -> None:
+    with RampBench() as bench:
+        config = bench.write_config(tmp_path / "rig.toml")
+    text = config.read_text()
+    begin = text.index("[ramp]")
+    config.write_text(text[:begin] + text[text.index("[target]") :])
+    done = rampside("watch", config, "--exit", "--port", 0, cwd=tmp_path)
+    assert done.returncode == 2
+    assert "--exit needs a [ramp]" in done.stderr
+    assert not (tmp_path / "runs").exists()
 
 
 def test_a_table_cannot_be_watched(config: Path) -> None:

@@ -4,16 +4,17 @@ from __future__ import annotations
 
 import argparse
 
-from acquire.config import Rig, load
+from acquire.config import Rig
 from acquire.config.reader import ReaderSection
 from acquire.probe import Exchange, Probe, probe
 from acquire.reply import escaped
+from dashboard.configuration import load_configuration
 from dashboard.outlook import lag_lines, target_lines
 
 
 def run(arguments: argparse.Namespace) -> int:
     """Check and say what was found; exit status 1 if an instrument failed."""
-    rig, _ = load(arguments.config)
+    rig, _ = load_configuration(arguments.config)
     print(f"{arguments.config}: no mistakes. {_contents(rig)}")
     if rig.table is not None:
         print("It describes a table: nothing to ask. Try it by rampside replay TABLE --config.")

@@ -6,9 +6,10 @@ import argparse
 from pathlib import Path
 
 import configs
-from acquire.config import load, parse
+from acquire.config import parse
 from acquire.errors import RampsideError, UsageError
 from dashboard.commands.watch import run_plan
+from dashboard.configuration import load_configuration
 from dashboard.ports import free_ports, is_free
 from dashboard.roles import laboratory_ports, with_ports
 from dashboard.watch import WatchPlan
@@ -50,7 +51,7 @@ def _configuration(path: Path | None) -> tuple[bytes, str]:
     if path is None:
         config, source = shipped(DEMO).read_bytes(), DEMO
     else:
-        config, source = load(path)[1], str(path)
+        config, source = load_configuration(path)[1], str(path)
     rig = parse(config, source)
     if rig.laboratory is None:
         raise UsageError(f"{source} has no [laboratory]: rampside watch {source} is what it is for.")

@@ -12,7 +12,7 @@ from pathlib import Path
 
 from acquire.bus import Endpoint, Subscriber, free_endpoints
 from acquire.bus.addresses import check_loopback
-from acquire.config import ConfigError, Rig, load
+from acquire.config import ConfigError, Rig
 from acquire.config.problems import Problem, nearest_name
 from acquire.config.reader import ReaderSection
 from acquire.errors import UsageError
@@ -20,6 +20,7 @@ from acquire.readings import stream_of
 from acquire.run_folder import LiveRun, RunFolder, create_run, open_run
 from acquire.tables import Row, Table
 from dashboard.child import python
+from dashboard.configuration import load_configuration
 from dashboard.interrupts import asked_to_end
 from dashboard.ports import LOOPBACK
 from dashboard.roles import reader_role
@@ -33,7 +34,7 @@ LINE_EVERY_S = 5.0
 
 def run(arguments: argparse.Namespace) -> int:
     """Read until Ctrl-C, or for as long as asked; exit status 0."""
-    rig, config = load(arguments.config)
+    rig, config = load_configuration(arguments.config)
     reader = _reader(rig, arguments.reader)
     table = reading_tables(rig)[stream_of(reader.name)]
     if arguments.run is None:

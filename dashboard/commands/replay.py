@@ -6,11 +6,11 @@ import argparse
 import json
 import sys
 
-from acquire.config import load
 from acquire.errors import UsageError
 from acquire.run_folder import open_run
 from acquire.table import MeasuredTable, read_table
 from analyse.estimate_table import ESTIMATES
+from dashboard.configuration import load_configuration
 from dashboard.progress_bar import counted
 from dashboard.replay import Replayed, count_readings, logged_readings, replay
 from dashboard.words import fitting, told
@@ -45,7 +45,7 @@ def _of_run(arguments: argparse.Namespace) -> Replayed:
 
 
 def _of_tables(arguments: argparse.Namespace) -> Replayed:
-    rig, _ = load(arguments.config)
+    rig, _ = load_configuration(arguments.config)
     if rig.table is None:
         raise UsageError(
             f"{arguments.config} has no [table] that says what the columns are; "

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import argparse
 
-from acquire.config import load
+from dashboard.configuration import load_configuration
 from dashboard.interrupts import asked_to_end
 from dashboard.terminal import open_view
 from dashboard.watch import WatchPlan, watch
@@ -13,7 +13,7 @@ from dashboard.words import told
 
 def run(arguments: argparse.Namespace) -> int:
     """Watch until Ctrl-C, or as bounded on the command line; then say what was found."""
-    rig, config = load(arguments.config)
+    rig, config = load_configuration(arguments.config)
     return run_plan(
         WatchPlan(
             rig,
