@@ -2,6 +2,10 @@
 
 from __future__ import annotations
 
+import json
+import re
+from collections.abc import Iterable
+from dataclasses import replace
 from pathlib import Path
 from types import UnionType
 from typing import Any, Union, get_args, get_origin
@@ -12,6 +16,9 @@ from pydantic import BaseModel, ValidationError
 from acquire.config.problems import ConfigError, Problem, nearest_name
 from acquire.config.references import check_references
 from acquire.config.rig import Rig
+
+BARE_KEY = re.compile(r"[A-Za-z0-9_-]+")
+LONGEST_FOUND = 80
 
 
 def load(path: str | Path) -> tuple[Rig, bytes]:
@@ -32,17 +39,22 @@ def load(path: str | Path) -> tuple[Rig, bytes]:
 def parse(data: bytes, source: str = "configuration") -> Rig:
     """Validate the bytes of a configuration. Raises :class:`ConfigError`."""
     try:
-        raw = tomli.loads(data.decode("utf-8"))
+        raw = tomli.loads(data.decode("utf-8-sig"))  # some editors put a mark of it in front
     except UnicodeDecodeError as error:
         raise ConfigError(source, [Problem(f"byte {error.start}", "is not UTF-8")]) from None
-    except tomli.TOMLDecodeError as error:
+    except (ValueError, RecursionError) as error:  # numbers too long, arrays in arrays in...
         raise ConfigError(source, [Problem("TOML", str(error))]) from None
+    return validate(raw, source)
+
+
+def validate(raw: dict[str, Any], source: str = "configuration") -> Rig:
+    """Validate a configuration that is a dict already. Raises :class:`ConfigError`."""
     problems: list[Problem] = []
     rig = None
     try:
         rig = Rig.model_validate(raw)
     except ValidationError as error:
-        problems += [_problem(dict(item), raw) for item in error.errors(include_url=False)]
+        problems += _merged(_problem(dict(item), raw) for item in error.errors(include_url=False))
     problems += check_references(raw)
     if problems:
         raise ConfigError(source, problems)
@@ -59,19 +71,39 @@ def _problem(item: dict[str, Any], raw: dict[str, Any]) -> Problem:
         return Problem(path, "unknown key", None, nearest_name(str(place[-1]), known))
     if kind == "missing":
         return Problem(path, "missing")
-    found = repr(item["input"]) if not isinstance(item["input"], dict | list | tuple) else None
     rule = item["msg"].removeprefix("Value error, ")
-    return Problem(path, rule[:1].lower() + rule[1:], found)
+    return Problem(path, rule[:1].lower() + rule[1:], _shown(item["input"]))
 
 
-def _inside(place: tuple[str | int, ...], raw: object) -> tuple[str | int, ...]:
+def _merged(problems: Iterable[Problem]) -> list[Problem]:
+    """One problem a place: where several kinds of values are allowed, each has its rule."""
+    merged: dict[str, Problem] = {}
+    for problem in problems:
+        if problem.path in merged:
+            rule = f"{merged[problem.path].rule}, or {problem.rule}"
+            problem = replace(merged[problem.path], rule=rule)
+        merged[problem.path] = problem
+    return list(merged.values())
+
+
+def _shown(value: object) -> str | None:
+    """A value that was found, in one short line; None for a table or an array."""
+    if isinstance(value, dict | list | tuple):
+        return None
+    try:
+        text = repr(value)
+    except ValueError:
+        return "a number of thousands of digits"
+    return text if len(text) <= LONGEST_FOUND else f"{text[:LONGEST_FOUND]}..."
+
+
+def _inside(place: tuple[str | int, ...], raw: Any) -> tuple[str | int, ...]:
     """The part of pydantic's location that is in the file: branches of unions are not."""
     real: list[str | int] = []
     node = raw
     for position, part in enumerate(place):
-        if isinstance(node, dict) and part in node:
-            node = node[part]
-        elif isinstance(node, list) and isinstance(part, int) and part < len(node):
+        in_array = isinstance(node, list) and isinstance(part, int) and part < len(node)
+        if in_array or (isinstance(node, dict) and part in node):
             node = node[part]
         elif position == len(place) - 1 and isinstance(node, dict):
             node = None
@@ -87,7 +119,8 @@ def _path(place: tuple[str | int, ...]) -> str:
         if isinstance(part, int):
             text += f"[{part}]"
         else:
-            text += f".{part}" if text else part
+            key = part if BARE_KEY.fullmatch(part) else json.dumps(part)
+            text += f".{key}" if text else key
     return text or "configuration"
 
 

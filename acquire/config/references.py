@@ -46,7 +46,7 @@ def check_references(raw: dict[str, Any]) -> list[Problem]:
             if isinstance(signal, dict):
                 where = f"{place}.{role}"
                 problems += _signal(where, signal, values, settings, ("V", "Ohm"))
-                unit = values.get(signal.get("reader"), {}).get(signal.get("x"))
+                unit = values.get(_text(signal, "reader"), {}).get(_text(signal, "x"))
                 if unit == "V" and "excitation" not in bar:
                     problems.append(Problem(f"{place}.excitation", "missing: voltages need it"))
         if isinstance(excitation, dict) and isinstance(excitation.get("measured"), dict):
@@ -67,7 +67,7 @@ def _signal(
     problems = _refer(place, signal, "x", values, units)
     if "y" in signal:
         problems += [p for p in _refer(place, signal, "y", values, units) if ".reader" not in p.path]
-    known = settings.get(signal.get("reader", ""), [])
+    known = settings.get(_text(signal, "reader"), [])
     stages = signal.get("filter")
     if isinstance(stages, dict):
         for key in ("time_constant_setting", "poles_setting"):
@@ -98,6 +98,12 @@ def _refer(
         rule = f"the value's unit must be {' or '.join(units)}"
         return [Problem(f"{place}.{key}", rule, repr(values[reader][value]))]
     return []
+
+
+def _text(section: dict[str, Any], key: str) -> str:
+    """The text under a key; empty, which is no name, where something else is."""
+    value = section.get(key)
+    return value if isinstance(value, str) else ""
 
 
 def _tables(node: object) -> list[dict[str, Any]]:

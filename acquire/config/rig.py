@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
 from typing import Annotated
 
 from pydantic import Field, field_validator, model_validator
@@ -32,7 +33,7 @@ class RampSection(Section):
     @field_validator("path_T")
     @classmethod
     def _moves(cls, path: tuple[float, ...]) -> tuple[float, ...]:
-        if len(path) < 2 or any(a == b for a, b in zip(path, path[1:])):
+        if len(path) < 2 or any(a == b for a, b in pairwise(path)):
             raise ValueError("needs at least two fields, and no two equal ones in a row")
         return path
 
