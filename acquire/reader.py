@@ -260,7 +260,13 @@ def _read_for_run(
     told = [entry for entry in run.instruments() if entry.get("reader") == section.name]
     with (
         Journal(run.journal_path(table), table) as journal,
-        Publisher(run.run_id, table, journal, live.endpoints[table.stream]) as publisher,
+        Publisher(
+            run.run_id,
+            table,
+            journal,
+            live.endpoints[table.stream],
+            started_utc=run.started_utc,
+        ) as publisher,
     ):
         if journal.torn:
             complain(f"{journal.torn} bytes of a torn last line were cut away")

@@ -6,13 +6,17 @@ after its process has started, and ends it when it is closed.
 
 from acquire.bus.addresses import Endpoint, free_address, free_endpoints
 from acquire.bus.inbox import Inbox, ask
+from acquire.bus.introduction import Introducer
 from acquire.bus.progress import StreamHealth
 from acquire.bus.publisher import Publisher
 from acquire.bus.subscriber import Subscriber
+from acquire.bus.wire import Introduction
 
 __all__ = [
     "Endpoint",
     "Inbox",
+    "Introducer",
+    "Introduction",
     "Publisher",
     "StreamHealth",
     "Subscriber",

@@ -12,7 +12,7 @@ import zmq
 
 from acquire.bus.addresses import Endpoint
 from acquire.bus.sockets import HIGH_WATER, bound, milliseconds
-from acquire.bus.wire import Answer, Message, Question, pack, topic, unpack
+from acquire.bus.wire import ANY_RUN, Answer, Introduction, Message, Question, pack, topic, unpack
 from acquire.errors import BusError, JournalError
 from acquire.journal import Journal, Piece
 from acquire.tables import Cell, Table
@@ -27,6 +27,7 @@ class Publisher:
     A background thread answers questions and syncs the journal once a second, so that both go on
     while the owner waits for an instrument. ``publish`` and ``close`` belong to the thread that
     made the publisher. The journal stays the caller's: close it after the publisher.
+    ``started_utc``, the run's start, is told to those who ask who publishes here.
     Raises BusError if an address is not on loopback or is taken; port 0 takes a free one, and
     ``endpoint`` tells which.
     """
@@ -38,6 +39,7 @@ class Publisher:
         journal: Journal,
         endpoint: Endpoint,
         *,
+        started_utc: str = "",
         high_water: int = HIGH_WATER,
     ) -> None:
         self._run_id = run_id
@@ -53,7 +55,9 @@ class Publisher:
             self._context.destroy(linger=0)
             raise
         self.endpoint = Endpoint(publish, answer)
-        self._answerer = _Answerer(self._context, router, run_id, table.stream, journal)
+        columns = tuple((one.name, one.kind, one.unit, one.description) for one in table.columns)
+        introduction = Introduction(run_id, table.stream, started_utc, columns)
+        self._answerer = _Answerer(self._context, router, introduction, journal)
 
     @property
     def refused(self) -> int:
@@ -111,13 +115,13 @@ class _Answerer:
         self,
         context: zmq.Context[zmq.Socket[bytes]],
         router: zmq.Socket[bytes],
-        run_id: str,
-        stream: str,
+        introduction: Introduction,
         journal: Journal,
     ) -> None:
         self.refused = 0
-        self._run_id = run_id
-        self._stream = stream
+        self._run_id = introduction.run
+        self._stream = stream = introduction.stream
+        self._introduction = pack(introduction)
         self._journal = journal
         self._journal_error: JournalError | None = None
         self._router = router
@@ -171,6 +175,9 @@ class _Answerer:
 
     def _answer(self, frames: list[bytes]) -> None:
         question = unpack(Question, frames[1]) if len(frames) == 2 else None
+        if question is not None and question.run == ANY_RUN:
+            self._router.send_multipart([frames[0], self._introduction], zmq.NOBLOCK)
+            return
         if question is None or question.stream != self._stream:
             self.refused += 1
             return

@@ -1,9 +1,10 @@
-"""What goes over the wire: three kinds of message, decoded by declared type.
+"""What goes over the wire: four kinds of message, decoded by declared type.
 
 A publisher sends ``Message`` after the topic ``<stream>|`` (the bar keeps ``a`` from also
 subscribing to ``ab``). A subscriber asks a ``Question`` and gets an ``Answer``, whose ``lines``
 are the piece of the journal as it is on disk. All name the run, so that somebody who still
-listens to an earlier run at the same address is not misled.
+listens to an earlier run at the same address is not misled. Who does not know the run asks
+without one, and gets an ``Introduction``.
 """
 
 from __future__ import annotations
@@ -51,10 +52,26 @@ class Answer(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_fields
     lines: bytes
 
 
-Kind = TypeVar("Kind", Message, Question, Answer)
+class Introduction(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_fields=True):
+    """Who publishes: the answer to a question that names no run.
+
+    ``started_utc``: the start of the run, from which the times in its rows count; empty if the
+    publisher was not told. ``columns``: name, kind, unit and description of each.
+    """
+
+    run: str
+    stream: str
+    started_utc: str
+    columns: tuple[tuple[str, str, str, str], ...]
+
+
+ANY_RUN = ""
+"""As the run of a question: asks who is there."""
+
+Kind = TypeVar("Kind", Message, Question, Answer, Introduction)
 _encode = msgspec.msgpack.encode
 _decoders: dict[Any, msgspec.msgpack.Decoder[Any]] = {
-    kind: msgspec.msgpack.Decoder(kind) for kind in (Message, Question, Answer)
+    kind: msgspec.msgpack.Decoder(kind) for kind in (Message, Question, Answer, Introduction)
 }
 _MALFORMED = (msgspec.MsgspecError, ValueError, OverflowError, RecursionError)
 _plain = msgspec.msgpack.Decoder(dict[str, Any])
@@ -65,7 +82,7 @@ def topic(stream: str) -> bytes:
     return stream.encode() + b"|"
 
 
-def pack(message: Message | Question | Answer) -> bytes:
+def pack(message: Message | Question | Answer | Introduction) -> bytes:
     """The bytes of a message."""
     return _encode(message)
 
