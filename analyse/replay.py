@@ -18,6 +18,7 @@ def replay_readings(maker: RowMaker, readings: Iterable[Reading]) -> Iterator[Re
     """Records, in order, of readings given in order per reader; rows without seq."""
     for reading in readings:
         yield from maker.take(reading)
+    yield from maker.finish()
 
 
 def _number(number: Number | None) -> dict[str, Any] | None:

@@ -42,7 +42,7 @@ class RigEstimator:
         self._rig = rig
         self.estimators = {bar.name: _estimator(rig, bar) for bar in rig.hall_bars}
         self._routes = _routes(rig)
-        self._settings: dict[str, dict[str, float]] = {}
+        self._filters: dict[tuple[str, str], LockinFilter] = {}
         self._waiting = {
             (route.bar, route.channel)
             for routes in self._routes.values()
@@ -60,15 +60,18 @@ class RigEstimator:
         routes = self._routes.get(reading.reader, ())
         if reading.status == "settings":
             self._use_settings(reading, routes)
+        if reading.status in ("settings", "end"):
             return
         for route in routes:
-            estimator = self.estimators[route.bar]
-            if reading.status == "end":
-                done = estimator.end(route.channel)
-            else:
-                done = estimator.advance(route.channel, *self._values(reading, route))
-            for estimate in done:
+            values = self._values(reading, route)
+            for estimate in self.estimators[route.bar].advance(route.channel, *values):
                 yield route.bar, estimate
+
+    def end(self) -> Iterator[tuple[str, Estimate]]:
+        """No more readings come from any reader; yields (Hall bar, estimate) as before."""
+        for bar, estimator in self.estimators.items():
+            for estimate in estimator.end():
+                yield bar, estimate
 
     def _values(
         self, reading: Reading, route: _Route
@@ -85,8 +88,7 @@ class RigEstimator:
         )
 
     def _use_settings(self, reading: Reading, routes: tuple[_Route, ...]) -> None:
-        known = self._settings.setdefault(reading.reader, {})
-        known.update(_numbers_in(reading.detail))
+        known = _numbers_in(reading.detail)
         for route in routes:
             if route.filter is None or not _from_settings(route.filter):
                 continue
@@ -96,7 +98,8 @@ class RigEstimator:
                 self._waiting.add(key)
                 continue
             self._waiting.discard(key)
-            if route.channel != "current":
+            if route.channel != "current" and self._filters.get(key) != stages:
+                self._filters[key] = stages
                 self.estimators[route.bar].set_filter(route.channel, stages)
 
 
@@ -125,7 +128,7 @@ def _stages(section: Filter, known: dict[str, float]) -> LockinFilter | None:
     poles: float | None = section.poles
     if section.poles_setting is not None:
         poles = known.get(section.poles_setting)
-    if time_constant is None or poles is None:
+    if time_constant is None or poles is None or poles not in range(1, 9):
         return None
     try:
         return LockinFilter(time_constant, int(poles))

@@ -31,7 +31,10 @@ class RowMaker:
     """Feeds the estimators and turns what they say into rows, in an order the readings decide.
 
     With several Hall bars their field points are merged by time: a field point is written once
-    every other Hall bar has come as far, or has ended.
+    every other Hall bar has come as far.
+
+    A row that says that its reader has ended is not obeyed at once: the reader may be started
+    again, and then goes on. Only :meth:`finish` works up what still waits.
     """
 
     def __init__(self, rig: Rig) -> None:
@@ -40,7 +43,7 @@ class RowMaker:
         self._pending: dict[str, deque[Estimate]] = {name: deque() for name in self._bars}
         self._open: dict[str, set[str]] = {name: set() for name in self._bars}
         self._verdict = dict.fromkeys(self._bars, "converging")
-        self._ended: set[str] = set()
+        self._last_status: dict[str, str] = {}
         self._count = 0
         self.latest: dict[str, Estimate] = {}
 
@@ -58,22 +61,25 @@ class RowMaker:
         """Take one row of a reader; yields the rows that it completes."""
         for bar, estimate in self._rig.take(reading):
             self._pending[bar].append(estimate)
-        if reading.status == "end":
-            self._ended.add(reading.reader)
-        yield from self._merged()
+        if reading.reader in self._rig.readers:
+            self._last_status[reading.reader] = reading.status
+        while all(self._pending.values()):
+            yield from self._earliest()
 
-    def _merged(self) -> Iterator[Record]:
-        while True:
-            heads = [
-                (queue[0].time_s, index)
-                for index, queue in enumerate(self._pending.values())
-                if queue
-            ]
-            all_ended = len(self._ended) == len(self._rig.readers)
-            if not heads or (len(heads) < len(self._bars) and not all_ended):
-                return
-            bar = self._bars[min(heads)[1]]
-            yield from self._rows(bar, self._pending[bar].popleft())
+    def finish(self) -> Iterator[Record]:
+        """No more rows come. Yields the last rows, if every reader has ended in order."""
+        ended = [self._last_status.get(name) == "end" for name in self._rig.readers]
+        if not all(ended):
+            return
+        for bar, estimate in self._rig.end():
+            self._pending[bar].append(estimate)
+        while any(self._pending.values()):
+            yield from self._earliest()
+
+    def _earliest(self) -> Iterator[Record]:
+        waiting = [bar for bar in self._bars if self._pending[bar]]
+        bar = min(waiting, key=lambda name: self._pending[name][0].time_s)
+        yield from self._rows(bar, self._pending[bar].popleft())
 
     def _rows(self, bar: str, estimate: Estimate) -> Iterator[Record]:
         seq = self._count

@@ -13,7 +13,7 @@ import argparse
 import faulthandler
 import os
 import sys
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from typing import Any
 
 from acquire.bus import Inbox, Publisher, Subscriber
@@ -26,7 +26,7 @@ from acquire.run_folder import LiveRun, RunFolder, open_run
 from acquire.stop import Stop
 from acquire.tables import Row, Table
 from analyse.estimate_table import ESTIMATES, EVENTS
-from analyse.row_maker import DETERMINED, RowMaker
+from analyse.row_maker import DETERMINED, Record, RowMaker
 
 LONGEST_WAIT_S = 0.1
 REQUEST_KINDS = ("note", "process", "run")
@@ -98,7 +98,10 @@ class Service:
         if reading.seq != self._next.get(reading.reader):
             return
         self._next[reading.reader] += 1
-        for record in self._maker.take(reading):
+        self._put(self._maker.take(reading))
+
+    def _put(self, records: Iterable[Record]) -> None:
+        for record in records:
             self._outputs[record.stream].put(record.cells)
             self._estimates += record.stream == "estimates"
 
@@ -109,6 +112,7 @@ class Service:
             return {"ok": False, "error": f"unknown request {kind!r}"}
         if kind == "run" and code == "finish":
             catch_up()
+            self._put(self._maker.finish())
             differing = sum(output.differing for output in self._outputs.values())
             return {"ok": True, "estimates": self._estimates, "differing": differing}
         key = str(message.get("id") or "") or None
