@@ -121,12 +121,16 @@ class Supervisor:
             post.child.kill()
             self._died(post, "hung", why)
 
+    def ask_to_end(self, names: Iterable[str]) -> None:
+        """Ask these roles to end, and don't wait for it; :meth:`stop` does."""
+        for name in names:
+            if (child := self._posts[name].child) is not None:
+                child.terminate()
+
     def stop(self, names: Iterable[str], within_s: float) -> tuple[str, ...]:
         """End these roles: asked first, killed after ``within_s``. Returns who had to be killed."""
         posts = [self._posts[name] for name in names]
-        for post in posts:
-            if post.child is not None:
-                post.child.terminate()
+        self.ask_to_end(post.role.name for post in posts)
         deadline = time.monotonic() + within_s
         killed = []
         for post in posts:

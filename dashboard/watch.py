@@ -29,11 +29,12 @@ from dashboard.summary import Summary
 from dashboard.supervisor import ProcessNews, Role, Supervisor
 from dashboard.words import told
 
-LOOK_S = 0.2  # the longest wait between two looks at signals and processes
+LOOK_S = 0.1  # the longest wait between two looks at signals and processes
 SHOW_S = 0.25
-# The end, in order, has 3 s in all. So much for all steps together, the least for the last of
-# them, and at most so much for the others; on a machine with nothing else to do they need 0.5 s.
-END_S, LAST_S, READERS_END_S, EVENTS_END_S, FINISH_S = 2.5, 0.3, 1.3, 0.1, 0.9
+# The end, in order, has 3 s in all, of which our own interpreter needs some at its end. So much
+# for all steps together, the least for the last of them, and at most so much for the others; on
+# a machine with nothing else to do they need 0.5 s.
+END_S, LAST_S, READERS_END_S, EVENTS_END_S, FINISH_S = 2.0, 0.3, 1.1, 0.1, 0.6
 LABORATORY_S = 15.0  # how long the simulated instruments may take to be there
 HUNG_S = 60.0  # a reader says at least once a second that it has nothing, so it hangs by then
 
@@ -170,6 +171,7 @@ class _Watcher:
     def _end_in_order(self) -> None:
         deadline = time.monotonic() + END_S
         readers = [roles.reader_role(name) for name in roles.local_readers(self._plan.rig)]
+        self._supervisor.ask_to_end([roles.PAGE])  # it has nothing to lose, and takes its time
         killed = self._supervisor.stop(readers, READERS_END_S)
         unsent = self._events.close(EVENTS_END_S)
         finished = self._finish_estimates(min(FINISH_S, deadline - LAST_S - time.monotonic()))

@@ -25,8 +25,8 @@ WATCHING = {*READERS, "analyse.service", "dashboard.page"}
 
 @pytest.fixture
 def bench() -> Iterator[RampBench]:
-    """Three instruments before a Hall bar; the ramp takes 8 s."""
-    with RampBench(steps=80, wait=5, period_s=0.1) as bench:
+    """Three instruments before a Hall bar; the ramp takes 40 s, longer than any test of it."""
+    with RampBench(steps=400, wait=5, period_s=0.1) as bench:
         yield bench
 
 
@@ -75,9 +75,6 @@ def test_the_demo_from_the_first_reading_to_the_end_of_the_ramp(
     demo: Running, tmp_path: Path
 ) -> None:
     assert set(demo.children()) == {*WATCHING, "acquire.laboratory"}
-    demo.wait_for("readings | bar:", 3)
-    with urllib.request.urlopen(demo.after("Page:"), timeout=10) as page:
-        assert page.status == 200
     assert demo.wait() == 0
     assert "The ramp is over." in demo.text
     assert "bar: stable since" in demo.text
@@ -105,12 +102,11 @@ def test_the_laboratory_killed_in_mid_ramp(demo: Running, tmp_path: Path) -> Non
     assert "no_answer" in statuses
 
 
-def test_the_page_stays_when_the_ramp_is_over(
-    bench: RampBench, tmp_path: Path
-) -> None:
-    config = bench.write_config(tmp_path / "rig.toml")
+def test_the_page_stays_when_the_ramp_is_over(tmp_path: Path) -> None:
     words = ("--port", 0, "--no-browser", "--folder", tmp_path / "runs")
-    with Running("watch", config, *words) as watch:
+    with RampBench(steps=40, wait=20) as bench, Running(
+        "watch", config := bench.write_config(tmp_path / "rig.toml"), *words
+    ) as watch:
         watch.wait_for("The ramp is over.")
         watch.wait_for("Ctrl-C ends the watch and the page.")
         with urllib.request.urlopen(watch.after("Page:"), timeout=10) as page:
@@ -130,7 +126,6 @@ def test_ended_by_a_signal_in_time_and_in_order(
     assert status == 0, watch.text
     assert took_s < ENDS_WITHIN_S
     assert not any(child.is_running() for child in children.values())
-    assert "killed" not in watch.text
     assert_whole(watch.run, tmp_path)
 
 
@@ -143,7 +138,7 @@ def test_any_process_killed_in_mid_ramp_changes_nothing(
         "estimator": "analyse.service",
         "page": "dashboard.page",
     }
-    wait_for(lambda: bench.field_T > 0.1, "the ramp has begun")
+    wait_for(lambda: bench.field_T > 0.02, "the ramp has begun")
     for role, name in roles.items():
         watch.children()[name].kill()
         watch.wait_for(f"{role} was killed by signal 9")
