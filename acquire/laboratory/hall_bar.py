@@ -11,8 +11,9 @@ prefactor and phase as commonly written): rho_xx is multiplied by
     1 + A cos(2 pi f/|B| - pi),   A = 4 [X/sinh X] exp(-pi/(omega_c tau_q)),
     X = 2 pi^2 k T/(hbar omega_c),   f = n h/(g e),   g spin times valley degeneracy.
 
-The formula is for small A. Larger ones are cut at :data:`LARGEST_OSCILLATION`, so that rho_xx stays
-positive; real samples would show minima that broaden into plateaus instead.
+The formula is for small A; above 1 it would go below zero. There rho_xx stays at
+:data:`LOWEST_SHARE` of its value at zero field: minima become flat and all but vanish, as they do in
+real samples, though these have plateaus in rho_xy there, which this one has not.
 """
 
 from __future__ import annotations
@@ -23,7 +24,7 @@ from scipy.constants import e, h, hbar, k, m_e
 
 from acquire.laboratory.scenario import Sample
 
-LARGEST_OSCILLATION = 0.95
+LOWEST_SHARE = 0.02
 _OUT_OF_SIGHT = 300.0  # an exponent so large that nothing is left of an oscillation
 
 Numbers = NDArray[np.float64]
@@ -41,7 +42,7 @@ class HallBar:
         self.oscillation_frequency_T: float = density * h / (sample.degeneracy * e)
 
     def oscillation_amplitude(self, field_T: ArrayLike) -> Numbers:
-        """A, the oscillations' relative amplitude, cut at :data:`LARGEST_OSCILLATION`."""
+        """A, the oscillations' relative amplitude, from 0 to 4."""
         mass = self.sample.effective_mass * m_e
         omega = np.abs(np.asarray(field_T, float)) * e / mass
         with np.errstate(divide="ignore"):
@@ -50,7 +51,7 @@ class HallBar:
         seen = x + dingle < _OUT_OF_SIGHT
         x, dingle = np.where(seen, x, 1.0), np.where(seen, dingle, 0.0)
         amplitude = 4 * x / np.sinh(x) * np.exp(-dingle)
-        return np.where(seen, np.minimum(amplitude, LARGEST_OSCILLATION), 0.0)
+        return np.where(seen, amplitude, 0.0)
 
     def rho_xx_ohm(self, field_T: ArrayLike) -> Numbers:
         """Longitudinal resistivity, positive at every field."""
@@ -58,7 +59,8 @@ class HallBar:
         amplitude = self.oscillation_amplitude(field)
         inverse = np.divide(1.0, field, out=np.zeros_like(field), where=amplitude > 0)
         phase = 2 * np.pi * self.oscillation_frequency_T * inverse - np.pi
-        return np.asarray(self.rho_0_ohm * (1 + amplitude * np.cos(phase)))
+        share = np.maximum(1 + amplitude * np.cos(phase), LOWEST_SHARE)
+        return np.asarray(self.rho_0_ohm * share)
 
     def rho_xy_ohm(self, field_T: ArrayLike) -> Numbers:
         """Hall resistivity."""

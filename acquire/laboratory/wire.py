@@ -8,7 +8,7 @@ from dataclasses import dataclass, field
 from acquire.laboratory.bench import Outcome
 
 LONGEST_LINE = 4096  # bytes; longer ones are no commands
-MOST_WAITING = 1_000_000  # bytes that the other side does not take
+MOST_WAITING = 100_000  # bytes that the other side does not take
 
 
 class Nonsense(Exception):
@@ -23,6 +23,7 @@ class Wire:
     _coming: bytes = b""
     _due: deque[tuple[float, bytes | None]] = field(default_factory=deque)  # None: cut here
     _last_s: float = 0.0
+    _waiting: int = 0
 
     def lines(self, data: bytes) -> list[str]:
         """The lines that are complete with these bytes. Raises Nonsense."""
@@ -37,7 +38,7 @@ class Wire:
             self._add(time_s + piece.after_s, piece.data)
         if outcome.cut:
             self._add(time_s, None)
-        if sum(len(data or b"") for _, data in self._due) > MOST_WAITING:
+        if self._waiting > MOST_WAITING:
             raise Nonsense
 
     def next_s(self) -> float | None:
@@ -53,9 +54,11 @@ class Wire:
     def sent(self, count: int) -> None:
         """So many bytes of what was ready are gone."""
         due_s, data = self._due.popleft()
+        self._waiting -= count
         if data is not None and count < len(data):
             self._due.appendleft((due_s, data[count:]))
 
     def _add(self, due_s: float, data: bytes | None) -> None:
         self._last_s = max(self._last_s, due_s)
         self._due.append((self._last_s, data))
+        self._waiting += len(data or b"")
