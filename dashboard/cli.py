@@ -179,14 +179,14 @@ def _add_replay(commands: Commands) -> None:
 
 
 def _add_read(commands: Commands) -> None:
-    more = "It keeps a run folder of its own, or takes part in a run that goes on."
+    more = (
+        "For another computer, with a run folder of its own. A watch whose configuration says "
+        "elsewhere for this reader takes its readings over."
+    )
     read = _add(commands, "read", "run one reader alone", more)
     read.add_argument("config", metavar="CONFIG", type=Path, help="the rig, a TOML file")
     read.add_argument("reader", metavar="READER", help="the reader's name in the configuration")
     _add_folder(read)
-    read.add_argument(
-        "--run", metavar="RUN", type=Path, help="take part in the run in this folder, which waits for it"
-    )
     read.add_argument(
         "--publish-port", metavar="N", type=_port, help="where readings go out (default: as configured)"
     )

@@ -6,6 +6,7 @@ import re
 from collections.abc import Callable, Iterable, Mapping
 
 from acquire.config import Rig
+from acquire.config.reader import ReaderSection
 from acquire.readings import stream_of
 from acquire.run_folder import RunFolder
 from dashboard.child import python
@@ -18,25 +19,24 @@ LastHeard = Callable[[str], float | None]
 """Stream to the ``time.monotonic()`` of its publisher's last sign of life."""
 
 
-def reader_role(name: str) -> str:
-    """The role of a reader."""
-    return f"reader {name}"
-
-
-def local_readers(rig: Rig) -> tuple[str, ...]:
-    """Readers that this computer runs; the others are only listened to."""
-    return tuple(reader.name for reader in rig.readers if reader.elsewhere is None)
+def reader_role(reader: ReaderSection) -> str:
+    """The role of whoever puts this reader's readings on record."""
+    return f"reader {reader.name}" if reader.elsewhere is None else f"relay of {reader.name}"
 
 
 def roles_of(run: RunFolder, page_port: int, last_heard: LastHeard) -> list[Role]:
-    """Readers, estimator and page of a run, and the laboratory where the configuration has one."""
+    """Readers, or relays where they run elsewhere, estimator and page of a run."""
     roles = [
         Role(
-            reader_role(name),
-            python("acquire.reader", run.path, name),
-            _heard(last_heard, stream_of(name)),
+            reader_role(reader),
+            python(
+                "acquire.reader" if reader.elsewhere is None else "acquire.relay",
+                run.path,
+                reader.name,
+            ),
+            _heard(last_heard, stream_of(reader.name)),
         )
-        for name in local_readers(run.rig)
+        for reader in run.rig.readers
     ]
     roles.append(
         Role(ESTIMATOR, python("analyse.service", run.path), _heard(last_heard, "estimates"))

@@ -99,20 +99,15 @@ def watch(plan: WatchPlan, view: View, wish: Event) -> tuple[RunFolder, Summary]
 def endpoints_of(rig: Rig) -> tuple[dict[str, Endpoint], str]:
     """Where each stream meets its listeners, and the address of the estimator's inbox.
 
-    As configured for readers elsewhere, free addresses for all others, all different.
-    Raises BusError for a configured address that is not on loopback.
+    Free addresses, all different. Raises BusError if a reader elsewhere is not on loopback.
     """
-    elsewhere = {
-        stream_of(reader.name): Endpoint(reader.elsewhere.publish, reader.elsewhere.answer)
-        for reader in rig.readers
-        if reader.elsewhere is not None
-    }
-    for endpoint in elsewhere.values():
-        check_loopback(endpoint.publish)
-        check_loopback(endpoint.answer)
-    free = free_endpoints([*(name for name in run_tables(rig) if name not in elsewhere), "requests"])
-    requests = free.pop("requests").answer
-    return elsewhere | free, requests
+    for reader in rig.readers:
+        if reader.elsewhere is not None:
+            check_loopback(reader.elsewhere.publish)
+            check_loopback(reader.elsewhere.answer)
+    endpoints = free_endpoints([*run_tables(rig), "requests"])
+    requests = endpoints.pop("requests").answer
+    return endpoints, requests
 
 
 class _Watcher:
@@ -170,7 +165,7 @@ class _Watcher:
 
     def _end_in_order(self) -> None:
         deadline = time.monotonic() + END_S
-        readers = [roles.reader_role(name) for name in roles.local_readers(self._plan.rig)]
+        readers = [roles.reader_role(reader) for reader in self._plan.rig.readers]
         self._supervisor.ask_to_end([roles.PAGE])  # it has nothing to lose, and takes its time
         killed = self._supervisor.stop(readers, READERS_END_S)
         unsent = self._events.close(EVENTS_END_S)
@@ -237,13 +232,12 @@ class _Watcher:
             self._ramp_end.add(time_s, field_T)
 
     def _replace_hung_readers(self) -> None:
-        for name in roles.local_readers(self._plan.rig):
-            reader, stream = self._plan.rig.reader(name), stream_of(name)
-            allowed_s = HUNG_S + 2 * reader.period_s
+        for reader in self._plan.rig.readers:
+            stream, allowed_s = stream_of(reader.name), HUNG_S + 2 * reader.period_s
             if time.monotonic() - self._news_at[stream] > allowed_s:
                 self._news_at[stream] = time.monotonic()
-                role = roles.reader_role(name)
-                self._supervisor.replace(role, f"published nothing for {allowed_s:g} s")
+                why = f"published nothing for {allowed_s:g} s"
+                self._supervisor.replace(roles.reader_role(reader), why)
 
     def _ended_with_the_ramp(self) -> bool:
         if self._ramp_end is None or not self._ramp_end.over:

@@ -85,7 +85,7 @@ class Running:
                 continue
             if "-m" in line:
                 words = line[line.index("-m") + 1 :]
-                name = words[2] if words[0] == "acquire.reader" else words[0]
+                name = words[2] if words[0] in ("acquire.reader", "acquire.relay") else words[0]
                 found[name] = child
         return found
 

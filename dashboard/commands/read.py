@@ -1,14 +1,13 @@
-"""``rampside read CONFIG READER``: one reader alone, for a run of its own or one that goes on.
+"""``rampside read CONFIG READER``: one reader alone, with a run folder of its own.
 
-With ``--run`` the reader writes into the folder of a run that is being watched, and so both must
-see the same folder and the same clock: one computer, or a later way of comparing clocks.
+Meant for another computer: a watch whose configuration says ``elsewhere`` for this reader has its
+readings on record, too, through a relay.
 """
 
 from __future__ import annotations
 
 import argparse
 import time
-from pathlib import Path
 
 from acquire.bus import Endpoint, Subscriber, free_endpoints
 from acquire.bus.addresses import check_loopback
@@ -17,13 +16,12 @@ from acquire.config.problems import Problem, nearest_name
 from acquire.config.reader import ReaderSection
 from acquire.errors import UsageError
 from acquire.readings import stream_of
-from acquire.run_folder import LiveRun, RunFolder, create_run, open_run
+from acquire.run_folder import RunFolder, create_run
 from acquire.tables import Row, Table
 from dashboard.child import python
 from dashboard.configuration import load_configuration
 from dashboard.interrupts import asked_to_end
 from dashboard.ports import LOOPBACK
-from dashboard.roles import reader_role
 from dashboard.streams import reading_tables
 from dashboard.supervisor import ProcessNews, Role, Supervisor
 
@@ -36,43 +34,21 @@ def run(arguments: argparse.Namespace) -> int:
     """Read until Ctrl-C, or for as long as asked; exit status 0."""
     rig, config = load_configuration(arguments.config)
     reader = _reader(rig, arguments.reader)
+    endpoint = _endpoint(reader, arguments.publish_port, arguments.answer_port)
     table = reading_tables(rig)[stream_of(reader.name)]
-    if arguments.run is None:
-        endpoint = _endpoint(reader, arguments.publish_port, arguments.answer_port)
-        run_folder = create_run(rig, config, [table], arguments.folder)
+    run_folder = create_run(rig, config, [table], arguments.folder)
+    with asked_to_end() as wish:
         live = run_folder.write_live({table.stream: endpoint}, "")
-    else:
-        run_folder, live = _joined(arguments.run, config, reader)
-    seconds = arguments.seconds
-    end = float("inf") if seconds is None else time.monotonic() + seconds
-    endpoints = {table.stream: live.endpoints[table.stream]}
-    with (
-        asked_to_end() as wish,
-        Subscriber(run_folder.run_id, endpoints, {table.stream: table}) as subscriber,
-    ):
-        one = _One(run_folder, reader, table, subscriber)
-        try:
-            one.start(endpoints[table.stream])
-            while not wish.is_set() and time.monotonic() < end:
-                one.look()
-        finally:
-            one.end()
-            if arguments.run is None:
-                run_folder.end_live()
+        end = float("inf") if arguments.seconds is None else live.monotonic_start + arguments.seconds
+        with Subscriber(run_folder.run_id, live.endpoints, {table.stream: table}) as subscriber:
+            one = _One(run_folder, reader, table, subscriber)
+            try:
+                one.start(endpoint)
+                while not wish.is_set() and time.monotonic() < end:
+                    one.look()
+            finally:
+                one.end()
     return 0
-
-
-def _joined(path: Path, config: bytes, reader: ReaderSection) -> tuple[RunFolder, LiveRun]:
-    """A run that goes on and waits for this reader. Raises UsageError or RunError."""
-    run_folder = open_run(path)
-    live = run_folder.live()
-    if live is None or not live.alive:
-        raise UsageError(f"{path}: nobody watches this run any more; read without --run.")
-    if config != run_folder.config_bytes:
-        raise UsageError(f"{path}: was started with another configuration; take {path}/config.toml.")
-    if reader.elsewhere is None:
-        raise UsageError(f"{path}: reads {reader.name} itself, as its [elsewhere] is not given.")
-    return run_folder, live
 
 
 def _reader(rig: Rig, name: str) -> ReaderSection:
@@ -116,7 +92,7 @@ class _One:
     ) -> None:
         self._run, self._reader, self._table = run, reader, table
         self._subscriber = subscriber
-        self._role = reader_role(reader.name)
+        self._role = f"reader {reader.name}"
         command = python("acquire.reader", run.path, reader.name)
         self._supervisor = Supervisor(
             [Role(self._role, command, self._ready)], self._tell, lambda role, line: _say(line)
@@ -141,11 +117,12 @@ class _One:
             _say(f"{self._count} readings; {self._words(self._newest)}")
 
     def end(self) -> None:
-        """End the process in order."""
+        """End the process in order and close the run."""
         try:
             self._supervisor.stop([self._role], END_S)
         finally:
             self._supervisor.close()
+            self._run.end_live()
 
     def _ready(self, since: float) -> bool:
         heard = self._subscriber.health()[self._table.stream].last_heard_monotonic
