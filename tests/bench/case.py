@@ -1,7 +1,8 @@
 """A case: one simulated ramp, what is true of it, and what must be said of it.
 
-Each draw is a function of (scenario, index) alone. ``covered`` promises that every interval holds
-the truth; ``forbidden`` that nothing may be called stable. ``required``: at least one of these
+Each draw is a function of (scenario, index) alone. ``covered`` promises that the intervals hold
+the truth at stopping, and ``always`` at every point (not where something in the way, as a peak at
+zero field, can't be known before it is passed); ``forbidden`` that nothing may be called stable. ``required``: at least one of these
 cautions must be shown at some time; ``allowed``: cautions that are no mistake. Any other one is
 counted as false.
 """
@@ -38,6 +39,7 @@ class Case:
     profile: Profile
     streams: Streams
     covered: bool = True
+    always: bool = True
     forbidden: bool = False
     required: Codes = ()
     allowed: Codes = ()

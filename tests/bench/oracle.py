@@ -5,6 +5,9 @@ and its inverse is the Cramer-Rao bound, met by generalised least squares. R is 
 (the noise is stationary); it is undone by the Durbin-Levinson recursion, whose one-step
 predictors turn the readings into independent ones in the order of time. So the bound is there
 after each reading, not only at the end.
+
+Nobody knows the field before the first reading, hence nobody knows what the filters held then:
+the oracle, too, begins when they have settled.
 """
 
 from __future__ import annotations
@@ -23,6 +26,9 @@ from bench.setting import TARGET, TWO_SIDED_95
 
 STRAIGHT = 1.6448536269514722
 """Standard errors of a bend that must lie within the target (one-sided 95 %)."""
+
+NOISE_KNOWN = 10
+"""Independent readings that tell two coefficients and the noise to 1 / sqrt(2 * 8) = 25 %."""
 
 UNDETERMINED = 1e8
 """Inflation of a variance by the other columns beyond which a coefficient is not determined."""
@@ -118,8 +124,9 @@ def level_bound(case: Case) -> tuple[Bound, Array]:
 
 
 def _behind(lockin: LockIn, case: Case) -> tuple[Array, Array]:
-    """(times of all readings, the field behind the filter at them)."""
+    """(times of the settled readings, the field behind the filter at them)."""
     times = reading_times(lockin, case.profile)
+    times = times[times >= times[0] + lockin.stages.settling_s]
     return times, case.profile.behind(lockin.stages, times)
 
 
@@ -129,7 +136,8 @@ class Reference:
 
     ``precise``: the oracle's fixed-sample 95 % intervals of density and mobility are within the
     target; ``straight``: it could rule out bends that matter; ``crossed``: |B| has passed the
-    field where rho_xx = rho_xy; ``near_zero``: some |B| is below half of the largest.
+    field where rho_xx = rho_xy; ``near_zero``: some |B| is below half of the largest;
+    ``noise_known``: as many independent settled readings as tell the noise to a quarter.
     ``density_error``, ``mobility_error``: relative standard errors at the end of the ramp.
     """
 
@@ -137,13 +145,16 @@ class Reference:
     straight: float
     crossed: float
     near_zero: float
+    noise_known: float
     density_error: float
     mobility_error: float
 
     @property
     def fair(self) -> float:
         """The largest of all: no rule as demanded could stop before."""
-        return max(self.precise, self.straight, self.crossed, self.near_zero)
+        return max(
+            self.precise, self.straight, self.crossed, self.near_zero, self.noise_known
+        )
 
 
 def reference(case: Case) -> Reference:
@@ -166,9 +177,15 @@ def reference(case: Case) -> Reference:
     size = np.abs(case.profile.at(times))
     largest, smallest = np.maximum.accumulate(size), np.minimum.accumulate(size)
     swept = case.profile.swept(times)
-    demands = (precise, straight, largest >= case.sample.crossing_T, smallest <= 0.5 * largest)
-    fields = [_first(demand, swept) for demand in demands]
-    return Reference(*fields, float(n_error[-1]), float(mu_error[-1]))
+    lockin = case.rig.hall
+    each_s = max(lockin.stages.integral_time_s, lockin.period_s)
+    return Reference(
+        _first(precise, swept), _first(straight, swept),
+        _first(largest >= case.sample.crossing_T, swept),
+        _first(smallest <= 0.5 * largest, swept),
+        _first(times - times[0] >= NOISE_KNOWN * each_s, swept),
+        float(n_error[-1]), float(mu_error[-1]),
+    )
 
 
 def _first(met: Array, swept: Array) -> float:
@@ -192,7 +209,8 @@ def _solve(case: Case, channel: str, columns: list[int], j: int) -> float:
     lockin = case.rig.hall if hall else case.rig.longitudinal
     stream = case.streams[channel]
     last_s = case.streams["field"].time_s[-1] - case.rig.meter.delay_s
-    stream = stream.keep(stream.time_s <= last_s)
+    first_s = stream.time_s[0] + lockin.stages.settling_s
+    stream = stream.keep((stream.time_s >= first_s) & (stream.time_s <= last_s))
     covariances = noise_autocovariance(lockin, len(stream.x))
     if hall:
         covariances = covariances + field_autocovariance(case, len(stream.x))

@@ -20,7 +20,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 from scipy.signal import fftconvolve, lfilter
-from scipy.special import gammainc
+from scipy.special import gammainc, gammaincinv
 
 Array = NDArray[Any]
 MEMORY = 45.0
@@ -38,6 +38,17 @@ class RCStages:
     def lag_s(self) -> float:
         """How far the output lags behind a steady ramp."""
         return self.poles * self.time_constant_s
+
+    @property
+    def settling_s(self) -> float:
+        """Time after which all but 0.1 % of what was before has been forgotten."""
+        return float(gammaincinv(self.poles, 0.999)) * self.time_constant_s
+
+    @property
+    def integral_time_s(self) -> float:
+        """Time that an independent reading takes: the integral of the noise's autocorrelation
+        over all lags, which is white noise's density at zero over the variance behind."""
+        return 0.5 / float(self.covariance(1.0)[-1, -1])
 
     def step(self, time_s: Array) -> Array:
         """Output at times after a unit step at zero."""

@@ -61,12 +61,17 @@ def range_glitch(rng: np.random.Generator) -> dict[str, object]:
 
 @scenario
 def drift_1_percent(rng: np.random.Generator) -> dict[str, object]:
-    """The current drifts by 1 % in ten minutes; minutes of hold before the ramp."""
-    setting = draw(rng, Ranges(noise_share=(0.01, 0.06)))
-    rig = replace(setting.rig, gain_drift_per_s=0.01 / 600.0 * float(rng.choice((1.0, -1.0))))
+    """The current drifts by 1 % in ten minutes; minutes of hold before the ramp that show it."""
+    wait, drift = float(rng.uniform(120.0, 300.0)), 0.01 / 600.0
+    while True:
+        setting = draw(rng, Ranges(noise_share=(0.01, 0.06)))
+        level = setting.rig.current_A * setting.sample.rho_0 * setting.rig.squares
+        error = setting.rig.hall.density_V_per_rtHz * np.sqrt(6.0 / wait**3) / level
+        if drift > 8.0 * error:
+            break
+    rig = replace(setting.rig, gain_drift_per_s=drift * float(rng.choice((1.0, -1.0))))
     start = setting.largest_T * float(rng.uniform(0.1, 0.3))
-    profile = path([start, -setting.largest_T], setting.rate_T_per_s,
-                   wait_s=float(rng.uniform(120.0, 300.0)))
+    profile = path([start, -setting.largest_T], setting.rate_T_per_s, wait_s=wait)
     return {"setting": setting, "rig": rig, "profile": profile, "covered": False,
             "forbidden": True, "required": ("drift",),
             "allowed": ("not_straight", "noise_high", "field_stuck", "contacts_misaligned",
@@ -147,7 +152,7 @@ def flicker_noise(rng: np.random.Generator) -> dict[str, object]:
     hall, along = (replace(one, corner_Hz=corner) for one in (setting.rig.hall,
                                                               setting.rig.longitudinal))
     return {"setting": setting, "rig": replace(setting.rig, hall=hall, longitudinal=along),
-            "allowed": ("noise_high", "drift")}
+            "allowed": ("noise_high", "drift"), "always": False}
 
 
 @scenario
@@ -174,7 +179,7 @@ def stream_silent(rng: np.random.Generator) -> dict[str, object]:
 @scenario
 def lost_answers(rng: np.random.Generator) -> dict[str, object]:
     """5 % of the answers are lost, on every channel."""
-    return {"setting": draw(rng, Ranges()),
+    return {"setting": draw(rng, Ranges()), "allowed": ("unusable_readings",),
             "spoil": lambda case, later: faults.lose(case.streams, 0.05, later)}
 
 

@@ -2,6 +2,7 @@
 
 Every ramp is a function of its scenario's name and its number, so a run with other numbers of
 jobs or of ramps gives the same ramps. ``--index`` runs single ramps and says all about them.
+A whole run takes hours; with ``--keep FOLDER`` it goes on where it was broken off.
 """
 
 from __future__ import annotations
@@ -10,6 +11,7 @@ import argparse
 import os
 import sys
 import time
+from collections.abc import Iterator
 from concurrent.futures import ProcessPoolExecutor
 from multiprocessing import get_context
 from pathlib import Path
@@ -20,9 +22,12 @@ sys.path[:0] = [str(Path(__file__).resolve().parents[level]) for level in (1, 2)
 
 from bench import table
 from bench.scenarios import make, names
+from bench.store import Store
 from bench.trial import Outcome, run
 
 BATCH = 10
+
+Found = dict[str, list[Outcome]]
 
 
 def one(job: tuple[str, int]) -> Outcome:
@@ -30,18 +35,37 @@ def one(job: tuple[str, int]) -> Outcome:
     return run(make(*job))
 
 
-def outcomes(scenarios: list[str], ramps: int, jobs: int) -> dict[str, list[Outcome]]:
-    """All ramps of the scenarios, over processes."""
-    work = [(name, index) for name in scenarios for index in range(ramps)]
+def outcomes(scenarios: list[str], ramps: int, jobs: int, store: Store) -> Found:
+    """All ramps of the scenarios, over processes; says on stderr when a scenario is done."""
+    found: Found = {}
+    for name in scenarios:
+        kept = store.load(name, ramps)
+        if kept is not None:
+            found[name] = kept
+    wanted = [name for name in scenarios if name not in found]
+    work = [(name, index) for name in wanted for index in range(ramps)]
+    start = time.monotonic()
+    for done in _all(work, jobs):
+        so_far = found.setdefault(done.scenario, [])
+        so_far.append(done)
+        if len(so_far) == ramps:
+            store.save(done.scenario, so_far)
+            missed = "; ".join(table.failings(so_far)) or "kept"
+            print(f"{time.monotonic() - start:7.0f} s  {done.scenario}: {missed}",
+                  file=sys.stderr, flush=True)
+    return {name: found[name] for name in scenarios}
+
+
+def _all(work: list[tuple[str, int]], jobs: int) -> Iterator[Outcome]:
+    """Outcomes in the order of the work."""
     if jobs <= 1:
-        done = [one(job) for job in work]
-    else:
-        with ProcessPoolExecutor(jobs, mp_context=get_context("spawn")) as pool:
-            done = list(pool.map(one, work, chunksize=BATCH))
-    return {name: [out for out in done if out.scenario == name] for name in scenarios}
+        yield from map(one, work)
+        return
+    with ProcessPoolExecutor(jobs, mp_context=get_context("spawn")) as pool:
+        yield from pool.map(one, work, chunksize=BATCH)
 
 
-def report(found: dict[str, list[Outcome]], took_s: float) -> str:
+def report(found: Found, took_s: float) -> str:
     """Tables and notes as Markdown."""
     kept = table.markdown(table.PROMISES, [table.promises(ramps) for ramps in found.values()])
     beside = table.markdown(
@@ -63,8 +87,9 @@ EXPLAINED = (
     "\"at every point\": all intervals of the whole ramp did, all three numbers. \"stop / oracle\": "
     "field swept at stopping over that at which an oracle that knows the noise is good to the "
     "target with a fixed-sample interval; \"stop / fair\": over the largest of that and what the "
-    "rules on straightness, crossing and nearness of zero demand of the same oracle; medians and "
-    "90 % quantiles. Errors in per cent."
+    "rules on straightness, crossing and nearness of zero demand of the same oracle, and the field "
+    "at which ten independent readings after settling have told the noise; medians and 90 % "
+    "quantiles. Errors in per cent."
 )
 COMPARED = (
     "Coverage of the density's nominal 95 % interval where each rule stopped, in per cent, and the "
@@ -88,6 +113,8 @@ def main(arguments: list[str] | None = None) -> int:
     parser.add_argument("--scenario", action="append", metavar="NAME", help="may be given again")
     parser.add_argument("--jobs", type=int, default=os.cpu_count() or 1)
     parser.add_argument("--markdown", type=Path, metavar="FILE")
+    parser.add_argument("--keep", type=Path, metavar="FOLDER",
+                        help="keep outcomes here, and take those that this very code made before")
     parser.add_argument("--index", type=int, action="append", help="single ramps, in full")
     parser.add_argument("--list", action="store_true", help="name the scenarios and end")
     given = parser.parse_args(arguments)
@@ -100,11 +127,11 @@ def main(arguments: list[str] | None = None) -> int:
         print(f"no such scenario: {', '.join(unknown)}; there are {', '.join(names())}",
               file=sys.stderr)
         return 2
-    if given.index:
+    if given.index is not None:
         print("\n\n".join(single(name, index) for name in chosen for index in given.index))
         return 0
     start = time.monotonic()
-    found = outcomes(chosen, given.ramps, given.jobs)
+    found = outcomes(chosen, given.ramps, given.jobs, Store(given.keep))
     text = report(found, time.monotonic() - start)
     print(text)
     if given.markdown is not None:

@@ -28,7 +28,9 @@ def holes(rng: np.random.Generator) -> dict[str, object]:
 def fixed_ramp(rng: np.random.Generator) -> dict[str, object]:
     """A ramp of sense for its noise, to its end, against the best that can be had."""
     setting = draw(rng, Ranges(noise_share=(0.05, 0.25)))
-    return {"setting": setting, "exact_line": True}
+    wait = setting.rig.hall.stages.settling_s * rng.uniform(1.1, 2.0)
+    profile = path([0.0, setting.largest_T], setting.rate_T_per_s, wait_s=wait)
+    return {"setting": setting, "profile": profile, "exact_line": True}
 
 
 @scenario
@@ -61,7 +63,7 @@ def film_to_9_T(rng: np.random.Generator) -> dict[str, object]:
     profile = None
     if rng.random() < 0.3:
         profile = path([-3.0, setting.largest_T], setting.rate_T_per_s)
-    return {"setting": setting, "sample": sample, "profile": profile}
+    return {"setting": setting, "sample": sample, "profile": profile, "always": False}
 
 
 def _magnetoresistive(rng: np.random.Generator, setting: Setting, span: tuple[float, float]
@@ -129,6 +131,7 @@ def remanent_field(rng: np.random.Generator) -> dict[str, object]:
     rig = replace(setting.rig, meter=replace(setting.rig.meter, zero_T=zero))
     return {"setting": setting, "sample": sample, "rig": rig,
             "profile": through_zero(setting, rng), "required": ("field_offset",),
+            "always": False,
             "allowed": ("contacts_misaligned", "quick_readings_apart")}
 
 

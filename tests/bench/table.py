@@ -47,7 +47,7 @@ def promises(ramps: Sequence[Outcome]) -> list[str]:
     total, covered = len(ramps), ramps[0].covered
     line = [ramps[0].scenario, str(total), share(len(stopped), total)]
     if covered:
-        held = [share(_count(stopped, lambda one, n=name: one.kept[n].held_at_stop), len(stopped))
+        held = [share(sum(one.kept[name].held_at_stop for one in stopped), len(stopped))
                 for name in NUMBERS]
         line += [*held, share(_count(stopped, lambda one: one.held_at_stop), len(stopped)),
                  share(_count(ramps, lambda one: one.always_held), total)]
@@ -67,7 +67,8 @@ def failings(ramps: Sequence[Outcome]) -> list[str]:
     if first.covered:
         if not at_least(_count(stopped, lambda one: one.held_at_stop), len(stopped), COVERAGE):
             missed.append("coverage at stopping")
-        if not at_least(_count(ramps, lambda one: one.always_held), total, COVERAGE):
+        always = _count(ramps, lambda one: one.always_held)
+        if first.always and not at_least(always, total, COVERAGE):
             missed.append("coverage at every point")
         fair = _ratios(stopped, "fair")
         if len(fair) and np.median(fair) > STOP_RATIO:

@@ -74,6 +74,7 @@ class Outcome:
     scenario: str
     index: int
     covered: bool
+    always: bool
     forbidden: bool
     required: tuple[str, ...]
     allowed: tuple[str, ...]
@@ -154,8 +155,8 @@ def _signal(lockin: LockIn) -> Signal:
 
 def run(case: Case) -> Outcome:
     """Feed a case to the estimator, reading by reading."""
-    out = Outcome(case.scenario, case.index, case.covered, case.forbidden, case.required,
-                  case.allowed, kept={name: Kept() for name in NUMBERS})
+    out = Outcome(case.scenario, case.index, case.covered, case.always, case.forbidden,
+                  case.required, case.allowed, kept={name: Kept() for name in NUMBERS})
     truths = dict(zip(NUMBERS, (
         case.sample.density_per_m2, case.sample.mobility_m2_per_V_s, case.sample.scattering_time_s
     )))
