@@ -21,6 +21,9 @@ from analyse.lockin import LockinFilter
 
 State = tuple[float, ...]
 
+CLOSEST_S = 1e-9
+"""Field readings that are closer in time are one."""
+
 
 def advance_stages(
     state: State, start: float, rate: float, dt: float, time_constant_s: float
@@ -82,7 +85,7 @@ class FieldTrack:
             self._knots.append(self._fresh(time_s, field_T))
             return
         last = self._knots[-1]
-        if time_s <= last.time_s:
+        if time_s - last.time_s <= CLOSEST_S:
             return
         if self._too_long(time_s - last.time_s):
             self._knots.append(self._fresh(time_s, field_T))

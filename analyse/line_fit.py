@@ -58,7 +58,8 @@ class LineFit:
 
     def half_width(self, j: int, phi: float, alpha: float) -> float:
         """Half-width of the confidence sequence of coefficient j."""
-        return self.standard_error(j) * t_radius(self.nu, self.z2(j), phi, alpha)
+        radius = t_radius(self.nu, self.z2(j), phi, alpha)
+        return self.standard_error(j) * radius if math.isfinite(radius) else math.inf
 
 
 def fit_columns(pool: Pool, columns: tuple[int, ...], excess: bool = False) -> LineFit | None:

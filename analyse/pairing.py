@@ -13,7 +13,7 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 
 from analyse.channel import Channel, Sample
-from analyse.field_track import FieldTrack
+from analyse.field_track import CLOSEST_S, FieldTrack
 from analyse.hall_bar import HallBar
 from analyse.lockin import LockinFilter
 from analyse.setup import Setup
@@ -24,6 +24,8 @@ LARGEST_T = 1e4
 """No field that was ever made is larger; a larger reading is none."""
 LARGEST_OHM = 1e30
 """Nothing conducts less; a larger resistivity comes of a current that is none."""
+SMALLEST_T, SMALLEST_OHM = 1e-15, 1e-30
+"""What is smaller is nothing; numbers far below have no digits left to reckon with."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -111,6 +113,7 @@ class Pairing:
 
     def _push_field(self, time_s: float, field_T: float | None, status: str) -> None:
         if status == "ok" and field_T is not None and abs(field_T) <= LARGEST_T:
+            field_T = field_T if abs(field_T) >= SMALLEST_T else 0.0
             self._add_knot(self._gate.push(field_T, (time_s, field_T)))
         else:
             self._add_knot(self._gate.flush())
@@ -124,7 +127,7 @@ class Pairing:
         if wild:
             self.wild_field_readings += 1
             return
-        if self._knots and time_s <= self._knots[-1][0]:
+        if self._knots and time_s - self._knots[-1][0] <= CLOSEST_S:
             return
         self._knots.append((time_s, field_T))
         for track in self._tracks:
@@ -183,10 +186,11 @@ class Pairing:
         per_rho = current * (self._bar.squares if role == "longitudinal" else 1.0)
         if not abs(sample.value) <= LARGEST_OHM * abs(per_rho) or not per_rho:
             return Pair(role, sample.time_s, "lost")
+        rho = sample.value / per_rho
         quadrature = None if sample.quadrature is None else sample.quadrature / per_rho
         return Pair(
-            role, sample.time_s, sample.kind, field_T, rate, sample.value / per_rho, current,
-            quadrature, sample.track.stages,
+            role, sample.time_s, sample.kind, field_T, rate,
+            rho if abs(rho) >= SMALLEST_OHM else 0.0, current, quadrature, sample.track.stages,
         )
 
     def _forget(self, time_s: float) -> None:
