@@ -57,7 +57,8 @@ def replay(
         A file to be made with the table of estimates. Raises UsageError if it is there already.
     """
     maker = RowMaker(rig)
-    summary = Summary(name, [bar.name for bar in rig.hall_bars], rig.target.confidence)
+    bars, timed = [bar.name for bar in rig.hall_bars], rig.table is None or rig.table.time is not None
+    summary = Summary(name, bars, rig.target.confidence, timed)
     comparison = None if logged is None else _Comparison(logged)
     codec, count = RowCodec(ESTIMATES), 0
     with ExitStack() as stack:

@@ -56,11 +56,16 @@ class Summary:
         Names of the Hall bars, in the order in which they are told.
     confidence
         The configured confidence of the intervals.
+    timed
+        False for a table without a time column, whose times count its rows.
     """
 
-    def __init__(self, run: str, hall_bars: Iterable[str], confidence: float) -> None:
+    def __init__(
+        self, run: str, hall_bars: Iterable[str], confidence: float, timed: bool = True
+    ) -> None:
         self.run = run
         self.confidence = confidence
+        self.timed = timed
         self.bars = {name: BarSummary() for name in hall_bars}
 
     def add_estimate(self, row: Row) -> None:

@@ -232,7 +232,8 @@ class _Watcher:
             self._ramp_end.add(time_s, field_T)
 
     def _replace_hung_readers(self) -> None:
-        for reader in self._plan.rig.readers:
+        here = [reader for reader in self._plan.rig.readers if reader.elsewhere is None]
+        for reader in here:  # a relay has nothing to say while its reader elsewhere is silent
             stream, allowed_s = stream_of(reader.name), HUNG_S + 2 * reader.period_s
             if time.monotonic() - self._news_at[stream] > allowed_s:
                 self._news_at[stream] = time.monotonic()

@@ -77,7 +77,7 @@ def left_to_target(bar: BarSummary) -> str:
 
 def _bar_lines(name: str, bar: BarSummary, summary: Summary) -> Iterator[str]:
     points = bar.get("field_points") or 0
-    yield f"{name}: {_verdict(bar)}"
+    yield f"{name}: {_verdict(bar, summary.timed)}"
     for column, title in NAMES.items():
         value, ends = number(bar, column)
         inside = f"   {100 * summary.confidence:g} % interval {ends}" if ends else ""
@@ -89,10 +89,11 @@ def _bar_lines(name: str, bar: BarSummary, summary: Summary) -> Iterator[str]:
         yield f"  caution {code}: {sentence}"
 
 
-def _verdict(bar: BarSummary) -> str:
+def _verdict(bar: BarSummary, timed: bool) -> str:
     if bar.stable_at is not None:
         time_s, field_T = bar.stable_at
-        return f"stable since {field(field_T)}, {duration(time_s)} after the start"
+        when = f"{duration(time_s)} after the start" if timed else f"at row {time_s:.0f}"
+        return f"stable since {field(field_T)}, {when}"
     waiting = bar.get("waiting_for")
     return f"converging: {waiting}" if waiting else bar.verdict
 

@@ -65,6 +65,12 @@ def test_stable_since_and_not_any_more(summary: Summary) -> None:
     assert "converging: an open caution" in told(summary)
 
 
+def test_without_times_the_rows_are_counted() -> None:
+    summary = Summary("run", ["bar"], 0.95, timed=False)
+    summary.add_estimate(estimate(time_s=129.0, field_T=0.05, verdict="stable"))
+    assert "stable since +0.0500 T, at row 129" in told(summary)
+
+
 def test_a_caution_is_told_while_it_is_open(summary: Summary) -> None:
     summary.add_event(event(kind="caution", hall_bar="bar", code="drift", text="It drifts."))
     summary.add_event(event(kind="process", code="died", text="reader x was killed"))
