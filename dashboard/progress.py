@@ -1,8 +1,6 @@
-"""What is known of a run while it goes on: the field, the readings, the numbers, what happened."""
+"""What is known of a run while it goes on: the field, the readings, the numbers."""
 
 from __future__ import annotations
-
-from collections import deque
 
 from acquire.config import Rig
 from acquire.readings import stream_of
@@ -11,7 +9,6 @@ from analyse.estimate_table import ESTIMATES, EVENTS
 from dashboard.streams import reading_tables
 from dashboard.summary import Summary
 
-NEWS_KEPT = 5
 _STATUS, _DETAIL, _TIME = 3, 4, 1
 _NO_READING = ("settings", "end")
 
@@ -24,7 +21,6 @@ class Progress:
         self.readings = {reader.name: 0 for reader in rig.readers}
         self.unusable = dict.fromkeys(self.readings, 0)
         self.trouble: dict[str, str] = {}
-        self.news: deque[str] = deque(maxlen=NEWS_KEPT)
         self.field_T: float | None = None
         self.field_time_s: float | None = None
         self._readers = {stream_of(name): name for name in self.readings}

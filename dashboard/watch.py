@@ -123,6 +123,7 @@ class _Watcher:
         self._ramp_end = None if ramp is None else RampEnd(ramp.path_T, ramp.duration_s)
         self._field_time_s = -1.0
         self._said_over = False
+        self._to_open = plan.browser
         self._news_at = dict.fromkeys(live.endpoints, time.monotonic())
         self._subscriber = Subscriber(run.run_id, live.endpoints, run_tables(plan.rig))
         self._health = self._subscriber.health()
@@ -134,7 +135,9 @@ class _Watcher:
         self._view.say(f"Page: {self._address}\nRun:  {self._run.path}")
         if self._plan.laboratory:
             self._start_laboratory(wish)
-        self._supervisor.start(name for name in self._supervisor.names if name != roles.LABORATORY)
+        if not wish.is_set():
+            names = self._supervisor.names
+            self._supervisor.start(name for name in names if name != roles.LABORATORY)
         shown = 0.0
         while not (wish.is_set() or self._time_is_up() or self._ended_with_the_ramp()):
             self._listen()
@@ -192,7 +195,7 @@ class _Watcher:
     def _finish_estimates(self, within_s: float) -> bool:
         """Have the estimator work up all that the readers have written."""
         if self._supervisor.pid(roles.ESTIMATOR) is None:
-            return False
+            return self._supervisor.state(roles.ESTIMATOR) == "not started"
         message = {"kind": "run", "code": "finish", "text": "the run ends", "id": uuid.uuid4().hex}
         try:
             reply = ask(self._live.requests, message, within_s)
@@ -257,16 +260,21 @@ class _Watcher:
 
     def _moment(self) -> Moment:
         states = {name: self._supervisor.state(name) for name in self._supervisor.names}
-        return Moment(time.monotonic() - self._live.monotonic_start, states, self._supervisor.restarts)
+        time_s = time.monotonic() - self._live.monotonic_start
+        return Moment(time_s, states, self._supervisor.restarts)
 
     def _process_news(self, news: ProcessNews) -> None:
-        if news.happening == "ready":
-            if news.role == roles.PAGE and self._plan.browser and not open_page(self._address):
+        if news.happening != "ready":
+            self._view.say(f"{news.text}.")
+            self._events.send("process", news.happening, news.in_full)
+        if news.role == roles.PAGE and news.happening in ("ready", "back"):
+            self._show_page()
+
+    def _show_page(self) -> None:
+        if self._to_open:
+            self._to_open = False
+            if not open_page(self._address):
                 self._view.say(f"No browser to open here: open {self._address} yourself.")
-            return
-        self.progress.news.append(news.text)
-        self._view.say(f"{news.text}.")
-        self._events.send("process", news.happening, news.in_full)
 
     def _hear(self, role: str, line: str) -> None:
         self._view.say(line if line.startswith(f"{role}:") else f"{role}: {line}")
