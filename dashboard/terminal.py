@@ -148,8 +148,8 @@ def _numbers(name: str, bar: BarSummary, confidence: float) -> Table:
     for heading in ("", "value", f"{100 * confidence:g} % interval, at every look"):
         table.add_column(heading)
     for column, title in NAMES.items():
-        value, interval = number(bar, column)
-        table.add_row(title, Text(value, "bold"), interval)
+        value, ends = number(bar, column, 1)
+        table.add_row(title, Text(value, "bold"), ends)
     return table
 
 

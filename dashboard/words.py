@@ -18,13 +18,16 @@ def told(summary: Summary) -> str:
     )
 
 
-def number(bar: BarSummary, column: str) -> tuple[str, str]:
-    """One of the three numbers with its standard uncertainty, and its interval."""
+def number(bar: BarSummary, column: str, units: int = 2) -> tuple[str, str]:
+    """One of the three numbers with its standard uncertainty, and its interval.
+
+    ``units``: in how many units the former is given, if it has so many.
+    """
     value, u = bar.get(column), bar.get(f"{column}_u")
     if value is None or u is None:
         return NOT_KNOWN, ""
-    text = " = ".join(write(QUANTITIES[column], value, u).texts)
-    return text, interval(bar, column)
+    texts = write(QUANTITIES[column], value, u).texts
+    return " = ".join(texts[:units]), interval(bar, column)
 
 
 def interval(bar: BarSummary, column: str) -> str:
@@ -38,12 +41,8 @@ def interval(bar: BarSummary, column: str) -> str:
 def numbers_of(bar: BarSummary) -> Iterator[str]:
     """The three numbers with their intervals, for one line."""
     for column, name in NAMES.items():
-        value, u = bar.get(column), bar.get(f"{column}_u")
-        if value is None or u is None:
-            yield f"{name} {NOT_KNOWN}"
-        else:
-            text = write(QUANTITIES[column], value, u).texts[0]
-            yield f"{name} {text} [{interval(bar, column)}]"
+        value, ends = number(bar, column, 1)
+        yield f"{name} {value} [{ends}]" if ends else f"{name} {value}"
 
 
 def fitting(text: str, encoding: str | None) -> str:
