@@ -341,6 +341,20 @@ def test_a_pause_really_holds_the_field_and_what_is_measured_follows() -> None:
     assert magnet("PAUSE;STATE?") == str(int(State.AT_TARGET))
 
 
+def test_a_supply_that_waits_for_a_question_misses_no_reader() -> None:
+    section = Magnet(path_T=(0.0, 1.0), rate_T_per_min=6.0, wait_s=2.0, waits_for_question=True)
+    magnet = SimulatedMagnet(section, seed=3)
+    assert magnet.state(100.0) == State.WAITING
+    assert [magnet.reading_T(t) for t in (100.0, 102.0, 103.0)] == pytest.approx([0.0, 0.0, 0.1])
+    assert magnet.state(103.0) == State.RAMPING
+    held = SimulatedMagnet(section, seed=3)
+    held.hold(5.0)
+    assert held.reading_T(50.0) == 0.0
+    assert held.state(50.0) == State.HELD
+    held.go_on(50.0)
+    assert held.reading_T(53.0) == pytest.approx(0.1)
+
+
 def test_a_laboratory_costs_little() -> None:
     bench = Bench(scenario())
     talks = [Talk(bench, name) for name in ("xx", "xy", "magnet")]

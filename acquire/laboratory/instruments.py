@@ -56,8 +56,8 @@ def magnet_interpreter(magnet: SimulatedMagnet) -> Interpreter:
             "TARGET?": lambda moment, text: _decimal(course.target_T(moment.time_s)),
             "RATE?": lambda moment, text: _decimal(magnet.section.rate_T_per_min),
             "STATE?": lambda moment, text: str(int(magnet.state(moment.time_s))),
-            "PAUSE": lambda moment, text: course.hold(moment.time_s),
-            "RESUME": lambda moment, text: course.go_on(moment.time_s),
+            "PAUSE": lambda moment, text: magnet.hold(moment.time_s),
+            "RESUME": lambda moment, text: magnet.go_on(moment.time_s),
         },
     )
 

@@ -40,7 +40,9 @@ class Sample(Section):
 
 
 class Magnet(Section):
-    """A magnet supply that ramps along ``path_T``, beginning ``wait_s`` after the start.
+    """A magnet supply that ramps along ``path_T``, beginning ``wait_s`` after the start, or, if it
+    ``waits_for_question``, after it was first asked for the field: so nothing of the ramp is missed
+    by readers that take long to start.
 
     The sample's field is the supply's own plus ``remanent_T``. What the supply tells of its own
     is rounded to ``resolution_T`` and has white noise of ``noise_T`` (standard deviation).
@@ -51,6 +53,7 @@ class Magnet(Section):
     path_T: Several[float]
     rate_T_per_min: Positive
     wait_s: NotNegative = 3.0
+    waits_for_question: bool = False
     remanent_T: float = 0.0
     noise_T: NotNegative = 0.0
     resolution_T: NotNegative = 1e-6
