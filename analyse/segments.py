@@ -7,6 +7,7 @@ can be compared with what happens inside them. The regressors are those of :mod:
 
 from __future__ import annotations
 
+import itertools
 import math
 
 import numpy as np
@@ -142,20 +143,23 @@ class Segments:
         return bin_number != active.first_bin or crossed_zero
 
     def _thin(self) -> None:
-        """Join the neighbours that together span the least field."""
-        best, best_span = None, math.inf
-        for index, (one, two) in enumerate(zip(self.closed, self.closed[1:])):
-            if one.sweep != two.sweep or one.sign != two.sign:
-                continue
-            span = math.log(
-                (max(one.high_T, two.high_T) + 1e-3) / (min(one.low_T, two.low_T) + 1e-3)
-            ) + 1e-4 * (one.count + two.count) / 100
-            if span < best_span:
-                best, best_span = index, span
-        if best is None:
-            return
+        """Join the neighbours that together span the least field; within one sweep and direction
+        of the field if there are such, else any, so that the list stays short in any case. The
+        newest stays as it is: who uses the segments has not taken it yet."""
+        pairs = list(enumerate(itertools.pairwise(self.closed[:-1])))
+        alike = [
+            pair for pair in pairs
+            if pair[1][0].sweep == pair[1][1].sweep and pair[1][0].sign == pair[1][1].sign
+        ]
+        best = min(alike or pairs, key=lambda pair: _span(*pair[1]))[0]
         self.closed[best].join(self.closed[best + 1])
         del self.closed[best + 1]
+
+
+def _span(one: Segment, two: Segment) -> float:
+    """By how much field two segments together would span, as octaves, a little more if large."""
+    ratio = (max(one.high_T, two.high_T) + 1e-3) / (min(one.low_T, two.low_T) + 1e-3)
+    return math.log(ratio) + 1e-4 * (one.count + two.count) / 100
 
 
 def field_bin(field_T: float) -> int:
