@@ -18,7 +18,9 @@ from pathlib import Path
 
 for _name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
     os.environ.setdefault(_name, "1")          # the cores go to the ramps
-sys.path[:0] = [str(Path(__file__).resolve().parents[level]) for level in (1, 2)]
+for _folder in Path(__file__).resolve().parents[1:3]:     # tests/, and the top for analyse
+    if str(_folder) not in sys.path:
+        sys.path.insert(0, str(_folder))
 
 from bench import table
 from bench.scenarios import make, names
