@@ -21,6 +21,8 @@ from analyse.transport_fit import (
 from analyse.window import Bounds, agrees, find_bounds
 
 ROLES = ("hall", "longitudinal")
+GROWN = 1.12
+"""Growth of the number of segments after which the window is looked for anew."""
 NARROWINGS = 8
 NARROWER = 0.8
 CLEARLY = 0.8
@@ -70,7 +72,8 @@ class WindowedFit:
         self.excess = (1.0, 1.0)
         self._searched = 0
         self._now: tuple[Pool, Pool] | None = None
-        self._inner: list[Pool] = []
+        self._inner: list[tuple[Pool, Bounds]] = []
+        self._narrowed = False
         self.shapes = Shapes()
         self._time_s = [math.inf, -math.inf]
 
@@ -93,7 +96,7 @@ class WindowedFit:
     def inner_pools(self) -> list[Pool]:
         """Longitudinal readings from ever smaller parts of the window, down to zero field; empty
         while the whole window shows no bend and no excess of noise."""
-        return self._inner
+        return [pool for pool, _ in self._inner]
 
     @property
     def window_T(self) -> tuple[float, float] | None:
@@ -132,21 +135,30 @@ class WindowedFit:
         return pool
 
     def _closed(self, role: str) -> None:
+        """A segment was closed: take it in, or look for the window anew when that is due."""
         newest = self._segments[role].closed[-1]
         total = sum(len(one.closed) for one in self._segments.values())
         inside = self._widest.holds(newest)
         odd = inside and not agrees(newest, self._wide[role], role, self._scale_T)
-        if odd or total >= self._searched * 1.15 + 1:
+        if odd or total >= self._searched * GROWN + 1:
             self._searched = total
             self._search()
-        elif inside:
+            self._narrow()
+            self._inner = self._halve(self._pools["longitudinal"])
+            self.shapes = self._seen_shapes()
+            return
+        if inside:
             self._wide[role].take(newest)
-        self._narrow()
-        hall, along = (self._pools[each] for each in ROLES)
-        self._inner = self._halve(along)
-        self.shapes = self._seen_shapes(hall, along)
+        if self._narrowed and self.bounds.holds(newest):
+            self._pools[role].take(newest)
+        if role == "longitudinal":
+            for pool, limit in self._inner:
+                if limit.holds(newest):
+                    pool.take(newest)
+        self.excess = self._excesses()
 
-    def _seen_shapes(self, hall: Pool, along: Pool) -> Shapes:
+    def _seen_shapes(self) -> Shapes:
+        hall, along = (self._pools[each] for each in ROLES)
         inside = [one for one in self._segments["hall"].closed if self.bounds.holds(one)]
         return Shapes(
             fall_off(along, "longitudinal", self._scale_T),
@@ -156,18 +168,19 @@ class WindowedFit:
             sweeps_apart(inside, self._scale_T),
         )
 
-    def _halve(self, along: Pool) -> list[Pool]:
+    def _halve(self, along: Pool) -> list[tuple[Pool, Bounds]]:
         plain = longitudinal_columns(along)[:2] in (LEVEL, (*LEVEL, OTHER_PARITY))
         if plain and self.excess[1] == 1.0:
             return []
-        pools, high_T = [], along.high_T
+        parts, high_T = [], along.high_T
         for _ in range(HALVINGS):
             high_T /= 2
-            pool = self._pool("longitudinal", Bounds(self.bounds.low_T, high_T))
+            bounds = Bounds(self.bounds.low_T, high_T)
+            pool = self._pool("longitudinal", bounds)
             if pool.effective < MIN_INNER or pool.groups < 4:
                 break
-            pools.append(pool)
-        return pools
+            parts.append((pool, bounds))
+        return parts
 
     def _search(self) -> None:
         closed = {role: one.closed for role, one in self._segments.items()}
@@ -179,7 +192,7 @@ class WindowedFit:
     def _narrow(self) -> None:
         """Leave out the upper part of the window where that makes the Hall slope more certain:
         what lies there is then structure (oscillations that set in), not information."""
-        self.bounds, self._pools = self._widest, dict(self._wide)
+        self.bounds, self._pools, self._narrowed = self._widest, dict(self._wide), False
         hall = self._pools["hall"]
         self.excess = self._excesses()
         best = self._uncertainty(hall, self.excess[0] > 1)
@@ -196,6 +209,7 @@ class WindowedFit:
             if total < CLEARLY * best:
                 best, self.bounds = total, bounds
         if self.bounds is not self._widest:
+            self._narrowed = True
             self._pools = {role: self._pool(role, self.bounds) for role in ROLES}
             self.excess = self._excesses()
 
