@@ -10,6 +10,9 @@ from analyse.field_track import FieldTrack
 from analyse.setup import Signal
 from analyse.spikes import SpikeGate
 
+MOST_HELD = 300
+UNFILTERED_LONGEST = 3
+
 
 @dataclass(frozen=True, slots=True)
 class Sample:
@@ -51,13 +54,13 @@ class Channel:
         if good and self.signal.detection == "XY":
             good = y is not None and math.isfinite(y)
         backwards = time_s < self._newest_s
-        time_s = self._newest_s = max(time_s, self._newest_s)
+        time_s = max(time_s, self._newest_s)
+        self._fit_gate(time_s - self._newest_s)
+        self._newest_s = time_s
         beyond = x is not None and abs(x) >= OVERLOAD_SENTINEL
         if not good or backwards or beyond:
-            self._release(self._gate.flush())
             kind = "overload" if beyond or status in ("overload", "range") else "lost"
-            self.queue.append(Sample(time_s, kind, self.track))
-            self.passed_s = max(self.passed_s, time_s)
+            self._release(self._gate.pass_by(Sample(time_s, kind, self.track)))
             return
         assert x is not None
         value = self.signal.at_sample(x, y)
@@ -65,13 +68,21 @@ class Channel:
         self._release(self._gate.push(value, sample))
 
     def settle(self) -> None:
-        """Let go of the reading that waits for its neighbour: what follows is not like it."""
+        """Let go of the readings that wait for their neighbours: what follows is not like them."""
         self._release(self._gate.flush())
 
     def end(self) -> None:
         """No more readings come."""
         self._release(self._gate.flush())
         self.passed_s = math.inf
+
+    def _fit_gate(self, spacing_s: float) -> None:
+        """As many readings may be wild in a row as a filter needs to settle after a jump."""
+        stages = self.track.stages if self.track is not None else None
+        if stages is None:
+            self._gate.longest = UNFILTERED_LONGEST
+        elif 0 < spacing_s < math.inf:
+            self._gate.longest = min(MOST_HELD, 2 + int(stages.settle_s(1e-3) / spacing_s))
 
     def interpolated(self, time_s: float) -> float | None:
         """Value at a moment that the channel has passed; None if it is not known.
@@ -100,11 +111,7 @@ class Channel:
         if sample.kind == "ok":
             self._last = (sample.time_s, sample.value)
 
-    def _release(self, judged: tuple[Sample, bool] | None) -> None:
-        if judged is None:
-            return
-        sample, wild = judged
-        if wild:
-            sample = replace(sample, kind="wild")
-        self.queue.append(sample)
-        self.passed_s = max(self.passed_s, sample.time_s)
+    def _release(self, judged: list[tuple[Sample, bool]]) -> None:
+        for sample, wild in judged:
+            self.queue.append(replace(sample, kind="wild") if wild else sample)
+            self.passed_s = max(self.passed_s, sample.time_s)

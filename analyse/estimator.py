@@ -85,6 +85,7 @@ class Estimator:
         self._point = _Point(set(), [], {"longitudinal": [], "hall": []})
         self._stable_at: Moment | None = None
         self._farthest_T = 0.0
+        self._lowest_T, self._highest_T = math.inf, -math.inf
         self._last_rate = 0.0
         self._last_field: float | None = None
 
@@ -146,6 +147,8 @@ class Estimator:
         if pair.kind != "ok":
             return
         self._farthest_T = max(self._farthest_T, abs(pair.field_T))
+        self._lowest_T = min(self._lowest_T, pair.field_T)
+        self._highest_T = max(self._highest_T, pair.field_T)
         self._last_rate = pair.rate_T_per_s
         self._point.fields.append(pair.field_T)
         self._point.rho[pair.role].append(pair.rho_ohm)
@@ -165,7 +168,7 @@ class Estimator:
                 self._quick.add(field_T, rho_xx, rho_xy)
         hall, along = self._fit.pools()
         fit = fit_transport(
-            self.setup, hall, along, self._fit.inner_pools, self._phis, self._fit.excess
+            self.setup, hall, along, self._fit.models, self._fit.inner, self._phis, self._fit.excess
         )
         return self._estimate(time_s, field_T, rho_xx, rho_xy, fit)
 
@@ -256,10 +259,11 @@ class Estimator:
             density.value if density else None, mobility.value if mobility else None,
             self._quick.density, self._quick.mobility,
             self._fit.window_T[1] if self._fit.window_T is not None else None, self._fit.shapes,
+            self._lowest_T < 0.0 < self._highest_T,
         )
         slope = fit.slope.value / self._scale_T if density and fit.slope else None
         found = [c for watch in self._watch.values() for c in watch.cautions()]
-        found += self._field_watch.cautions(slope)
+        found += self._field_watch.cautions(slope, fit.slope.noise if fit.slope else None)
         return (*found, *fit_cautions(facts, self.setup))
 
     def _forecast(

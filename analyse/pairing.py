@@ -66,7 +66,7 @@ class Pairing:
         measured = excitation.measured if excitation is not None else None
         self._current = Channel(measured) if measured is not None else None
         self._field_passed_s = -math.inf
-        self._gate: SpikeGate[tuple[float, float]] = SpikeGate()
+        self._gate: SpikeGate[tuple[float, float | None]] = SpikeGate()
         self.wild_field_readings = 0
 
     def push(
@@ -102,7 +102,7 @@ class Pairing:
     def end(self, channel: str) -> Iterator[Pair]:
         """No more readings come from a channel; yields what that completes."""
         if channel == "field":
-            self._add_knot(self._gate.flush())
+            self._add_knots(self._gate.flush())
             self._field_passed_s = math.inf
         elif channel == "current":
             if self._current is not None:
@@ -114,19 +114,19 @@ class Pairing:
     def _push_field(self, time_s: float, field_T: float | None, status: str) -> None:
         if status == "ok" and field_T is not None and abs(field_T) <= LARGEST_T:
             field_T = field_T if abs(field_T) >= SMALLEST_T else 0.0
-            self._add_knot(self._gate.push(field_T, (time_s, field_T)))
+            judged = self._gate.push(field_T, (time_s, field_T))
         else:
-            self._add_knot(self._gate.flush())
-            self._field_passed_s = max(self._field_passed_s, time_s)
+            judged = self._gate.pass_by((time_s, None))
+        self._add_knots(judged)
 
-    def _add_knot(self, judged: tuple[tuple[float, float], bool] | None) -> None:
-        if judged is None:
-            return
-        (time_s, field_T), wild = judged
-        self._field_passed_s = max(self._field_passed_s, time_s)
-        if wild:
-            self.wild_field_readings += 1
-            return
+    def _add_knots(self, judged: list[tuple[tuple[float, float | None], bool]]) -> None:
+        for (time_s, field_T), wild in judged:
+            self._field_passed_s = max(self._field_passed_s, time_s)
+            self.wild_field_readings += wild
+            if field_T is not None and not wild:
+                self._add_knot(time_s, field_T)
+
+    def _add_knot(self, time_s: float, field_T: float) -> None:
         if self._knots and time_s - self._knots[-1][0] <= CLOSEST_S:
             return
         self._knots.append((time_s, field_T))

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 
 from scipy.stats import f as f_distribution
 
@@ -59,9 +60,18 @@ class TransportFit:
 
     slope: Coefficient | None
     offset_ohm: float | None
+    offset_error_ohm: float
     rho_0: Coefficient | None
     noise_excess_hall: float
     noise_excess_longitudinal: float
+
+
+@dataclass(frozen=True)
+class Models:
+    """Which regressors (columns of :mod:`analyse.basis`) each fit uses."""
+
+    hall: tuple[int, ...] = HALL_LINE
+    longitudinal: tuple[int, ...] = LEVEL
 
 
 @dataclass(frozen=True)
@@ -131,32 +141,52 @@ def noise_excess(pool: Pool, columns: tuple[int, ...]) -> float:
     if known is None:
         return 1.0
     ratio, between, within = known
-    limit = f_distribution.isf(LACK_OF_FIT_LEVEL, between, within)
-    return ratio if ratio > limit else 1.0
+    return ratio if ratio > _f_limit(int(between), int(within)) else 1.0
+
+
+@lru_cache(maxsize=65536)
+def _f_limit(between: int, within: int) -> float:
+    return float(f_distribution.isf(LACK_OF_FIT_LEVEL, between, within))
+
+
+def choose_models(hall: Pool, along: Pool) -> Models:
+    """The models that suit two pools."""
+    return Models(hall_columns(hall), longitudinal_columns(along))
+
+
+def best_inner(inner: Sequence[Pool], excess: bool, phis: Phis, alpha: float) -> Coefficient | None:
+    """rho_0 from that part of the window, of several ever smaller ones, which makes it most
+    certain; None if there are none."""
+    parts = []
+    for pool in inner:
+        columns = longitudinal_columns(pool)
+        part_excess = excess and noise_excess(pool, columns) > 1
+        parts.append(zero_field(pool, columns, part_excess, phis.rho_0, (1 - SLOPE_SHARE) * alpha))
+    return min((part for part in parts if part is not None), key=_total, default=None)
 
 
 def fit_transport(
-    setup: Setup, hall: Pool, along: Pool, inner: Sequence[Pool], phis: Phis,
+    setup: Setup, hall: Pool, along: Pool, models: Models, inner: Coefficient | None, phis: Phis,
     excess: tuple[float, float],
 ) -> TransportFit:
     """Both fits. ``excess``: noise factors (hall, longitudinal); above 1 they widen. ``inner``:
-    smaller parts of the window, from which rho_0 is taken where that makes it more certain."""
+    rho_0 from a smaller part of the window, taken where it is more certain."""
     alpha = 1.0 - setup.target.confidence
-    line = fit_columns(hall, hall_columns(hall))
+    line = fit_columns(hall, models.hall)
     offset = line.theta[0] if line is not None else None
-    slope = hall_slope(hall, excess[0] > 1, phis, alpha)
+    offset_error = line.standard_error(0) if line is not None else math.inf
+    slope = hall_slope(hall, models.hall, excess[0] > 1, phis, alpha)
     level = (1 - SLOPE_SHARE) * alpha
-    parts = [zero_field(along, excess[1] > 1, phis.rho_0, level)]
-    for pool in inner:
-        part_excess = excess[1] > 1 and noise_excess(pool, longitudinal_columns(pool)) > 1
-        parts.append(zero_field(pool, part_excess, phis.rho_0, level))
-    rho_0 = min((part for part in parts if part is not None), key=_total, default=None)
-    return TransportFit(slope, offset, rho_0, excess[0], excess[1])
+    rho_0 = zero_field(along, models.longitudinal, excess[1] > 1, phis.rho_0, level)
+    if inner is not None and (rho_0 is None or _total(inner) < _total(rho_0)):
+        rho_0 = inner
+    return TransportFit(slope, offset, offset_error, rho_0, excess[0], excess[1])
 
 
-def hall_slope(pool: Pool, excess: bool, phis: Phis, alpha: float) -> Coefficient | None:
+def hall_slope(
+    pool: Pool, columns: tuple[int, ...], excess: bool, phis: Phis, alpha: float
+) -> Coefficient | None:
     """The slope of the Hall line, per unit of u, from one pool."""
-    columns = hall_columns(pool)
     line = fit_columns(pool, columns, excess)
     if line is None:
         return None
@@ -164,9 +194,10 @@ def hall_slope(pool: Pool, excess: bool, phis: Phis, alpha: float) -> Coefficien
     return _coefficient(line, 1, bent, phis.slope, SLOPE_SHARE * alpha, pool.effective)
 
 
-def zero_field(pool: Pool, excess: bool, phi: float, alpha: float) -> Coefficient | None:
+def zero_field(
+    pool: Pool, columns: tuple[int, ...], excess: bool, phi: float, alpha: float
+) -> Coefficient | None:
     """The longitudinal resistivity at zero field from one pool."""
-    columns = longitudinal_columns(pool)
     fit = fit_columns(pool, columns, excess)
     if fit is None:
         return None

@@ -4,7 +4,8 @@ Segments are sorted by the magnitude of field. Beginning with those next to zero
 must agree with the fit to the ones before: its mean within the noise or within a tolerance, and
 its scatter no more than theirs. The window ends below the first one that does not (oscillations,
 plateaus, a bend). If what lies next to zero is itself apart (a peak or dip around zero field), a
-later beginning that leads further is taken.
+later beginning that leads further is taken, for the longitudinal resistivity alone: the Hall line
+holds there.
 """
 
 from __future__ import annotations
@@ -16,17 +17,20 @@ from functools import lru_cache
 from scipy.stats import f as f_distribution
 from scipy.stats import t as t_distribution
 
-from analyse.basis import HALL_LINE, SLOPING, regressors
+from analyse.basis import CURVED, HALL_LINE, LEVEL, regressors
 from analyse.line_fit import LineFit, fit_columns
 from analyse.segments import Pool, Segment
 from analyse.setup import Window
 
 CORE_EFFECTIVE = 16.0        # effective readings before a segment is compared with them
 ODD_LEVEL = 1e-7             # chance of calling a good segment odd; many are looked at, often
-TOLERANCE = {"longitudinal": 0.03, "hall": 0.01}
+TOLERANCE = {"longitudinal": 0.003, "hall": 0.003}
 """Departures smaller than this share of rho_0, or of the Hall resistivity, do not end the window:
 what they do to the numbers is what the model part of the uncertainty is for."""
-MODEL = {"longitudinal": SLOPING, "hall": HALL_LINE}
+MODEL = {"longitudinal": CURVED, "hall": HALL_LINE}
+PEAK_SHARE = 0.3
+"""A peak or dip around zero field is left out up to this share of the field where rho_xx =
+rho_xy: weak localisation is narrower, what a second kind of carrier does is wider."""
 WANTED = {"longitudinal": 0, "hall": 1}
 """The coefficient that the window is for: rho at zero field, and the slope."""
 
@@ -80,15 +84,15 @@ def _size(fit: LineFit, role: str, u: float) -> float:
 
 
 def homogeneous_run(
-    segments: list[Segment], role: str, scale_T: float
+    segments: list[Segment], role: str, scale_T: float, lowest_T: float = 0.0
 ) -> Bounds:
-    """The window that one role's segments (any order) allow."""
+    """The window that one role's segments (any order) allow; it begins at ``lowest_T`` at most."""
     ordered = sorted(segments, key=lambda one: one.low_T)
     if not ordered:
         return Bounds(0.0, math.inf)
     best, best_information = Bounds(0.0, math.inf), -1.0
     for start in (0, 1, 2, 3, 5, 8, 12, 17):
-        if start and start >= len(ordered) - 2:
+        if start and (start >= len(ordered) - 2 or ordered[start].low_T > lowest_T):
             break
         stop, information = _grow(ordered, start, role, scale_T)
         low = 0.0 if start == 0 else ordered[start].low_T
@@ -124,8 +128,24 @@ def find_bounds(
     """The window for both roles: what was given, and for the rest what both allow."""
     if given.low_T is not None and given.high_T is not None:
         return Bounds(given.low_T, given.high_T)
-    one = homogeneous_run(longitudinal, "longitudinal", scale_T)
     two = homogeneous_run(hall, "hall", scale_T)
+    crossing_T = _crossing(longitudinal, hall, two, scale_T)
+    one = homogeneous_run(longitudinal, "longitudinal", scale_T, PEAK_SHARE * crossing_T)
     low = max(one.low_T, two.low_T) if given.low_T is None else given.low_T
     high = min(one.high_T, two.high_T) if given.high_T is None else given.high_T
     return Bounds(low, max(high, low))
+
+
+def _crossing(
+    longitudinal: list[Segment], hall: list[Segment], bounds: Bounds, scale_T: float
+) -> float:
+    """About where rho_xx = rho_xy, in T; 0 while it is not known."""
+    pools = Pool(), Pool()
+    for pool, segments in zip(pools, (hall, longitudinal)):
+        for segment in segments:
+            if bounds.holds(segment):
+                pool.take(segment)
+    line, level = fit_columns(pools[0], HALL_LINE), fit_columns(pools[1], LEVEL)
+    if line is None or level is None or not line.theta[1]:
+        return 0.0
+    return abs(level.theta[0] / line.theta[1]) * scale_T

@@ -12,6 +12,10 @@ from analyse.setup import Setup
 from analyse.shapes import Shapes, fall_off, straight, sweeps_apart
 from analyse.transport_fit import (
     BEND_SEEN,
+    Coefficient,
+    Models,
+    best_inner,
+    choose_models,
     fixed_phis,
     hall_columns,
     hall_slope,
@@ -60,6 +64,7 @@ class WindowedFit:
 
     def __init__(self, setup: Setup, scale_T: float) -> None:
         self._setup = setup
+        self._alpha = 1 - setup.target.confidence
         self._scale_T = scale_T
         self._segments = {role: Segments(role, scale_T) for role in ROLES}
         self._phis = fixed_phis(setup, scale_T)
@@ -74,6 +79,8 @@ class WindowedFit:
         self._now: tuple[Pool, Pool] | None = None
         self._inner: list[tuple[Pool, Bounds]] = []
         self._narrowed = False
+        self.inner: Coefficient | None = None
+        self.models = Models()
         self.shapes = Shapes()
         self._time_s = [math.inf, -math.inf]
 
@@ -91,12 +98,6 @@ class WindowedFit:
         if self._now is None:
             self._now = (self._with_active("hall"), self._with_active("longitudinal"))
         return self._now
-
-    @property
-    def inner_pools(self) -> list[Pool]:
-        """Longitudinal readings from ever smaller parts of the window, down to zero field; empty
-        while the whole window shows no bend and no excess of noise."""
-        return [pool for pool, _ in self._inner]
 
     @property
     def window_T(self) -> tuple[float, float] | None:
@@ -145,6 +146,7 @@ class WindowedFit:
             self._search()
             self._narrow()
             self._inner = self._halve(self._pools["longitudinal"])
+            self._settle()
             self.shapes = self._seen_shapes()
             return
         if inside:
@@ -155,7 +157,14 @@ class WindowedFit:
             for pool, limit in self._inner:
                 if limit.holds(newest):
                     pool.take(newest)
+        self._settle()
+
+    def _settle(self) -> None:
+        """What holds until the next segment is closed: models, noise, rho_0 of smaller parts."""
+        self.models = choose_models(self._pools["hall"], self._pools["longitudinal"])
         self.excess = self._excesses()
+        pools = [pool for pool, _ in self._inner]
+        self.inner = best_inner(pools, self.excess[1] > 1, self._phis, self._alpha)
 
     def _seen_shapes(self) -> Shapes:
         hall, along = (self._pools[each] for each in ROLES)
@@ -214,7 +223,7 @@ class WindowedFit:
             self.excess = self._excesses()
 
     def _structured(self, hall: Pool) -> bool:
-        slope = hall_slope(hall, self.excess[0] > 1, self._phis, 1 - self._setup.target.confidence)
+        slope = hall_slope(hall, hall_columns(hall), self.excess[0] > 1, self._phis, self._alpha)
         bent = slope is not None and abs(slope.bend) > BEND_SEEN * slope.bend_error
         return max(self.excess) > 1 or bent
 
@@ -226,7 +235,7 @@ class WindowedFit:
         )
 
     def _uncertainty(self, pool: Pool, excess: bool) -> float:
-        slope = hall_slope(pool, excess, self._phis, 1 - self._setup.target.confidence)
+        slope = hall_slope(pool, hall_columns(pool), excess, self._phis, self._alpha)
         return math.inf if slope is None else slope.half_width + slope.spread
 
     def _pool(self, role: str, bounds: Bounds) -> Pool:

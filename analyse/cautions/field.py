@@ -50,9 +50,12 @@ class FieldWatch:
         self._farthest_T = max(self._farthest_T, abs(pair.field_T))
         self._delay_s = pair.stages.delay_s if pair.stages is not None else 0.0
 
-    def cautions(self, slope_ohm_per_T: float | None) -> Iterator[Caution]:
-        """Cautions that hold now; the slope is None while it is not known."""
-        move = self._move()
+    def cautions(
+        self, slope_ohm_per_T: float | None, noise_ohm: float | None
+    ) -> Iterator[Caution]:
+        """Cautions that hold now. The slope is None while it is not known; ``noise_ohm`` is the
+        standard deviation of an independent Hall reading, None while it is not known."""
+        move = self._move(noise_ohm)
         if move is None:
             return
         rate = abs(move.field_T) / move.seconds if move.seconds > 0 else 0.0
@@ -80,6 +83,8 @@ class FieldWatch:
             return
         if abs(move.field_T) > 0.1 * needed_T:
             return
+        if rate and abs(move.field_T) > 0.2 * rate * move.seconds:
+            return
         if slope and rate and needed_T < 0.2 * rate * move.seconds:
             yield Caution(
                 "drift",
@@ -94,7 +99,7 @@ class FieldWatch:
             f"in {move.seconds:.0f} s: the field meter or its reading is stuck.",
         )
 
-    def _move(self) -> _Move | None:
+    def _move(self, noise_ohm: float | None) -> _Move | None:
         if len(self._pairs) < MEMORY:
             return None
         half = MEMORY // 2
@@ -106,6 +111,8 @@ class FieldWatch:
         trend = sum(steps) / len(steps)
         rough = math.sqrt(sum((s - trend) ** 2 for s in steps) / len(steps) / 2)
         error = rough * math.sqrt(2 * max(self._kappa, 1.0) ** 2 / half)
+        if noise_ohm is not None:
+            error = max(error, noise_ohm * math.sqrt(2 / half))
         return _Move(
             means[1][0] - means[0][0], means[1][1] - means[0][1], means[1][2] - means[0][2],
             max(error, 1e-300),

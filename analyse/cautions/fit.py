@@ -6,6 +6,8 @@ import math
 from collections.abc import Iterator
 from dataclasses import dataclass
 
+from scipy.constants import e
+
 from analyse.estimate import Caution
 from analyse.quick import HALL_MARK_OHM, QuickReading
 from analyse.setup import Setup, Target
@@ -18,6 +20,10 @@ BEND_CERTAIN = 4.5
 """Standard errors beyond the target at which a bend is called one; it is looked at all the time."""
 
 
+NOISE_MATTERS = 0.3
+"""Share of the target that the widened interval takes up when an excess of noise is said."""
+OFFSET_CLEAR = 6.0
+SMALLEST_OFFSET_T, SMALLEST_OFFSET_SQUARES = 5e-4, 0.02
 SAG_CLEAR = 4.5
 """Standard errors at which a fall-off is called one."""
 
@@ -36,6 +42,7 @@ class FitFacts:
     quick_mobility: QuickReading | None
     bounds_high_T: float | None
     shapes: Shapes
+    zero_passed: bool
 
 
 def fit_cautions(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
@@ -58,6 +65,7 @@ def fit_cautions(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
             "is configured as Hall does not: the two are exchanged, in wiring or configuration.",
         )
     yield from _sweeps(facts, setup.target)
+    yield from _offset(facts)
     if facts.farthest_T > facts.bounds.high_T:
         yield Caution(
             "oscillations",
@@ -75,11 +83,15 @@ def fit_cautions(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
 
 
 def _noise(fit: TransportFit, setup: Setup) -> Iterator[Caution]:
-    for role, excess, stages in (
-        ("Hall", fit.noise_excess_hall, setup.hall.filter),
-        ("longitudinal", fit.noise_excess_longitudinal, setup.longitudinal.filter),
+    target = setup.target
+    for role, excess, stages, coefficient, limit in (
+        ("Hall", fit.noise_excess_hall, setup.hall.filter, fit.slope, target.sheet_density),
+        ("longitudinal", fit.noise_excess_longitudinal, setup.longitudinal.filter, fit.rho_0,
+         target.mobility),
     ):
-        if excess > 1.0 and stages is not None:
+        if excess <= 1.0 or stages is None or coefficient is None:
+            continue
+        if coefficient.half_width > NOISE_MATTERS * limit * abs(coefficient.value):
             yield Caution(
                 "noise_high",
                 f"the {role} readings scatter {math.sqrt(excess):.1f} times more over seconds than "
@@ -128,6 +140,33 @@ def _sweeps(facts: FitFacts, target: Target) -> Iterator[Caution]:
         f"up and down sweep are {1e3 * size:.3g} mT apart after the filter's delay was taken "
         f"out: {cause}.",
     )
+
+
+def _offset(facts: FitFacts) -> Iterator[Caution]:
+    fit = facts.fit
+    slope, rho_0, offset = fit.slope, fit.rho_0, fit.offset_ohm
+    if slope is None or rho_0 is None or offset is None or slope.effective < MIN_EFFECTIVE:
+        return
+    if abs(offset) < OFFSET_CLEAR * fit.offset_error_ohm or not facts.density_per_m2:
+        return
+    squares = offset / rho_0.value if rho_0.value else 0.0
+    field_T = offset * facts.density_per_m2 * e
+    if facts.zero_passed and abs(field_T) > SMALLEST_OFFSET_T:
+        yield Caution(
+            "field_offset",
+            f"the Hall resistivity is zero where the field reading is {-1e3 * field_T:.3g} mT: a "
+            "remanent field or the meter's zero, or contacts that are not quite opposite; it is "
+            "taken out by the fit.",
+            touches_answer=False,
+        )
+    if abs(squares) > SMALLEST_OFFSET_SQUARES:
+        yield Caution(
+            "contacts_misaligned",
+            f"at zero field the Hall voltage is not zero: as if its contacts were {squares:.2g} "
+            "squares apart along the current, or the field reading off; it is taken out by the "
+            "fit.",
+            touches_answer=False,
+        )
 
 
 def _straightness(fit: TransportFit, target: Target) -> Iterator[Caution]:

@@ -13,6 +13,10 @@ from analyse.pairing import Pair
 
 RECENT = 20
 MEMORY = 100
+SAG = 0.02
+"""Share by which the known current may change before it is said."""
+FLAT_INTEGRAL_TIMES = 8.0
+"""A filter's noise does not stand still within a digit for so many of its integral times."""
 FLAT = 12
 """Readings in a row, equal to the last digit while the field moves, that can't be real."""
 
@@ -25,14 +29,21 @@ class RoleWatch:
         self.counts: dict[str, int] = {}
         self._recent: deque[str] = deque(maxlen=MEMORY)
         self._quadrature: deque[tuple[float, float]] = deque(maxlen=MEMORY)
-        self._flat: deque[tuple[float, float]] = deque(maxlen=FLAT)
+        self._flat: list[Pair] = []
+        self._run = 0
+        self._current: list[float] = []
+        self._currents: list[float] = []
 
     def add(self, pair: Pair) -> None:
         """Take note of one pair."""
         self.counts[pair.kind] = self.counts.get(pair.kind, 0) + 1
         self._recent.append(pair.kind)
         if pair.kind == "ok":
-            self._flat.append((pair.field_T, pair.rho_ohm))
+            if self._flat and pair.rho_ohm != self._flat[0].rho_ohm:
+                self._flat.clear()
+            self._flat[2:] = [*self._flat[2:], pair][-1:]
+            self._run = self._run + 1 if len(self._flat) > 1 else 1
+            self._note_current(pair.current_A)
         if pair.kind == "ok" and pair.quadrature_ohm is not None:
             self._quadrature.append((pair.rho_ohm, pair.quadrature_ohm))
 
@@ -62,6 +73,8 @@ class RoleWatch:
             )
         yield from self._phase()
         yield from self._clipped()
+        if self.role == "hall":
+            yield from self._sagging()
 
     def _phase(self) -> Iterator[Caution]:
         if len(self._quadrature) < RECENT:
@@ -77,19 +90,43 @@ class RoleWatch:
                 "check the lock-in's phase, the wiring and capacitive pick-up.",
             )
 
+    def _note_current(self, current_A: float) -> None:
+        self._current.append(current_A)
+        if len(self._current) == RECENT:
+            self._currents.append(sum(self._current) / RECENT)
+            self._current.clear()
+            if len(self._currents) > 2:
+                self._currents = [min(self._currents), max(self._currents)]
+
+    def _sagging(self) -> Iterator[Caution]:
+        if len(self._currents) < 2:
+            return
+        low, high = sorted(map(abs, (min(self._currents), max(self._currents))))
+        if high > 0 and 1 - low / high > SAG:
+            yield Caution(
+                "current_sag",
+                f"the current changes by {100 * (1 - low / high):.2g} % over the ramp, as measured "
+                "or reckoned from source and resistor; that is taken into account.",
+                touches_answer=False,
+            )
+
     def _clipped(self) -> Iterator[Caution]:
-        if len(self._flat) < FLAT:
+        if self._run < FLAT or len(self._flat) < 2:
             return
-        fields = [field for field, _ in self._flat]
-        values = [value for _, value in self._flat]
-        if values.count(values[0]) < FLAT or not values[0] or max(fields) == min(fields):
+        first, last = self._flat[0], self._flat[-1]
+        stages = last.stages
+        long_enough = self._run >= 2 * FLAT if stages is None else (
+            last.time_s - first.time_s > FLAT_INTEGRAL_TIMES * stages.integral_time_s
+        )
+        value = first.rho_ohm
+        if not long_enough or not value or last.field_T == first.field_T:
             return
-        plateau = abs(h / e**2 / values[0])
+        plateau = abs(h / e**2 / value)
         looks = f"it is not a plateau (h/e^2 over {plateau:.2f})"
         if round(plateau) >= 1 and abs(plateau / round(plateau) - 1) < 2e-3:
             looks = f"even a plateau (i = {round(plateau)}) has noise"
         yield Caution(
             "clipped",
-            f"{FLAT} {self.role} readings in a row are equal to the last digit while the field "
-            f"moves: {looks}; the input or the range is clipped, or the reading is frozen.",
+            f"{self._run} {self.role} readings in a row are equal to the last digit while the "
+            f"field moves: {looks}; the input or the range is clipped, or the reading is frozen.",
         )
