@@ -7,7 +7,7 @@ from collections.abc import Iterable
 from dataclasses import dataclass
 
 from analyse.budget import combined, systematic_lines
-from analyse.cautions import FieldWatch, FitFacts, RoleWatch, fit_cautions
+from analyse.cautions import DriftWatch, FieldWatch, FitFacts, RoleWatch, fit_cautions
 from analyse.drude import density_from_slope, mobility_from, scattering_time_from, transport
 from analyse.estimate import BudgetLine, Caution, Estimate, Measured, Moment
 from analyse.forecast import State, field_to_target
@@ -80,6 +80,7 @@ class Estimator:
         self._sweeps = Sweeps(max(2e-3, 0.01 * self._scale_T))
         self._watch = {role: RoleWatch(role) for role in ("longitudinal", "hall")}
         self._field_watch = FieldWatch(ramp)
+        self._drift_watch = DriftWatch(ramp, self.setup.target)
         self._quick = QuickReadings()
         self._field_points = 0
         self._point = _Point(set(), [], {"longitudinal": [], "hall": []})
@@ -153,6 +154,7 @@ class Estimator:
         self._point.fields.append(pair.field_T)
         self._point.rho[pair.role].append(pair.rho_ohm)
         kappa = self._fit.add(self._sweeps.add(pair.field_T), pair)
+        self._drift_watch.add(pair)
         if pair.role == "hall":
             self._field_watch.add(pair, kappa)
 
@@ -263,7 +265,8 @@ class Estimator:
         )
         slope = fit.slope.value / self._scale_T if density and fit.slope else None
         found = [c for watch in self._watch.values() for c in watch.cautions()]
-        found += self._field_watch.cautions(slope, fit.slope.noise if fit.slope else None)
+        found += self._field_watch.cautions(slope)
+        found += self._drift_watch.cautions()
         return (*found, *fit_cautions(facts, self.setup))
 
     def _forecast(

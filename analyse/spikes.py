@@ -21,7 +21,7 @@ class SpikeGate(Generic[Item]):
     """Passes items on in order, saying of each whether it is wild.
 
     The usual step is the trimmed mean of the last ``memory`` absolute steps between good
-    readings; before ``memory / 4`` of them are known nothing is called wild. A good reading is
+    readings, and not less than the smallest of them that is a step at all (the last digit); before ``memory / 4`` of them are known nothing is called wild. A good reading is
     passed on at once, one that jumps only when it is known what it was.
     """
 
@@ -83,4 +83,5 @@ class SpikeGate(Generic[Item]):
             return float("inf")
         ordered = sorted(self._steps)
         kept = ordered[: max(1, (len(ordered) * 9) // 10)]
-        return max(sum(kept) / len(kept), 1e-300)
+        digit = next((step for step in ordered if step > 0), 1e-300)
+        return max(sum(kept) / len(kept), digit)

@@ -34,7 +34,7 @@ CLEARLY = 0.8
 HALVINGS = 5
 MIN_INNER = 30.0
 """Effective readings that a part of the window needs."""
-REACH = 0.5
+REACH = 0.3
 """Zero field is in reach when the window begins below this share of its upper end."""
 
 

@@ -1,11 +1,12 @@
 """Cautions: each with a stable code, one sentence of what is seen, the likely cause, what to do.
 
 Pure: numbers in, texts out. ``readings`` looks at one signal's readings, ``field`` at the field,
-``fit`` at what the fit shows.
+``drift`` at what happens while it stands, ``fit`` at what the fit shows.
 """
 
+from analyse.cautions.drift import DriftWatch
 from analyse.cautions.field import FieldWatch
 from analyse.cautions.fit import FitFacts, fit_cautions
 from analyse.cautions.readings import RoleWatch
 
-__all__ = ["FieldWatch", "FitFacts", "RoleWatch", "fit_cautions"]
+__all__ = ["DriftWatch", "FieldWatch", "FitFacts", "RoleWatch", "fit_cautions"]

@@ -1,8 +1,7 @@
-"""Cautions about the field: stuck, moving in steps, too fast; and drift while it stands."""
+"""Cautions about the field: a reading that is stuck, a ramp too fast for the filter."""
 
 from __future__ import annotations
 
-import itertools
 import math
 from collections import deque
 from collections.abc import Iterator
@@ -13,22 +12,31 @@ from analyse.pairing import Pair
 from analyse.setup import Ramp
 
 MEMORY = 60
+EDGE = 15
+"""Pairs at either end of the memory that are compared."""
+SPACING = 0.5
+"""Pairs are kept this share of the filter's integral time apart, so that the memory is long."""
 CLEAR = 10.0
 """Standard errors by which the Hall resistivity must have moved for a standing field to be odd."""
-
-
 TOO_FAST = 0.05
 """Share of the planned (or farthest) field that it may move by during the filter's delay."""
 
 
 @dataclass(frozen=True)
-class _Move:
-    """First to second half of the last readings: seconds, field and resistivity moved by."""
+class Move:
+    """From the first to the last of some pairs: seconds, field and resistivity moved by."""
 
     seconds: float
     field_T: float
+    field_error_T: float
     rho_ohm: float
-    error_ohm: float
+    rho_error_ohm: float
+    rho_mean_ohm: float
+
+    @property
+    def field_stands(self) -> bool:
+        """Whether the field did not move beyond the scatter of its readings."""
+        return abs(self.field_T) <= 4 * self.field_error_T + 1e-12
 
 
 class FieldWatch:
@@ -45,19 +53,22 @@ class FieldWatch:
 
     def add(self, pair: Pair, kappa: float) -> None:
         """Take a usable Hall pair with its inflation by the filter."""
-        self._pairs.append((pair.time_s, pair.field_T, pair.rho_ohm))
-        self._kappa = kappa
+        stages = pair.stages
         self._farthest_T = max(self._farthest_T, abs(pair.field_T))
-        self._delay_s = pair.stages.delay_s if pair.stages is not None else 0.0
+        self._delay_s = stages.delay_s if stages is not None else 0.0
+        if stages is not None and self._pairs:
+            apart = pair.time_s - self._pairs[-1][0]
+            if apart < SPACING * stages.integral_time_s:
+                return
+            kappa = min(kappa, 2.0 / SPACING)
+        self._kappa = kappa
+        self._pairs.append((pair.time_s, pair.field_T, pair.rho_ohm))
 
-    def cautions(
-        self, slope_ohm_per_T: float | None, noise_ohm: float | None
-    ) -> Iterator[Caution]:
-        """Cautions that hold now. The slope is None while it is not known; ``noise_ohm`` is the
-        standard deviation of an independent Hall reading, None while it is not known."""
-        move = self._move(noise_ohm)
-        if move is None:
+    def cautions(self, slope_ohm_per_T: float | None) -> Iterator[Caution]:
+        """Cautions that hold now. The slope is None while it is not known."""
+        if len(self._pairs) < MEMORY:
             return
+        move = last_move(list(self._pairs), self._kappa)
         rate = abs(move.field_T) / move.seconds if move.seconds > 0 else 0.0
         self._fastest = max(self._fastest, rate)
         lag_T = rate * self._delay_s
@@ -69,29 +80,19 @@ class FieldWatch:
                 "constant.",
                 touches_answer=False,
             )
-        if abs(move.rho_ohm) < CLEAR * move.error_ohm:
-            return
-        yield from self._standing(move, slope_ohm_per_T)
+        if move.field_stands and abs(move.rho_ohm) > CLEAR * move.rho_error_ohm:
+            yield from self._stuck(move, slope_ohm_per_T)
 
-    def _standing(self, move: _Move, slope: float | None) -> Iterator[Caution]:
+    def _stuck(self, move: Move, slope: float | None) -> Iterator[Caution]:
         rate = self._planned if self._planned is not None else self._fastest
+        whole_T = rate * move.seconds
         if slope:
             needed_T = abs(move.rho_ohm / slope)
-        elif rate:
-            needed_T = rate * move.seconds
+        elif abs(move.rho_ohm) > 0.1 * abs(move.rho_mean_ohm):
+            needed_T = whole_T
         else:
             return
-        if abs(move.field_T) > 0.1 * needed_T:
-            return
-        if rate and abs(move.field_T) > 0.2 * rate * move.seconds:
-            return
-        if slope and rate and needed_T < 0.2 * rate * move.seconds:
-            yield Caution(
-                "drift",
-                f"at a standing field the Hall resistivity moves by {move.rho_ohm:.3g} ohm in "
-                f"{move.seconds:.0f} s: the sample, its temperature, the current or an amplifier "
-                "drifts.",
-            )
+        if needed_T < max(5 * move.field_error_T, 0.2 * whole_T):
             return
         yield Caution(
             "field_stuck",
@@ -99,21 +100,31 @@ class FieldWatch:
             f"in {move.seconds:.0f} s: the field meter or its reading is stuck.",
         )
 
-    def _move(self, noise_ohm: float | None) -> _Move | None:
-        if len(self._pairs) < MEMORY:
-            return None
-        half = MEMORY // 2
-        pairs = list(self._pairs)
-        one, two = pairs[:half], pairs[half:]
-        means = [[sum(p[i] for p in part) / half for i in range(3)] for part in (one, two)]
-        # scatter about the chord, so that a steady ramp is not taken for noise
-        steps = [b[2] - a[2] for a, b in itertools.pairwise(pairs)]
-        trend = sum(steps) / len(steps)
-        rough = math.sqrt(sum((s - trend) ** 2 for s in steps) / len(steps) / 2)
-        error = rough * math.sqrt(2 * max(self._kappa, 1.0) ** 2 / half)
-        if noise_ohm is not None:
-            error = max(error, noise_ohm * math.sqrt(2 / half))
-        return _Move(
-            means[1][0] - means[0][0], means[1][1] - means[0][1], means[1][2] - means[0][2],
-            max(error, 1e-300),
-        )
+
+def last_move(pairs: list[tuple[float, float, float]], kappa: float) -> Move:
+    """How field and resistivity moved from the first ``EDGE`` of the pairs to the last."""
+    one, two = pairs[:EDGE], pairs[-EDGE:]
+    (t1, b1, r1), (t2, b2, r2) = _means(one), _means(two)
+    jitter = max(_scatter([(t, b) for t, b, _ in part]) for part in (one, two))
+    noise = max(_scatter([(t, r) for t, _, r in part]) for part in (one, two))
+    whole = sum(r for _, _, r in pairs) / len(pairs)
+    return Move(
+        t2 - t1, b2 - b1, jitter * math.sqrt(2 / EDGE), r2 - r1,
+        max(noise * math.sqrt(2 * max(kappa, 1.0) / EDGE), 1e-300), whole,
+    )
+
+
+def _means(part: list[tuple[float, float, float]]) -> tuple[float, float, float]:
+    n = len(part)
+    return sum(p[0] for p in part) / n, sum(p[1] for p in part) / n, sum(p[2] for p in part) / n
+
+
+def _scatter(points: list[tuple[float, float]]) -> float:
+    """Standard deviation about a straight line."""
+    n = len(points)
+    t0, y0 = sum(t for t, _ in points) / n, sum(y for _, y in points) / n
+    stt = sum((t - t0) ** 2 for t, _ in points)
+    sty = sum((t - t0) * (y - y0) for t, y in points)
+    syy = sum((y - y0) ** 2 for _, y in points)
+    left = syy - sty * sty / stt if stt > 0 else syy
+    return math.sqrt(max(0.0, left) / (n - 2))
