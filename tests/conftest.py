@@ -10,6 +10,9 @@ from collections.abc import Callable, Iterator
 
 import psutil
 import pytest
+from browser import browser
+
+__all__ = ["browser"]  # one browser for all tests of a session
 
 LEFT_OVER_S = 5.0  # how long what a test has ended may take to be gone
 

@@ -1,0 +1,83 @@
+"""The page of a run, as a process: ``python -m dashboard.page RUN_FOLDER --port N``.
+
+Tells ``ready ADDRESS`` on stdout once the page can be opened. Ends in order on SIGTERM, and when
+its parent has ended. Exit status 0, or 1 with one sentence on stderr.
+"""
+
+from __future__ import annotations
+
+import argparse
+import asyncio
+import faulthandler
+import logging
+import os
+import socket
+import sys
+from collections.abc import Sequence
+
+from bokeh.server.util import bind_sockets
+
+from acquire.errors import BusError, RampsideError
+from acquire.run_folder import RunFolder, open_run
+from acquire.stop import Stop
+from dashboard.page.door import MOST_PAGES, Door, serve
+from dashboard.page.feed import Feed
+from dashboard.page.session import Session
+from dashboard.page.store import RunStore
+from dashboard.ports import LOOPBACK, page_port
+
+LOOK_S = 0.1
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Entry point."""
+    parser = argparse.ArgumentParser(prog="python -m dashboard.page", description=__doc__)
+    parser.add_argument("run_folder")
+    parser.add_argument("--port", type=int, default=0, help="0: any free one")
+    parser.add_argument("--most-pages", type=int, default=MOST_PAGES, help="open at once")
+    parser.add_argument("--parent", type=int, default=None, help="end when this process has ended")
+    options = parser.parse_args(arguments)
+    faulthandler.enable()
+    logging.basicConfig(level=logging.ERROR, format="%(name)s: %(message)s")
+    stop = Stop()
+    stop.install()
+    try:
+        run = open_run(options.run_folder)
+        sockets, port = _listen(options.port)
+    except RampsideError as error:
+        print(f"page: {error}", file=sys.stderr, flush=True)
+        return 1
+    door = Door(port, options.most_pages)
+    asyncio.run(_show(run, sockets, door, stop, options.parent))
+    return 0
+
+
+async def _show(
+    run: RunFolder, sockets: list[socket.socket], door: Door, stop: Stop, parent: int | None
+) -> None:
+    store = RunStore(run.run_id, run.rig)
+    feed = Feed(run, store)
+    server = serve(lambda document: Session(store).open(document), sockets, door)
+    server.start()
+    feed.start()
+    print(f"ready http://{LOOPBACK}:{door.port}/", flush=True)
+    try:
+        while not stop.requested and (parent is None or os.getppid() == parent):
+            await asyncio.sleep(LOOK_S)
+    finally:
+        server.stop(wait=False)
+        feed.close()
+
+
+def _listen(port: int) -> tuple[list[socket.socket], int]:
+    wanted = page_port(port)
+    try:
+        return bind_sockets(LOOPBACK, wanted)
+    except OSError as error:
+        raise BusError(
+            f"Port {wanted} can't be used ({error.strerror}): choose another with --port N."
+        ) from None
+
+
+if __name__ == "__main__":
+    sys.exit(main())

@@ -1,0 +1,211 @@
+"""How the page looks: its template, the style sheets, and the script that notices silence.
+
+Nothing is loaded from elsewhere. ``PAGE`` styles the page itself, ``PANELS`` the text panels,
+each of which Bokeh puts into a shadow tree of its own.
+"""
+
+from __future__ import annotations
+
+from dashboard.page import colours
+from dashboard.page.axes import FONT
+
+_NUMBERS = ("sheet_density_per_m2", "mobility_m2_per_V_s", "scattering_time_s")
+
+
+def _place(root: str, class_: str = "") -> str:
+    return f'<section class="{class_ or root}">{{{{ embed(roots.{root}) }}}}</section>'
+
+
+_COLUMNS = (
+    ("left", ("resistivity", "residual_xx", "residual_xy")),
+    ("middle", ("path_sheet_density", "path_mobility", "path_scattering_time")),
+)
+
+TEMPLATE = f"""
+{{% block postamble %}}<style>{{{{ style | safe }}}}</style>{{% endblock %}}
+{{% block contents %}}
+{{% from macros import embed %}}
+<div id="silent" role="alert" hidden></div>
+<main>
+  {_place("banner")}
+  <header>{_place("head", "headline")}{_place("chooser")}</header>
+  <div class="hero">
+    {_place("verdict")}{"".join(_place(name, "number") for name in _NUMBERS)}{_place("field")}
+  </div>
+  <div class="board">
+    {"".join(
+        f'<div class="column {side}">{"".join(_place(name, f"plot {name}") for name in names)}</div>'
+        for side, names in _COLUMNS
+    )}
+    <div class="column right">
+      <h2>Cautions</h2>{_place("cautions", "list cautions")}
+      <h2>Streams</h2>{_place("streams", "list streams")}
+      <h2>Events</h2>{_place("events", "list events")}
+    </div>
+  </div>
+  {_place("beat")}
+</main>
+<script>{{{{ script | safe }}}}</script>
+{{% endblock %}}
+"""
+
+PAGE = f"""
+:root {{ {colours.VARIABLES} --font: {FONT}; }}
+* {{ box-sizing: border-box; }}
+body {{ background: var(--paper); color: var(--ink); font-family: var(--font); }}
+main {{ display: flex; flex-direction: column; gap: 10px; height: 100vh; min-height: 700px;
+  padding: 8px 14px 12px; }}
+section.beat {{ display: none; }}
+header {{ display: flex; align-items: center; gap: 16px; min-height: 32px; }}
+.headline {{ flex: 1; min-width: 0; }}
+.hero {{ display: grid; gap: 10px; grid-template-columns: 1.12fr 1fr 1fr 1fr 0.8fr;
+  min-height: 172px; }}
+.hero > section, .plot {{ min-width: 0; min-height: 0; }}
+.board {{ flex: 1; min-height: 0; display: grid; gap: 10px;
+  grid-template-columns: 1.42fr 1fr 0.86fr; }}
+.column {{ display: flex; flex-direction: column; min-width: 0; min-height: 0;
+  background: var(--card); border: 1px solid var(--line); border-radius: 8px; padding: 6px; }}
+.column.right {{ padding: 10px 12px; }}
+.plot {{ flex: 1; position: relative; }}
+.left .resistivity {{ flex: 3.1; }}
+.left .residual_xy {{ flex: 1.32; }}
+.middle .path_scattering_time {{ flex: 1.25; }}
+h2 {{ font-size: 13px; font-weight: 600; color: var(--soft); margin: 12px 0 4px; }}
+h2:first-child {{ margin-top: 0; }}
+.list {{ overflow-y: auto; flex: none; }}
+.list.cautions {{ max-height: 38%; }}
+.list.streams {{ max-height: 44%; }}
+.list.events {{ flex: 1; min-height: 60px; }}
+#silent {{ position: fixed; z-index: 10; inset: 0 0 auto 0; padding: 14px 20px; text-align: center;
+  font: 600 18px var(--font); color: #fff; background: var(--alarm); }}
+body.silent main {{ opacity: 0.45; filter: grayscale(1); }}
+@media (max-width: 1099px) {{
+  main {{ height: auto; }}
+  .hero {{ grid-template-columns: 1fr 1fr; }}
+  .board {{ display: flex; flex-direction: column; }}
+  .plot {{ flex: none !important; height: 240px; }}
+  .left .resistivity {{ height: 380px; }}
+  .list {{ max-height: none !important; }}
+}}
+"""
+
+CHOOSER = """
+:host { font-family: var(--font); margin: 0; }
+.bk-btn { font-size: 15px; padding: 3px 14px; color: var(--soft); }
+.bk-btn.bk-active { background: var(--ink); border-color: var(--ink); color: #fff; }
+"""
+
+PANELS = """
+:host { display: block; width: 100%; height: 100%; font-family: var(--font); font-size: 13px;
+  line-height: 1.35; color: var(--ink); font-variant-numeric: tabular-nums; }
+.bk-clearfix { display: block !important; width: 100%; height: 100%; }
+.soft { color: var(--soft); }
+.banner { background: var(--alarm-tint); color: var(--alarm); border: 1px solid var(--alarm);
+  border-radius: 8px; padding: 8px 14px; font-weight: 600; margin-bottom: 10px;
+  overflow-wrap: anywhere; }
+.head { display: flex; align-items: baseline; gap: 20px; white-space: nowrap; }
+.head .run { flex: 1; overflow: hidden; text-overflow: ellipsis; }
+.head .title { font-size: 17px; font-weight: 600; margin-right: 12px; }
+.facts { margin-top: auto; padding-top: 6px; color: var(--soft); }
+.fact { margin-right: 12px; display: inline-block; }
+.phase { font-size: 15px; font-weight: 600; color: var(--soft); }
+.phase.live { color: var(--good); }
+.phase.crashed { color: var(--alarm); }
+.card { height: 100%; background: var(--card); border: 1px solid var(--line); border-radius: 8px;
+  padding: 10px 14px; display: flex; flex-direction: column; overflow: hidden; }
+.name { font-size: 14px; color: var(--soft); }
+.name::first-letter { text-transform: uppercase; }
+.name.second { margin-top: auto; }
+.value { white-space: nowrap; line-height: 1.15; }
+.digits { font-size: 40px; font-weight: 600; letter-spacing: -0.02em; }
+.digits.small { font-size: 32px; }
+.spread { font-size: 24px; color: var(--soft); }
+.unit { font-size: 17px; margin-left: 7px; }
+.old .digits, .old .unit { color: var(--soft); }
+.old .also { color: var(--warning); font-weight: 700; }
+.also { color: var(--soft); font-size: 14px; min-height: 19px; }
+.notyet { font-size: 24px; font-weight: 600; color: var(--soft); margin: 6px 0; }
+.left { font-size: 17px; font-weight: 600; }
+.verdict { flex-direction: row; align-items: flex-start; gap: 12px; border-width: 2px; }
+.verdict .words { min-width: 0; flex: 1; align-self: stretch; display: flex;
+  flex-direction: column; }
+.verdict .word { font-size: 32px; font-weight: 700; letter-spacing: -0.02em; line-height: 1.2; }
+.verdict .why { font-size: 14px; margin-top: 2px; }
+.verdict svg { width: 46px; height: 46px; flex: none; margin-top: -2px; fill: none;
+  stroke: currentColor; stroke-width: 4; stroke-linecap: round; stroke-linejoin: round; }
+.verdict.stable { background: var(--good-tint); border-color: var(--good); }
+.verdict.stable svg, .verdict.stable .word { color: var(--good); }
+.verdict.converging { background: var(--quiet-tint); border-color: var(--number); }
+.verdict.converging svg, .verdict.converging .word { color: var(--number); }
+.verdict.unknown { border-style: dashed; border-color: var(--soft); }
+.verdict.unknown svg { stroke-dasharray: 5 8; color: var(--soft); }
+.flag { margin-top: 6px; font-weight: 600; color: var(--warning); }
+.flag.loud { color: var(--alarm); }
+.gauge { position: relative; height: 14px; margin: 5px 0 4px; border-radius: 3px;
+  background: var(--quiet-tint); flex: none; }
+.gauge .zone { position: absolute; top: 0; bottom: 0; background: var(--target); opacity: 0.22; }
+.gauge .bar { position: absolute; top: 4px; bottom: 4px; background: var(--number);
+  border-radius: 3px; min-width: 3px; }
+.gauge .bar.open-left { border-top-left-radius: 0; border-bottom-left-radius: 0; }
+.gauge .bar.open-right { border-top-right-radius: 0; border-bottom-right-radius: 0; }
+.gauge .middle { position: absolute; left: calc(50% - 1px); width: 2px; top: 0; bottom: 0;
+  background: var(--ink); }
+.distance { white-space: nowrap; display: flex; align-items: baseline; font-size: 14px; }
+.distance .now { font-weight: 600; margin-right: 4px; }
+.distance .how { margin-left: auto; font-weight: 600; color: var(--number); }
+.distance.met .how { color: var(--good); }
+.interval { white-space: nowrap; }
+.none { color: var(--soft); }
+.caution { background: var(--warning-tint); border-left: 4px solid var(--warning);
+  border-radius: 4px; padding: 5px 9px; margin-bottom: 6px; }
+.caution .code { font-weight: 700; color: var(--warning); }
+.caution .text, .event .said, tr.aside td { overflow-wrap: anywhere; }
+table { width: 100%; border-collapse: collapse; }
+th { text-align: left; font-weight: 400; color: var(--soft); padding: 0 4px 2px 0; }
+th:nth-child(n+3), .figure { text-align: right; white-space: nowrap; }
+td { vertical-align: top; padding: 3px 4px 2px 0; white-space: nowrap; }
+tr:not(.aside) td { border-top: 1px solid var(--grid); }
+td .stream { font-weight: 600; }
+tr.aside td { font-size: 12px; padding-top: 0; white-space: normal; }
+tr.aside td, td.aside { color: var(--soft); }
+tr.good .shape { color: var(--good); }
+tr.waiting td, tr.ended td { color: var(--soft); }
+tr.warning td { background: var(--warning-tint); color: var(--warning); }
+tr.warning:not(.aside) td { font-weight: 700; }
+.event { display: flex; gap: 8px; padding: 3px 0; border-top: 1px solid var(--grid); }
+.event .when { color: var(--soft); min-width: 40px; }
+.event .kind { color: var(--soft); min-width: 50px; }
+.event.of-caution .kind { color: var(--warning); font-weight: 600; }
+.event.of-verdict .kind { color: var(--number); font-weight: 600; }
+.event .bar { color: var(--soft); margin-right: 5px; }
+"""
+
+SCRIPT = """
+"use strict";
+(() => {
+  // Counts seconds without a sign of life from the server: what is shown is old then, and must
+  // look so. When the server is back, as after a restart, the page is loaded anew.
+  const box = document.getElementById("silent");
+  let beat = null, silent = 0;
+  const newest = () => {
+    const doc = window.Bokeh && Bokeh.documents[0];
+    const model = doc && doc.get_model_by_name("beat");
+    return model ? model.text : null;
+  };
+  const reload = () => fetch("static/js/bokeh.min.js", {method: "HEAD", cache: "no-store"})
+    .then((reply) => { if (reply.ok) location.reload(); }, () => {});
+  setInterval(() => {
+    const now = newest();
+    silent = now === beat ? silent + 1 : 0;
+    beat = now;
+    const old = silent >= 4;
+    document.body.classList.toggle("silent", old);
+    box.hidden = !old;
+    if (old) {
+      box.textContent = "No word from rampside for " + silent + " s: what is shown here is old. "
+        + "This page comes back by itself when rampside does.";
+      if (silent % 3 === 0) reload();
+    }
+  }, 1000);
+})();
+"""
