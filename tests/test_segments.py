@@ -92,7 +92,7 @@ def test_a_segment_never_spans_zero_nor_two_sweeps() -> None:
 
 
 def test_own_line_of_a_segment_is_its_own() -> None:
-    readings = ramp(30, first=0.5, last=0.52)
+    readings = ramp(30, first=0.52, last=0.54)  # within one bin
     (segment,) = fed(readings).all()
     fields = np.array([field for _, _, field, _, _ in readings])
     rho = np.array([rho for _, _, _, rho, _ in readings])
