@@ -20,6 +20,7 @@ LEVEL = (0,)
 SLOPING = (0, 1)
 CURVED = (0, 1, 2)
 CUBIC = (0, 1, 2, 3)
+SQUARE = (0, 2)
 OTHER_PARITY = 4
 """The regressor of the other parity, in both roles."""
 

@@ -5,11 +5,14 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
-from analyse.basis import HALL_LINE, HALL_SAGGING, SLOPING
+from analyse.basis import HALL_LINE, HALL_SAGGING, SLOPING, SQUARE, regressors
 from analyse.line_fit import LineFit, fit_columns
 from analyse.segments import Pool, Segment
 
 Line = tuple[float, float, float]
+
+STEADY = 0.7
+"""Mean over root mean square of departures that are steady."""
 
 
 @dataclass(frozen=True)
@@ -21,6 +24,8 @@ class Shapes:
     along_line: Line | None = None
     hall_line: Line | None = None
     sweeps_apart: SweepsApart | None = None
+    square_rise: tuple[float, float] | None = None
+    beyond: tuple[float, float] | None = None
 
 
 @dataclass(frozen=True)
@@ -104,3 +109,43 @@ def _delay(groups: list[list[Segment]], apart: float) -> float | None:
     if not rates[0] or not 0.8 < -rates[1] / rates[0] < 1.25:
         return None
     return apart / (rates[1] - rates[0])
+
+
+def square_rise(pool: Pool, crossing_T: float, scale_T: float) -> tuple[float, float] | None:
+    """(share by which rho_xx has risen as B^2 at the field where rho_xx = rho_xy, its error).
+
+    Two kinds of carriers, the second slow and with a small share s of the conductivity, give
+    s (mu B)^2, that is s at this field, and a Hall slope that is wrong by about 2 s.
+    """
+    fit = fit_columns(pool, SQUARE)
+    if fit is None or fit.nu < 10 or not fit.theta[0]:
+        return None
+    at = (crossing_T / scale_T) ** 2
+    return fit.theta[1] / fit.theta[0] * at, abs(fit.standard_error(1) / fit.theta[0]) * at
+
+
+def beyond_window(
+    hall: Pool, segments: list[Segment], high_T: float, scale_T: float
+) -> tuple[float, float] | None:
+    """(mean relative departure from the Hall line above the window, its error), if it is steady.
+
+    Looks at segments between the window's end and twice that field. Oscillations and plateaus
+    depart to both sides; a second kind of carrier, or a sagging current, to one. None if fewer
+    than four segments lie there or their departures are not of one sign and kind.
+    """
+    fit = fit_columns(hall, HALL_LINE)
+    outside = [one for one in segments if high_T <= one.low_T and one.high_T <= 2 * high_T]
+    if fit is None or fit.nu < 10 or len(outside) < 4 or not fit.theta[1]:
+        return None
+    departures, errors = [], []
+    for one in outside:
+        u = one.mean_field_T / scale_T
+        value, leverage = fit.predict(regressors("hall", u))
+        size = abs(fit.theta[1] * u)
+        departures.append((one.mean() - value) * math.copysign(1.0, fit.theta[1] * u) / size)
+        errors.append(math.sqrt(fit.variance * (leverage + 1.0 / one.count)) / size)
+    mean = sum(departures) / len(departures)
+    rms = math.sqrt(sum(d * d for d in departures) / len(departures))
+    if abs(mean) < STEADY * rms:
+        return None
+    return mean, max(errors)

@@ -129,23 +129,21 @@ def find_bounds(
     if given.low_T is not None and given.high_T is not None:
         return Bounds(given.low_T, given.high_T)
     two = homogeneous_run(hall, "hall", scale_T)
-    crossing_T = _crossing(longitudinal, hall, two, scale_T)
+    pools = Pool(), Pool()
+    for pool, segments in zip(pools, (hall, longitudinal), strict=True):
+        for segment in segments:
+            if two.holds(segment):
+                pool.take(segment)
+    crossing_T = crossing(*pools, scale_T)
     one = homogeneous_run(longitudinal, "longitudinal", scale_T, PEAK_SHARE * crossing_T)
     low = max(one.low_T, two.low_T) if given.low_T is None else given.low_T
     high = min(one.high_T, two.high_T) if given.high_T is None else given.high_T
     return Bounds(low, max(high, low))
 
 
-def _crossing(
-    longitudinal: list[Segment], hall: list[Segment], bounds: Bounds, scale_T: float
-) -> float:
+def crossing(hall: Pool, along: Pool, scale_T: float) -> float:
     """About where rho_xx = rho_xy, in T; 0 while it is not known."""
-    pools = Pool(), Pool()
-    for pool, segments in zip(pools, (hall, longitudinal)):
-        for segment in segments:
-            if bounds.holds(segment):
-                pool.take(segment)
-    line, level = fit_columns(pools[0], HALL_LINE), fit_columns(pools[1], LEVEL)
+    line, level = fit_columns(hall, HALL_LINE), fit_columns(along, LEVEL)
     if line is None or level is None or not line.theta[1]:
         return 0.0
     return abs(level.theta[0] / line.theta[1]) * scale_T

@@ -9,7 +9,14 @@ from analyse.lockin import LockinFilter
 from analyse.pairing import Pair
 from analyse.segments import Pool, Segments
 from analyse.setup import Setup
-from analyse.shapes import Shapes, fall_off, straight, sweeps_apart
+from analyse.shapes import (
+    Shapes,
+    beyond_window,
+    fall_off,
+    square_rise,
+    straight,
+    sweeps_apart,
+)
 from analyse.transport_fit import (
     BEND_SEEN,
     Coefficient,
@@ -22,7 +29,7 @@ from analyse.transport_fit import (
     longitudinal_columns,
     noise_excess,
 )
-from analyse.window import Bounds, agrees, find_bounds
+from analyse.window import Bounds, agrees, crossing, find_bounds
 
 ROLES = ("hall", "longitudinal")
 GROWN = 1.12
@@ -168,13 +175,18 @@ class WindowedFit:
 
     def _seen_shapes(self) -> Shapes:
         hall, along = (self._pools[each] for each in ROLES)
-        inside = [one for one in self._segments["hall"].closed if self.bounds.holds(one)]
+        closed = self._segments["hall"].closed
+        inside = [one for one in closed if self.bounds.holds(one)]
+        crossing_T = crossing(hall, along, self._scale_T)
         return Shapes(
             fall_off(along, "longitudinal", self._scale_T),
             fall_off(hall, "hall", self._scale_T),
             straight(along, "longitudinal", self._scale_T),
             straight(hall, "hall", self._scale_T),
             sweeps_apart(inside, self._scale_T),
+            square_rise(along, crossing_T, self._scale_T),
+            beyond_window(hall, closed, self.bounds.high_T, self._scale_T)
+            if math.isfinite(self.bounds.high_T) else None,
         )
 
     def _halve(self, along: Pool) -> list[tuple[Pool, Bounds]]:

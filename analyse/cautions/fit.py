@@ -58,6 +58,7 @@ def fit_cautions(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
         )
     else:
         yield from _straightness(facts.fit, setup.target)
+        yield from _second_carrier(facts.shapes, setup.target)
     if _exchanged(facts):
         yield Caution(
             "channels_exchanged",
@@ -187,6 +188,27 @@ def _straightness(fit: TransportFit, target: Target) -> Iterator[Caution]:
                 f"{number} by {100 * abs(coefficient.bend) / size:.2g} %: a second kind of "
                 "carrier, a current that depends on field, or heating.",
             )
+
+
+def _second_carrier(shapes: Shapes, target: Target) -> Iterator[Caution]:
+    rise = shapes.square_rise
+    if rise is not None and rise[0] > SAG_CLEAR * rise[1] and 2 * rise[0] > target.sheet_density:
+        yield Caution(
+            "not_straight",
+            f"the longitudinal resistivity has risen as B^2 by {100 * rise[0]:.2g} % where it "
+            "equals the Hall resistivity; if a second kind of carrier does that, the sheet density "
+            f"is wrong by about {200 * rise[0]:.2g} %: go on to higher field.",
+        )
+    beyond = shapes.beyond
+    if beyond is None:
+        return
+    mean, error = beyond
+    if abs(mean) > SAG_CLEAR * error and abs(mean) > target.sheet_density:
+        yield Caution(
+            "not_straight",
+            f"above the window the Hall resistivity departs steadily from the line, by "
+            f"{100 * mean:.2g} %: a second kind of carrier, or a current that depends on field.",
+        )
 
 
 def _quick(facts: FitFacts) -> Iterator[Caution]:
