@@ -1,4 +1,4 @@
-"""A simulated laboratory whose ramp takes 8 s, as a configuration. For tests."""
+"""A simulated laboratory whose ramp takes 6 s, as a configuration. For tests."""
 
 from __future__ import annotations
 
@@ -35,7 +35,7 @@ _RIG = b"""
 title = "small"
 [ramp]
 path_T = [0.0, 1.0]
-rate_T_per_min = 7.5
+rate_T_per_min = 10.0
 [target]
 sheet_density_relative = 0.02
 mobility_relative = 0.02
@@ -60,7 +60,7 @@ excitation = { current_A = 1e-6 }
 [laboratory]
 current_A = 1e-6
 sample = { sheet_density_per_m2 = 3e15, mobility_m2_per_V_s = 20.0, quantum_lifetime_s = 1e-13 }
-magnet = { port = 47101, path_T = [0.0, 1.0], rate_T_per_min = 7.5, wait_s = 4.0 }
+magnet = { port = 47101, path_T = [0.0, 1.0], rate_T_per_min = 10.0, wait_s = 1.0 }
 """
 
 

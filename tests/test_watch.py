@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import signal
 import subprocess
 import urllib.request
@@ -92,7 +93,8 @@ def test_the_laboratory_killed_in_mid_ramp(demo: Running, tmp_path: Path) -> Non
     demo.children()["acquire.laboratory"].kill()
     demo.wait_for("simulated laboratory works again")
     demo.wait_for("T | ", demo.text.count("T | ") + 2)
-    assert demo.end()[0] == 0
+    status, took_s = demo.end(signal.SIGHUP)  # as when the terminal is closed
+    assert (status, took_s < ENDS_WITHIN_S) == (0, True), demo.text
     assert_whole(demo.run, tmp_path)
     statuses = {
         row[3]
@@ -102,9 +104,9 @@ def test_the_laboratory_killed_in_mid_ramp(demo: Running, tmp_path: Path) -> Non
     assert "no_answer" in statuses
 
 
-def test_the_page_stays_when_the_ramp_is_over(tmp_path: Path) -> None:
+def test_the_page_stays_when_the_ramp_is_over_and_comes_back_later(tmp_path: Path) -> None:
     words = ("--port", 0, "--no-browser", "--folder", tmp_path / "runs")
-    with RampBench(steps=40, wait=20) as bench, Running(
+    with RampBench(steps=30, wait=2) as bench, Running(
         "watch", config := bench.write_config(tmp_path / "rig.toml"), *words
     ) as watch:
         watch.wait_for("The ramp is over.")
@@ -114,15 +116,17 @@ def test_the_page_stays_when_the_ramp_is_over(tmp_path: Path) -> None:
         assert watch.end()[0] == 0
     assert (watch.run / "config.toml").read_bytes() == config.read_bytes()
     assert_whole(watch.run, tmp_path)
+    with Running("page", watch.run, "--port", 0, "--no-browser") as page_command:
+        page_command.wait_for("Open it in a browser.")
+        with urllib.request.urlopen(page_command.after("Page:"), timeout=10) as page:
+            assert page.status == 200
+        assert page_command.end()[0] == 0
 
 
-@pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM, signal.SIGHUP])
-def test_ended_by_a_signal_in_time_and_in_order(
-    watch: Running, tmp_path: Path, number: signal.Signals
-) -> None:
+def test_ctrl_c_ends_in_time_and_in_order(watch: Running, tmp_path: Path) -> None:
     children = watch.children()
     assert set(children) == WATCHING
-    status, took_s = watch.end(number)
+    status, took_s = watch.end(signal.SIGINT)
     assert status == 0, watch.text
     assert took_s < ENDS_WITHIN_S
     assert not any(child.is_running() for child in children.values())
@@ -146,7 +150,7 @@ def test_any_process_killed_in_mid_ramp_changes_nothing(
         watch.wait_for(f"{role} works again")
     assert bench.field_T < 1.0, "the ramp still goes on"
     watch.wait_for("readings | bar:", watch.text.count("readings | bar:") + 1)
-    status, took_s = watch.end()
+    status, took_s = watch.end(signal.SIGTERM)
     assert (status, took_s < ENDS_WITHIN_S) == (0, True), watch.text
     assert_whole(watch.run, tmp_path)
     events = [row[2:6] for row in open_run(watch.run).rows(EVENTS)]
@@ -181,7 +185,7 @@ def test_a_process_that_cannot_be_asked_is_killed_in_time(watch: Running) -> Non
     status, took_s = watch.end()
     assert status == 0
     assert took_s < ENDS_WITHIN_S
-    assert "Had to be killed, did not end in time: reader lockin_xx." in watch.text
+    assert re.search(r"Had to be killed, .*\breader lockin_xx\b", watch.text)
     assert not stopped.is_running()
 
 
@@ -189,7 +193,7 @@ def test_bounded_by_seconds(bench: RampBench, tmp_path: Path) -> None:
     config = bench.write_config(tmp_path / "rig.toml")
     runs = tmp_path / "runs"
     with Running(
-        "watch", config, "--seconds", 4, "--port", 0, "--no-browser", "--folder", runs
+        "watch", config, "--seconds", 1.5, "--port", 0, "--no-browser", "--folder", runs
     ) as watch:
         assert watch.wait() == 0
     assert "The ramp is over" not in watch.text
