@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 from dataclasses import dataclass
 
 from analyse.basis import HALL_LINE, HALL_SAGGING, SLOPING, SQUARE, regressors
 from analyse.line_fit import LineFit, fit_columns
 from analyse.segments import Pool, Segment
+from analyse.window import TOLERANCE, is_rough
 
 Line = tuple[float, float, float]
 
@@ -26,6 +28,7 @@ class Shapes:
     sweeps_apart: SweepsApart | None = None
     square_rise: tuple[float, float] | None = None
     beyond: tuple[float, float] | None = None
+    ripples: bool = False
 
 
 @dataclass(frozen=True)
@@ -149,3 +152,24 @@ def beyond_window(
     if abs(mean) < STEADY * rms:
         return None
     return mean, max(errors)
+
+
+def ripples(along: Pool, segments: list[Segment], high_T: float, scale_T: float) -> bool:
+    """Whether the longitudinal resistivity oscillates above the window: it scatters inside
+    segments, or departs from the fit now to one side and now to the other."""
+    fit = fit_columns(along, SLOPING)
+    outside = sorted(
+        (one for one in segments if high_T <= one.low_T <= 4 * high_T), key=lambda one: one.low_T
+    )
+    if fit is None or fit.nu < 10 or not outside:
+        return False
+    limit = TOLERANCE * abs(fit.theta[0])
+    if any(is_rough(one, fit, limit) for one in outside):
+        return True
+    sides = []
+    for one in outside:
+        value, leverage = fit.predict(regressors("longitudinal", one.mean_field_T / scale_T))
+        error = math.sqrt(fit.variance * (leverage + 1.0 / one.count))
+        if abs(one.mean() - value) > max(limit, 4.5 * error):
+            sides.append(one.mean() > value)
+    return sum(a != b for a, b in itertools.pairwise(sides)) >= 2

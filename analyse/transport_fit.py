@@ -9,7 +9,7 @@ from functools import lru_cache
 
 from scipy.stats import f as f_distribution
 
-from analyse.basis import CUBIC, CURVED, HALL_BENT, HALL_LINE, LEVEL, OTHER_PARITY, SLOPING
+from analyse.basis import CUBIC, CURVED, HALL_BENT, HALL_LINE, LEVEL, OTHER_PARITY, SLOPING, SQUARE
 from analyse.confidence import best_phi
 from analyse.line_fit import LineFit, fit_columns, lack_of_fit
 from analyse.segments import Pool
@@ -20,6 +20,8 @@ SLOPE_SHARE = 0.8
 commonly known far better, so that a smaller share costs it little."""
 DEFAULT_EFFECTIVE = 100.0
 LACK_OF_FIT_LEVEL = 1e-5
+FLOOR, SLOPE_FLOOR = 0.001, 0.0003
+"""Shares of rho_0 and of the slope that structure within the window's tolerance can amount to."""
 PARITY_COST = 1.3
 """Factor in variance at which the other parity is left to the model part of the uncertainty."""
 BEND_SEEN = 3.5
@@ -42,12 +44,14 @@ class Coefficient:
     bend_error: float
     effective: float
     noise: float
-    order: int = 0
+    order: int
+    floor: float
 
     @property
     def spread(self) -> float:
-        """Model spread: what of the bend is beyond its own noise, as a standard uncertainty."""
-        return math.sqrt(max(0.0, self.bend**2 - self.bend_error**2))
+        """Model spread, as a standard uncertainty: what of the bend is beyond its own noise, and
+        what the window tolerates."""
+        return math.sqrt(max(0.0, self.bend**2 - self.bend_error**2) + self.floor**2)
 
     def largest_bend(self, factor: float = 1.645) -> float:
         """A bend that the data do not rule out."""
@@ -191,7 +195,7 @@ def hall_slope(
     if line is None:
         return None
     bent = fit_columns(pool, HALL_BENT + columns[2:], excess)
-    return _coefficient(line, 1, bent, phis.slope, SLOPE_SHARE * alpha, pool.effective)
+    return _coefficient(line, 1, bent, phis.slope, SLOPE_SHARE * alpha, pool.effective, SLOPE_FLOOR)
 
 
 def zero_field(
@@ -203,8 +207,8 @@ def zero_field(
         return None
     odd = tuple(column for column in columns if column == OTHER_PARITY)
     order = len(columns) - len(odd) - 1
-    bent = fit_columns(pool, (SLOPING, CURVED, CUBIC)[order] + odd, excess)
-    return _coefficient(fit, 0, bent, phi, alpha, pool.effective, order)
+    bent = fit_columns(pool, (SQUARE, CURVED, CUBIC)[order] + odd, excess)
+    return _coefficient(fit, 0, bent, phi, alpha, pool.effective, FLOOR, order)
 
 
 def _total(part: Coefficient) -> float:
@@ -220,12 +224,12 @@ def _bend(fit: LineFit, bent: LineFit, j: int) -> tuple[float, float]:
 
 def _coefficient(
     fit: LineFit, j: int, bent: LineFit | None, phi: float, alpha: float, effective: float,
-    order: int = 0,
+    floor: float, order: int = 0,
 ) -> Coefficient:
     bend, bend_error = 0.0, math.inf
     if bent is not None and bent.nu > 2:
         bend, bend_error = _bend(fit, bent, j)
     return Coefficient(
         fit.theta[j], fit.standard_error(j), fit.half_width(j, phi, alpha),
-        bend, bend_error, effective, math.sqrt(fit.variance), order,
+        bend, bend_error, effective, math.sqrt(fit.variance), order, floor * abs(fit.theta[j]),
     )

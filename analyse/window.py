@@ -24,9 +24,9 @@ from analyse.setup import Window
 
 CORE_EFFECTIVE = 16.0        # effective readings before a segment is compared with them
 ODD_LEVEL = 1e-7             # chance of calling a good segment odd; many are looked at, often
-TOLERANCE = {"longitudinal": 0.003, "hall": 0.003}
-"""Departures smaller than this share of rho_0, or of the Hall resistivity, do not end the window:
-what they do to the numbers is what the model part of the uncertainty is for."""
+TOLERANCE = 0.003
+"""Departures smaller than this share of rho_0, or of the Hall resistivity, do not end the window;
+what they can do to the numbers is in the model part of the uncertainty (transport_fit.FLOOR)."""
 MODEL = {"longitudinal": CURVED, "hall": HALL_LINE}
 PEAK_SHARE = 0.3
 """A peak or dip around zero field is left out up to this share of the field where rho_xx =
@@ -55,18 +55,22 @@ def agrees(segment: Segment, pool: Pool, role: str, scale_T: float) -> bool:
         return True
     u = segment.mean_field_T / scale_T
     predicted, leverage = fit.predict(regressors(role, u))
-    limit = TOLERANCE[role] * _size(fit, role, u)
+    limit = TOLERANCE * _size(fit, role, u)
     variance = fit.variance * (1.0 / segment.count + leverage)
     departure = abs(segment.mean() - predicted)
     if departure > limit and departure > _t_limit(int(fit.nu)) * math.sqrt(variance):
         return False
+    return not is_rough(segment, fit, limit)
+
+
+def is_rough(segment: Segment, fit: LineFit, limit: float) -> bool:
+    """Whether a segment scatters about its own line more than a fit's readings do, beyond
+    ``limit``: a ripple inside it."""
     dof = segment.own_dof() / segment.kappa
-    if dof > 2:
-        own = segment.own_rss() / segment.own_dof()
-        rough = own - fit.s2
-        if rough > limit**2 and own > _f_limit(int(dof), int(fit.nu)) * fit.s2:
-            return False
-    return True
+    if dof <= 2:
+        return False
+    own = segment.own_rss() / segment.own_dof()
+    return own - fit.s2 > limit**2 and own > _f_limit(int(dof), int(fit.nu)) * fit.s2
 
 
 @lru_cache(maxsize=4096)
@@ -101,7 +105,26 @@ def homogeneous_run(
             best, best_information = Bounds(low, high), information
         if stop == len(ordered) and start == 0:
             break
+    if lowest_T > 0:
+        best = _without_peak(ordered, best, role, scale_T, lowest_T)
     return best
+
+
+def _without_peak(
+    ordered: list[Segment], bounds: Bounds, role: str, scale_T: float, lowest_T: float
+) -> Bounds:
+    """Leave out what lies lowest and does not agree with all that lies above it."""
+    inside = [one for one in ordered if bounds.holds(one)]
+    for first, segment in enumerate(inside[:-1]):
+        if segment.low_T > lowest_T:
+            break
+        pool = Pool()
+        for one in inside[first + 1 :]:
+            pool.take(one)
+        if pool.effective < CORE_EFFECTIVE or agrees(segment, pool, role, scale_T):
+            break
+        bounds = Bounds(inside[first + 1].low_T, bounds.high_T)
+    return bounds
 
 
 def _grow(

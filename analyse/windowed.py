@@ -13,6 +13,7 @@ from analyse.shapes import (
     Shapes,
     beyond_window,
     fall_off,
+    ripples,
     square_rise,
     straight,
     sweeps_apart,
@@ -185,8 +186,17 @@ class WindowedFit:
             straight(hall, "hall", self._scale_T),
             sweeps_apart(inside, self._scale_T),
             square_rise(along, crossing_T, self._scale_T),
-            beyond_window(hall, closed, self.bounds.high_T, self._scale_T)
-            if math.isfinite(self.bounds.high_T) else None,
+            *self._beyond(hall, along),
+        )
+
+    def _beyond(self, hall: Pool, along: Pool) -> tuple[tuple[float, float] | None, bool]:
+        end_T = self.bounds.high_T
+        if not math.isfinite(end_T):
+            return None, False
+        closed = {role: self._segments[role].closed for role in ROLES}
+        return (
+            beyond_window(hall, closed["hall"], end_T, self._scale_T),
+            ripples(along, closed["longitudinal"], end_T, self._scale_T),
         )
 
     def _halve(self, along: Pool) -> list[tuple[Pool, Bounds]]:

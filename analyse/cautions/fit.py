@@ -22,7 +22,7 @@ BEND_CERTAIN = 4.5
 
 NOISE_MATTERS = 0.3
 """Share of the target that the widened interval takes up when an excess of noise is said."""
-OFFSET_CLEAR = 6.0
+OFFSET_CLEAR = 5.0
 SMALLEST_OFFSET_T, SMALLEST_OFFSET_SQUARES = 5e-4, 0.02
 SAG_CLEAR = 4.5
 """Standard errors at which a fall-off is called one."""
@@ -67,11 +67,11 @@ def fit_cautions(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
         )
     yield from _sweeps(facts, setup.target)
     yield from _offset(facts)
-    if facts.farthest_T > facts.bounds.high_T:
+    if facts.shapes.ripples:
         yield Caution(
             "oscillations",
-            f"above {facts.bounds.high_T:.3g} T the curves leave Drude's form (oscillations, "
-            "plateaus or a bend): the fit ends there.",
+            f"above {facts.bounds.high_T:.3g} T the longitudinal resistivity oscillates: the fit "
+            "ends there.",
             touches_answer=False,
         )
     if setup.expected_carriers and facts.carriers not in ("unknown", setup.expected_carriers):
