@@ -6,7 +6,7 @@ import math
 from collections import deque
 from dataclasses import dataclass, replace
 
-from analyse.field_track import FieldTrack
+from analyse.field_track import CLOSEST_S, FieldTrack
 from analyse.setup import Signal
 from analyse.spikes import SpikeGate
 
@@ -81,7 +81,7 @@ class Channel:
         stages = self.track.stages if self.track is not None else None
         if stages is None:
             self._gate.longest = UNFILTERED_LONGEST
-        elif 0 < spacing_s < math.inf:
+        elif CLOSEST_S < spacing_s < math.inf:
             self._gate.longest = min(MOST_HELD, 2 + int(stages.settle_s(1e-3) / spacing_s))
 
     def interpolated(self, time_s: float) -> float | None:

@@ -22,6 +22,7 @@ from analyse.transport_fit import TransportFit, fit_transport, fixed_phis
 from analyse.verdict import Facts, what_is_missing
 from analyse.windowed import WindowedFit
 
+LATEST_S = 1e12
 PLAIN_SIGNAL, PLAIN_FIELD, ANY_WINDOW = Signal(), FieldSource(), Window()
 
 
@@ -107,7 +108,8 @@ class Estimator:
         status
             "ok", or why the reading can't be used: "overload", "range", "no_answer", "bad_reply".
 
-        Raises ValueError for an unknown channel or a time that is not finite.
+        Raises ValueError for an unknown channel, and for a time that is not finite or beyond
+        1e12 s.
         """
         estimates = self.advance(channel, time_s, x, y, status)
         return estimates[-1] if estimates else None
@@ -117,8 +119,8 @@ class Estimator:
         status: str = "ok",
     ) -> tuple[Estimate, ...]:
         """As :meth:`update`, with every estimate that the reading completes, in order."""
-        if not math.isfinite(time_s):
-            raise ValueError(f"time_s must be finite, not {time_s!r}")
+        if not abs(time_s) <= LATEST_S:
+            raise ValueError(f"time_s must be a time in seconds, not {time_s!r}")
         x, y = (None if one is None else float(one) for one in (x, y))
         return self._absorb(self._pairing.push(channel, float(time_s), x, y, status))
 
@@ -170,7 +172,8 @@ class Estimator:
                 self._quick.add(field_T, rho_xx, rho_xy)
         hall, along = self._fit.pools()
         fit = fit_transport(
-            self.setup, hall, along, self._fit.models, self._fit.inner, self._phis, self._fit.excess
+            self.setup, hall, along, self._fit.models, self._fit.inner, self._fit.far_level,
+            self._phis, self._fit.excess,
         )
         return self._estimate(time_s, field_T, rho_xx, rho_xy, fit)
 
