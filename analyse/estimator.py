@@ -172,7 +172,7 @@ class Estimator:
                 self._quick.add(field_T, rho_xx, rho_xy)
         hall, along = self._fit.pools()
         fit = fit_transport(
-            self.setup, hall, along, self._fit.models, self._fit.inner, self._fit.far_level,
+            self.setup, hall, along, self._fit.models, self._fit.inner, self._fit.tail,
             self._phis, self._fit.excess,
         )
         return self._estimate(time_s, field_T, rho_xx, rho_xy, fit)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 
 from scipy.stats import f as f_distribution
@@ -60,7 +60,8 @@ class Coefficient:
 
 @dataclass(frozen=True)
 class TransportFit:
-    """Slope in ohm per unit of u, offset and rho_0 in ohm, noise facts of both roles."""
+    """Slope in ohm per unit of u, offset and rho_0 in ohm, noise facts of both roles; ``groups``:
+    segments behind each (hall, longitudinal)."""
 
     slope: Coefficient | None
     offset_ohm: float | None
@@ -68,6 +69,7 @@ class TransportFit:
     rho_0: Coefficient | None
     noise_excess_hall: float
     noise_excess_longitudinal: float
+    groups: tuple[int, int]
 
 
 @dataclass(frozen=True)
@@ -170,21 +172,27 @@ def best_inner(inner: Sequence[Pool], excess: bool, phis: Phis, alpha: float) ->
 
 
 def fit_transport(
-    setup: Setup, hall: Pool, along: Pool, models: Models, inner: Coefficient | None, phis: Phis,
-    excess: tuple[float, float],
+    setup: Setup, hall: Pool, along: Pool, models: Models, inner: Coefficient | None,
+    tail: tuple[float, float] | None, phis: Phis, excess: tuple[float, float],
 ) -> TransportFit:
     """Both fits. ``excess``: noise factors (hall, longitudinal); above 1 they widen. ``inner``:
-    rho_0 from a smaller part of the window, taken where it is more certain."""
+    rho_0 from a smaller part of the window, taken where it is more certain. ``tail``: where a peak
+    around zero was left out, its mean and the level far from it. Its tail may reach into the
+    window: the smaller of rho_0's distances to the two goes into the model part."""
     alpha = 1.0 - setup.target.confidence
     line = fit_columns(hall, models.hall)
     offset = line.theta[0] if line is not None else None
     offset_error = line.standard_error(0) if line is not None else math.inf
     slope = hall_slope(hall, models.hall, excess[0] > 1, phis, alpha)
-    level = (1 - SLOPE_SHARE) * alpha
-    rho_0 = zero_field(along, models.longitudinal, excess[1] > 1, phis.rho_0, level)
+    level_alpha = (1 - SLOPE_SHARE) * alpha
+    rho_0 = zero_field(along, models.longitudinal, excess[1] > 1, phis.rho_0, level_alpha)
     if inner is not None and (rho_0 is None or _total(inner) < _total(rho_0)):
         rho_0 = inner
-    return TransportFit(slope, offset, offset_error, rho_0, excess[0], excess[1])
+    if rho_0 is not None and tail is not None:
+        reach = min(abs(rho_0.value - level) for level in tail)
+        rho_0 = replace(rho_0, floor=math.hypot(rho_0.floor, reach))
+    groups = (hall.groups, along.groups)
+    return TransportFit(slope, offset, offset_error, rho_0, excess[0], excess[1], groups)
 
 
 def hall_slope(

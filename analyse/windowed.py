@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 
 from analyse.basis import LEVEL, OTHER_PARITY
+from analyse.line_fit import fit_columns
 from analyse.lockin import LockinFilter
 from analyse.pairing import Pair
 from analyse.segments import Pool, Segments
@@ -88,6 +89,7 @@ class WindowedFit:
         self._inner: list[tuple[Pool, Bounds]] = []
         self._narrowed = False
         self.inner: Coefficient | None = None
+        self.tail: tuple[float, float] | None = None
         self.models = Models()
         self.shapes = Shapes()
         self._time_s = [math.inf, -math.inf]
@@ -173,6 +175,17 @@ class WindowedFit:
         self.excess = self._excesses()
         pools = [pool for pool, _ in self._inner]
         self.inner = best_inner(pools, self.excess[1] > 1, self._phis, self._alpha)
+        self.tail = self._seen_tail()
+
+    def _seen_tail(self) -> tuple[float, float] | None:
+        """(mean of what was left out around zero, level of the upper half of the window), where a
+        peak was left out."""
+        if self._setup.window.low_T is not None or not self.bounds.low_T:
+            return None
+        half = Bounds(self._pools["longitudinal"].high_T / 2, self.bounds.high_T)
+        far = fit_columns(self._pool("longitudinal", half), LEVEL)
+        peak = fit_columns(self._pool("longitudinal", Bounds(0.0, self.bounds.low_T)), LEVEL)
+        return None if far is None or peak is None else (peak.theta[0], far.theta[0])
 
     def _seen_shapes(self) -> Shapes:
         hall, along = (self._pools[each] for each in ROLES)

@@ -13,8 +13,8 @@ from analyse.square_root import SquareRootInformation
 SPACING = 0.5
 CLEAR = 4.5
 """Standard errors at which a drift is called one; it is looked at at every hold."""
-MATTERS = 0.2
-"""Share of the target that the drift must come to over the ramp to be said."""
+MATTERS = 0.1
+"""Share of the target that the drift must come to, over hold and ramp, to be said."""
 FEWEST = 24
 
 
@@ -84,7 +84,7 @@ class DriftWatch:
             mean = sum(w * value for w, (value, _) in zip(weights, known, strict=True))
             mean, error = mean / sum(weights), 1.0 / math.sqrt(sum(weights))
             over_s = max(hold.last_s - hold.start_s for hold in self._holds.values())
-            if abs(mean) > CLEAR * error and abs(mean) * self._duration_s > self._limit:
+            if abs(mean) > CLEAR * error and abs(mean) * (self._duration_s + over_s) > self._limit:
                 self._seen, self._seen_over_s = mean, over_s
             elif over_s > self._seen_over_s:
                 self._seen = None

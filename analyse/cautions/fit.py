@@ -20,6 +20,8 @@ BEND_CERTAIN = 4.5
 """Standard errors beyond the target at which a bend is called one; it is looked at all the time."""
 
 
+FEWEST_SEGMENTS = 12
+"""Segments before an excess of noise is told apart from structure that is not resolved yet."""
 NOISE_MATTERS = 0.3
 """Share of the target that the widened interval takes up when an excess of noise is said."""
 OFFSET_CLEAR = 5.0
@@ -85,12 +87,13 @@ def fit_cautions(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
 
 def _noise(fit: TransportFit, setup: Setup) -> Iterator[Caution]:
     target = setup.target
-    for role, excess, stages, coefficient, limit in (
-        ("Hall", fit.noise_excess_hall, setup.hall.filter, fit.slope, target.sheet_density),
+    for role, excess, stages, coefficient, limit, groups in (
+        ("Hall", fit.noise_excess_hall, setup.hall.filter, fit.slope, target.sheet_density,
+         fit.groups[0]),
         ("longitudinal", fit.noise_excess_longitudinal, setup.longitudinal.filter, fit.rho_0,
-         target.mobility),
+         target.mobility, fit.groups[1]),
     ):
-        if excess <= 1.0 or stages is None or coefficient is None:
+        if excess <= 1.0 or stages is None or coefficient is None or groups < FEWEST_SEGMENTS:
             continue
         if coefficient.half_width > NOISE_MATTERS * limit * abs(coefficient.value):
             yield Caution(
