@@ -151,6 +151,11 @@ def percent(share: float) -> str:
     return f"{100 * share:.{decimals}f} %"
 
 
+def grouped(number: int) -> str:
+    """A count with thin spaces between its thousands."""
+    return f"{number:,}".replace(",", "\u2009")
+
+
 def power_and_unit(power: int, symbol: str) -> str:
     """``× 10¹⁵ m⁻²``; the unit alone for the power 0."""
     return symbol if power == 0 else f"× 10{str(power).translate(_SUPERSCRIPTS)} {symbol}"

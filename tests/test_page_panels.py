@@ -76,7 +76,7 @@ def test_the_verdict_says_what_is_missing_or_since_when(store: RunStore) -> None
     fill(store, 60, top_T=0.5)
     said = words(verdict_panel(store.bar("bar3"), store.run()))
     assert said.startswith("Converging sheet density known to 3 %, wanted 1 %")
-    assert said.endswith("60 field points window 0 to 0.5 T electrons")
+    assert said.endswith("60 field points · window 0 to 0.5 T · electrons")
     store.begin("live", lambda: 24.0)
     said = words(field_panel(store.bar("bar3"), store.run(), RIG))
     assert re.search(r"to the target about .* s, near \d\.\d\d T", said)

@@ -20,7 +20,7 @@ from bokeh.server.util import bind_sockets
 from acquire.errors import BusError, RampsideError
 from acquire.run_folder import RunFolder, open_run
 from acquire.stop import Stop
-from dashboard.page.door import MOST_PAGES, Door, serve
+from dashboard.page.door import MOST_PAGES, Door, close_sessions, serve
 from dashboard.page.feed import Feed
 from dashboard.page.session import Session
 from dashboard.page.store import RunStore
@@ -65,6 +65,7 @@ async def _show(
         while not stop.requested and (parent is None or os.getppid() == parent):
             await asyncio.sleep(LOOK_S)
     finally:
+        await close_sessions(server)
         server.stop(wait=False)
         feed.close()
 

@@ -8,6 +8,7 @@ a limit to the pages open at once. Sessions are signed with a secret that is mad
 
 from __future__ import annotations
 
+import asyncio
 import secrets
 import socket
 from collections.abc import Callable
@@ -30,6 +31,7 @@ from dashboard.ports import LOOPBACK
 MOST_PAGES = 24
 LARGEST_MESSAGE = 1 << 20
 UNUSED_S = 10
+CLOSE_S = 0.3
 TOKEN_LASTS_S = 24 * 3600
 """How long an opened page may come back after its connection broke: a night, a sleeping laptop."""
 
@@ -118,6 +120,22 @@ class GuardedTornado(BokehTornado):
             }
             return self.get_handler_delegate(request, PageHandler, context)
         return super().find_handler(request, **words)
+
+
+async def close_sessions(server: BaseServer) -> None:
+    """End the callbacks of all sessions, so that nothing is left half sent.
+
+    A browser that does not take what it is sent is not waited for.
+    """
+    def end(document: Document) -> None:
+        for callback in document.session_callbacks:
+            document.remove_periodic_callback(callback)
+
+    endings = [
+        asyncio.wait_for(session.with_document_locked(end, session.document), CLOSE_S)
+        for session in server.get_sessions()
+    ]
+    await asyncio.gather(*endings, return_exceptions=True)
 
 
 def serve(

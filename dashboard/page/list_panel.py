@@ -6,6 +6,7 @@ from acquire.config import Rig
 from dashboard.page.html import NOTHING, Html, div, element, join, span
 from dashboard.page.presence import StreamLine
 from dashboard.page.store import BarFacts, Event, RunFacts
+from dashboard.quantities import grouped
 from dashboard.words import duration
 
 EVENTS_SHOWN = 60
@@ -113,11 +114,6 @@ def _stream_rows(line: StreamLine) -> Html:
     return join(
         facts, element("tr", element("td", *said, colspan="4"), class_=f"aside {line.level}")
     )
-
-
-def grouped(number: int) -> str:
-    """A count with thin spaces between its thousands."""
-    return f"{number:,}".replace(",", "\u2009")
 
 
 def _event(event: Event, several_bars: bool) -> Html:

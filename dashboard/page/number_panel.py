@@ -9,6 +9,7 @@ from dashboard.quantities import (
     NOT_KNOWN,
     QUANTITIES,
     Quantity,
+    grouped,
     percent,
     power_and_unit,
     write,
@@ -19,6 +20,8 @@ from dashboard.words import duration
 GAUGE_TARGETS = 4.0
 """How many times the target the gauge reaches to either side."""
 
+STANDING_T_PER_MIN = 5e-4  # slower than this is told as no rate at all
+LEAST_LOW = 1e-3  # a window that begins below this share of its end begins at zero
 LONGEST = 15.5  # digits, and half of the unit's letters; longer ones are set smaller, to fit
 
 _ICONS = {
@@ -38,8 +41,8 @@ def verdict_panel(bar: BarFacts, run: RunFacts) -> Html:
         notes.append(div("flag", f"▲ {count} open caution{'s' if count > 1 else ''}"))
     if stale := _stale(run):
         notes.append(div("flag loud", f"■ {stale}"))
-    notes.append(div("facts", *(span("fact", fact) for fact in _facts(bar))))
-    return div(f"card verdict {state}", _icon(state), div("words", div("word", word), *notes))
+    top = div("top", _icon(state), div("word", word))
+    return div(f"card verdict {state}", top, *notes, div("facts", *_facts(bar)))
 
 
 def number_panel(column: str, bar: BarFacts, rig: Rig) -> Html:
@@ -95,7 +98,8 @@ def _moving(run: RunFacts) -> str:
     """The rate of the field; empty where it is not known or nothing moves any more."""
     if run.field is None or run.field.rate_T_per_min is None or run.now_s is None:
         return ""
-    return f"{signed(run.field.rate_T_per_min, 3)} T/min"
+    rate = run.field.rate_T_per_min
+    return "standing" if abs(rate) < STANDING_T_PER_MIN else f"{signed(rate, 3)} T/min"
 
 
 def _age(run: RunFacts) -> str:
@@ -140,19 +144,23 @@ def _why(state: str, bar: BarFacts, run: RunFacts) -> str:
     waiting = bar.curves.text("waiting_for")
     if state == "unknown":
         return "the field must move on before the numbers mean anything"
-    return waiting or "narrowing towards the target"
+    return waiting.replace(" %", "\u00a0%") or "narrowing towards the target"
 
 
-def _facts(bar: BarFacts) -> list[str]:
+def _facts(bar: BarFacts) -> list[Html]:
     curves = bar.curves
     points = int(curves.number("field_points") or 0)
-    facts = [f"{points} field point{'' if points == 1 else 's'}"]
+    facts = [f"{grouped(points)} field point{'' if points == 1 else 's'}"]
     low, high = curves.number("window_low_T"), curves.number("window_high_T")
     if low is not None and high is not None:
-        facts.append(f"window {low:.3g} to {high:.3g} T")
+        from_T = 0.0 if low < LEAST_LOW * high else low
+        facts.append(f"window {from_T:.3g} to {high:.3g} T")
     if carriers := curves.text("carriers"):
         facts.append(carriers)
-    return facts
+    pieces: list[Html] = []
+    for fact in facts:
+        pieces += [span("", " · ")] * bool(pieces) + [span("fact", fact)]
+    return pieces
 
 
 def _stale(run: RunFacts) -> str:

@@ -65,17 +65,17 @@ header {{ display: flex; align-items: center; gap: 16px; min-height: 32px; }}
   grid-template-columns: 1.42fr 1fr 0.86fr; }}
 .column {{ display: flex; flex-direction: column; min-width: 0; min-height: 0;
   background: var(--card); border: 1px solid var(--line); border-radius: 8px; padding: 6px; }}
-.column.right {{ padding: 10px 12px; }}
+.column.right {{ padding: 10px 12px; overflow: hidden; }}
 .plot {{ flex: 1; position: relative; }}
 .left .resistivity {{ flex: 3.1; }}
 .left .residual_xy {{ flex: 1.32; }}
 .middle .path_scattering_time {{ flex: 1.25; }}
-h2 {{ font-size: 13px; font-weight: 600; color: var(--soft); margin: 12px 0 4px; }}
+h2 {{ font-size: 13px; font-weight: 600; color: var(--soft); margin: 10px 0 4px; flex: none; }}
 h2:first-child {{ margin-top: 0; }}
 .list {{ overflow-y: auto; flex: none; }}
-.list.cautions {{ max-height: 38%; }}
-.list.streams {{ max-height: 44%; }}
-.list.events {{ flex: 1; min-height: 60px; }}
+.list.cautions {{ flex: 0 2 auto; min-height: 40px; }}
+.list.streams {{ flex: 0 1 auto; min-height: 90px; }}
+.list.events {{ flex: 1 4 120px; min-height: 70px; }}
 #silent {{ position: fixed; z-index: 10; inset: 0 0 auto 0; padding: 14px 20px; text-align: center;
   font: 600 18px var(--font); color: #fff; background: var(--alarm); }}
 body.silent main {{ opacity: 0.45; filter: grayscale(1); }}
@@ -107,7 +107,7 @@ PANELS = """
 .head .run { flex: 1; overflow: hidden; text-overflow: ellipsis; }
 .head .title { font-size: 17px; font-weight: 600; margin-right: 12px; }
 .facts { margin-top: auto; padding-top: 6px; color: var(--soft); }
-.fact { margin-right: 12px; display: inline-block; }
+.fact { white-space: nowrap; }
 .phase { font-size: 15px; font-weight: 600; color: var(--soft); }
 .phase.live { color: var(--good); }
 .phase.crashed { color: var(--alarm); }
@@ -116,7 +116,7 @@ PANELS = """
 .name { font-size: 14px; color: var(--soft); }
 .name::first-letter { text-transform: uppercase; }
 .name.second { margin-top: auto; }
-.value { white-space: nowrap; line-height: 1.15; }
+.value { white-space: nowrap; line-height: 46px; height: 46px; }
 .digits { font-size: 40px; font-weight: 600; letter-spacing: -0.02em; }
 .digits.small { font-size: 32px; }
 .spread { font-size: 24px; color: var(--soft); }
@@ -126,12 +126,11 @@ PANELS = """
 .also { color: var(--soft); font-size: 14px; min-height: 19px; }
 .notyet { font-size: 24px; font-weight: 600; color: var(--soft); margin: 6px 0; }
 .left { font-size: 17px; font-weight: 600; }
-.verdict { flex-direction: row; align-items: flex-start; gap: 12px; border-width: 2px; }
-.verdict .words { min-width: 0; flex: 1; align-self: stretch; display: flex;
-  flex-direction: column; }
-.verdict .word { font-size: 32px; font-weight: 700; letter-spacing: -0.02em; line-height: 1.2; }
+.verdict { border-width: 2px; }
+.verdict .top { display: flex; align-items: center; gap: 12px; }
+.verdict .word { font-size: 32px; font-weight: 700; letter-spacing: -0.02em; line-height: 44px; }
 .verdict .why { font-size: 14px; margin-top: 2px; }
-.verdict svg { width: 46px; height: 46px; flex: none; margin-top: -2px; fill: none;
+.verdict svg { width: 46px; height: 46px; flex: none; fill: none;
   stroke: currentColor; stroke-width: 4; stroke-linecap: round; stroke-linejoin: round; }
 .verdict.stable { background: var(--good-tint); border-color: var(--good); }
 .verdict.stable svg, .verdict.stable .word { color: var(--good); }
