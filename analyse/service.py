@@ -183,7 +183,6 @@ def main(arguments: Sequence[str] | None = None) -> int:
     parser.add_argument("run_folder")
     parser.add_argument("--parent", type=int, default=None, help="end when this process has ended")
     options = parser.parse_args(arguments)
-    faulthandler.enable()
     stop = Stop()
     stop.install()
     try:
@@ -198,4 +197,5 @@ def main(arguments: Sequence[str] | None = None) -> int:
 
 
 if __name__ == "__main__":
+    faulthandler.enable()
     sys.exit(main())
