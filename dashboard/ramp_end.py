@@ -16,7 +16,9 @@ class RampEnd:
 
     It has when the field moved away from where it stood at first, at least 90 % of the planned
     time ago, and for 5 s (2 % of the planned time if that is longer) every reading lay within
-    1 % of the planned span of the last planned field and of every other.
+    1 % of the planned span of the last planned field and of every other. Where it stood at the
+    last field at first, and the ramp was planned to begin elsewhere, the ramp may have been over
+    before we came: then 90 % of the planned time without a move will do.
 
     Parameters
     ----------
@@ -29,6 +31,7 @@ class RampEnd:
     def __init__(self, path_T: Sequence[float], duration_s: float) -> None:
         self._last_T = path_T[-1]
         self._close_T = CLOSE * (max(path_T) - min(path_T))
+        self._begins_elsewhere = abs(path_T[0] - path_T[-1]) > self._close_T
         self._least_s = LEAST_SHARE * duration_s
         self._stands_s = max(STANDS_S, STANDS_SHARE * duration_s)
         self._first_T: float | None = None
@@ -40,6 +43,8 @@ class RampEnd:
         """Take one field reading; times must not run backwards."""
         if self._first_T is None:
             self._first_T = field_T
+            if self._begins_elsewhere and abs(field_T - self._last_T) <= self._close_T:
+                self._moved_at_s = time_s
         if self._moved_at_s is None and abs(field_T - self._first_T) > self._close_T:
             self._moved_at_s = time_s
         self._recent.append((time_s, field_T))

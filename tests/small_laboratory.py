@@ -60,7 +60,12 @@ excitation = { current_A = 1e-6 }
 [laboratory]
 current_A = 1e-6
 sample = { sheet_density_per_m2 = 3e15, mobility_m2_per_V_s = 20.0, quantum_lifetime_s = 1e-13 }
-magnet = { port = 47101, path_T = [0.0, 1.0], rate_T_per_min = 10.0, wait_s = 1.0 }
+[laboratory.magnet]
+port = 47101
+path_T = [0.0, 1.0]
+rate_T_per_min = 10.0
+wait_s = 1.0
+waits_for_question = true
 """
 
 

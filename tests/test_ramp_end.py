@@ -50,7 +50,12 @@ def test_a_hold_on_the_way_is_not_the_end() -> None:
 
 
 def test_a_field_that_never_moves_is_not_over() -> None:
-    assert over_at(RampEnd((0.0, 1.0), 10.0), lambda time_s: 1.0, 60.0) is None
+    assert over_at(RampEnd((0.0, 1.0), 10.0), lambda time_s: 0.0, 60.0) is None
+    assert over_at(RampEnd((0.0, 1.0, 0.0), 10.0), lambda time_s: 0.0, 60.0) is None
+
+
+def test_a_ramp_that_was_over_before_the_first_reading() -> None:
+    assert over_at(RampEnd((0.0, 1.0), 20.0), lambda time_s: 1.0, 60.0) == 18.0
 
 
 def test_noise_below_a_percent_of_the_span_does_not_matter() -> None:
