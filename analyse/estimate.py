@@ -76,5 +76,6 @@ class Estimate:
     stable_at: Moment | None
     time_to_target_s: float | None
     field_to_target_T: float | None
+    field_to_target_range_T: tuple[float | None, float | None]
     cautions: tuple[Caution, ...]
     sweep: int

@@ -48,6 +48,8 @@ ESTIMATES = Table(
         Column("verdict", "string", "", "converging or stable"),
         Column("time_to_target_s", "number", "s", "time left to the target, as the ramp goes on"),
         Column("field_to_target_T", "number", "T", "magnitude of field at which it is expected"),
+        Column("field_to_target_low_T", "number", "T", "the earliest that it may be"),
+        Column("field_to_target_high_T", "number", "T", "the latest; empty if not in this ramp"),
         Column("cautions", "string", "", "codes of the open cautions, joined by blanks"),
         Column("waiting_for", "string", "", "what is between this and stable"),
     ),

@@ -10,7 +10,7 @@ from analyse.budget import combined, systematic_lines
 from analyse.cautions import DriftWatch, FieldWatch, FitFacts, RoleWatch, fit_cautions
 from analyse.drude import density_from_slope, mobility_from, scattering_time_from, transport
 from analyse.estimate import BudgetLine, Caution, Estimate, Measured, Moment
-from analyse.forecast import State, field_to_target
+from analyse.forecast import State, field_range, field_to_target
 from analyse.hall_bar import HallBar
 from analyse.lockin import LockinFilter
 from analyse.numbers import Number, make_number
@@ -195,7 +195,7 @@ class Estimator:
             self._stable_at = None
         elif self._stable_at is None and at_field is not None:
             self._stable_at = Moment(time_s, at_field)
-        ahead = self._forecast(fit, density, mobility, bool(missing))
+        ahead = self._forecast(fit, mobility, bool(missing))
         return Estimate(
             time_s, field_T, rho_xx, rho_xy, self._field_points,
             field_T is not None and bounds.low_T <= abs(field_T) <= bounds.high_T,
@@ -273,17 +273,20 @@ class Estimator:
         return (*found, *fit_cautions(facts, self.setup))
 
     def _forecast(
-        self, fit: TransportFit, density: Number | None, mobility: Number | None, missing: bool
-    ) -> tuple[float | None, float | None]:
+        self, fit: TransportFit, mobility: Number | None, missing: bool
+    ) -> tuple[float | None, float | None, tuple[float | None, float | None]]:
+        """Seconds and field to the target, and the range of that field."""
+        unknown = (None, None, (None, None))
         ramp, slope, rho_0 = self.setup.ramp, fit.slope, fit.rho_0
-        if not missing:
-            return 0.0, (abs(self._stable_at.field_T) if self._stable_at else None)
+        if not missing and self._stable_at is not None:
+            at = abs(self._stable_at.field_T)
+            return 0.0, at, (at, at)
         if mobility is None or slope is None or rho_0 is None or self._last_field is None:
-            return None, None
+            return unknown
         rate, field_T = abs(self._last_rate), abs(self._last_field)
         per_effective = self._fit.seconds_per_effective
-        if rate <= 0 or per_effective is None or field_T < 0.999 * self._farthest_T:
-            return None, None
+        if rate <= 0 or per_effective is None or field_T < 0.95 * self._farthest_T:
+            return unknown
         end_T = min(ramp.largest_T if ramp else math.inf, self._fit.bounds.high_T, 1e3)
         window = self._fit.window_T
         state = State(
@@ -291,8 +294,12 @@ class Estimator:
             slope.noise / abs(slope.value), rho_0.noise / rho_0.value,
             mobility.value, combined(self._systematic),
         )
-        at = field_to_target(state, self.setup.target, self._phis, self._scale_T, end_T)
-        return (None, None) if at is None else ((at - field_T) / rate, at)
+        given = (self.setup.target, self._phis, self._scale_T, end_T)
+        at_T = field_to_target(state, *given)
+        if at_T is None:
+            return unknown
+        ends = field_range(state, slope.effective - 2, *given)
+        return (at_T - field_T) / rate, at_T, ends
 
 
 def _mean(values: list[float]) -> float | None:

@@ -7,14 +7,14 @@ slope's effective sum of squares grows as N (B - B_low)^2 / 12 and N with time.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from scipy.constants import e
 
 from analyse.confidence import t_radius
 from analyse.lockin import LockinFilter
 from analyse.setup import Ramp, Setup, Signal, Target
-from analyse.transport_fit import SLOPE_SHARE, Phis, fixed_phis
+from analyse.transport_fit import FLOOR, SLOPE_FLOOR, SLOPE_SHARE, Phis, fixed_phis
 
 LINE_BEND_FACTOR = math.sqrt(5.25)
 """Standard error of the bend over that of the slope: [1, u, u^3] against [1, u], evenly spread
@@ -56,7 +56,8 @@ def meets(state: State, field_T: float, target: Target, phis: Phis, scale_T: flo
     )
     straight = 1.645 * LINE_BEND_FACTOR * error <= target.sheet_density
     crossed = not target.cross_crossing_field or field_T * state.mobility_m2_per_V_s >= 1.0
-    widths = (slope, slope + level, slope + level)
+    both = slope + level + math.hypot(FLOOR, SLOPE_FLOOR)
+    widths = (slope + SLOPE_FLOOR, both, both)
     wanted = (target.sheet_density, target.mobility, target.scattering_time or target.mobility)
     reached = all(
         math.hypot(w, 2 * s) <= t for w, s, t in zip(widths, state.systematic, wanted)
@@ -82,6 +83,22 @@ def field_to_target(
         else:
             low = middle
     return high
+
+
+def field_range(
+    state: State, nu: float, target: Target, phis: Phis, scale_T: float, end_T: float
+) -> tuple[float | None, float | None]:
+    """Earliest and latest magnitude of field at which the target may be met: the noise is itself
+    only known to about 1 / sqrt(2 nu), taken twofold, and the estimates move by their own errors,
+    for which a tenth is added. None where it is not before ``end_T``."""
+    share = min(0.5, 0.1 + 2.0 / math.sqrt(2.0 * max(nu, 2.0)))
+    ends = []
+    for factor in (1.0 - share, 1.0 + share):
+        noisy = replace(
+            state, slope_noise=state.slope_noise * factor, rho_0_noise=state.rho_0_noise * factor
+        )
+        ends.append(field_to_target(noisy, target, phis, scale_T, end_T))
+    return ends[0], ends[1]
 
 
 def expected_field(

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections import deque
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass
 
 from acquire.config.rig import Rig
@@ -129,13 +129,13 @@ def estimate_cells(bar: str, one: Estimate) -> Row:
         *(one.window_T or (None, None)),
         quick_density.density_per_m2 if quick_density else None,
         quick_mobility.mobility_m2_per_V_s if quick_mobility else None,
-        one.verdict, one.time_to_target_s, one.field_to_target_T,
+        one.verdict, one.time_to_target_s, one.field_to_target_T, *one.field_to_target_range_T,
         " ".join(dict.fromkeys(caution.code for caution in one.cautions)) or None,
         "; ".join(one.waiting_for) or None,
     )
 
 
-def merge_by_time(streams: dict[str, Iterable[Reading]]) -> Iterator[Reading]:
+def merge_by_time(streams: Mapping[str, Iterable[Reading]]) -> Iterator[Reading]:
     """All readers' rows in the order of their times; any order would give the same estimates."""
     import heapq
 

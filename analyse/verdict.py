@@ -44,7 +44,7 @@ def what_is_missing(facts: Facts, target: Target) -> tuple[str, ...]:
     for name, number, limit in wanted:
         width = number.relative_half_width
         if width > limit:
-            missing.append(f"{name} known to {100 * width:.2g} %, wanted {100 * limit:.2g} %")
+            missing.append(f"{name} known to {100 * width:.3g} %, wanted {100 * limit:.3g} %")
     if min(slope.effective, rho_0.effective) < MIN_EFFECTIVE:
         missing.append("too few independent readings")
     if slope.largest_bend() > target.sheet_density * abs(slope.value):

@@ -20,7 +20,7 @@ from analyse.shapes import (
     sweeps_apart,
 )
 from analyse.transport_fit import (
-    BEND_SEEN,
+    SLOPE_SHARE,
     Coefficient,
     Models,
     best_inner,
@@ -30,6 +30,7 @@ from analyse.transport_fit import (
     hall_slope,
     longitudinal_columns,
     noise_excess,
+    zero_field,
 )
 from analyse.window import Bounds, agrees, crossing, find_bounds
 
@@ -38,6 +39,8 @@ GROWN = 1.12
 """Growth of the number of segments after which the window is looked for anew."""
 NARROWINGS = 8
 NARROWER = 0.8
+BEND_HINT = 1.3
+"""Standard errors of a bend at which narrower windows are tried."""
 CLEARLY = 0.8
 """A narrower window must bring the uncertainty down to this share to be worth its change."""
 HALVINGS = 5
@@ -213,7 +216,7 @@ class WindowedFit:
         )
 
     def _halve(self, along: Pool) -> list[tuple[Pool, Bounds]]:
-        plain = longitudinal_columns(along)[:2] in (LEVEL, (*LEVEL, OTHER_PARITY))
+        plain = longitudinal_columns(along) in (LEVEL, (*LEVEL, OTHER_PARITY))
         if plain and self.excess[1] == 1.0:
             return []
         parts, high_T = [], along.high_T
@@ -234,33 +237,52 @@ class WindowedFit:
         self._wide = {role: self._pool(role, self._widest) for role in ROLES}
 
     def _narrow(self) -> None:
-        """Leave out the upper part of the window where that makes the Hall slope more certain:
-        what lies there is then structure (oscillations that set in), not information."""
+        """Leave out the upper part of the window where that makes the answer more certain: what
+        lies there is then structure (oscillations that set in), not information."""
         self.bounds, self._pools, self._narrowed = self._widest, dict(self._wide), False
-        hall = self._pools["hall"]
         self.excess = self._excesses()
-        best = self._uncertainty(hall, self.excess[0] > 1)
-        if self._setup.window.high_T is not None or not self._structured(hall):
+        hall, along = (self._pools[role] for role in ROLES)
+        if self._setup.window.high_T is not None or not self._structured(hall, along):
             return
-        high_T = hall.high_T
+        best, high_T = self._uncertainty(hall, along), hall.high_T
         for _ in range(NARROWINGS):
             high_T *= NARROWER
             bounds = Bounds(self._widest.low_T, high_T)
-            pool = self._pool("hall", bounds)
-            if pool.effective < MIN_INNER or pool.groups < 4:
+            hall, along = (self._pool(role, bounds) for role in ROLES)
+            if min(hall.effective, along.effective) < MIN_INNER or hall.groups < 4:
                 break
-            total = self._uncertainty(pool, noise_excess(pool, hall_columns(pool)) > 1)
+            total = self._uncertainty(hall, along)
             if total < CLEARLY * best:
-                best, self.bounds = total, bounds
-        if self.bounds is not self._widest:
-            self._narrowed = True
+                best, self.bounds, self._narrowed = total, bounds, True
+        if self._narrowed:
             self._pools = {role: self._pool(role, self.bounds) for role in ROLES}
             self.excess = self._excesses()
 
-    def _structured(self, hall: Pool) -> bool:
-        slope = hall_slope(hall, hall_columns(hall), self.excess[0] > 1, self._phis, self._alpha)
-        bent = slope is not None and abs(slope.bend) > BEND_SEEN * slope.bend_error
-        return max(self.excess) > 1 or bent
+    def _structured(self, hall: Pool, along: Pool) -> bool:
+        models = choose_models(hall, along)
+        if max(self.excess) > 1 or models.longitudinal not in (LEVEL, (*LEVEL, OTHER_PARITY)):
+            return True
+        parts = self._coefficients(hall, along, models)
+        return any(part is not None and abs(part.bend) > BEND_HINT * part.bend_error for part in parts)
+
+    def _coefficients(
+        self, hall: Pool, along: Pool, models: Models
+    ) -> tuple[Coefficient | None, Coefficient | None]:
+        excess = noise_excess(hall, models.hall) > 1, noise_excess(along, models.longitudinal) > 1
+        alpha = (1 - SLOPE_SHARE) * self._alpha
+        return (
+            hall_slope(hall, models.hall, excess[0], self._phis, self._alpha),
+            zero_field(along, models.longitudinal, excess[1], self._phis.rho_0, alpha),
+        )
+
+    def _uncertainty(self, hall: Pool, along: Pool) -> float:
+        """Relative uncertainty of the mobility, from two pools."""
+        parts = self._coefficients(hall, along, choose_models(hall, along))
+        if any(part is None or not part.value for part in parts):
+            return math.inf
+        return sum(
+            (part.half_width + part.spread) / abs(part.value) for part in parts if part is not None
+        )
 
     def _excesses(self) -> tuple[float, float]:
         hall, along = (self._pools[role] for role in ROLES)
@@ -268,10 +290,6 @@ class WindowedFit:
             noise_excess(hall, hall_columns(hall)),
             noise_excess(along, longitudinal_columns(along)),
         )
-
-    def _uncertainty(self, pool: Pool, excess: bool) -> float:
-        slope = hall_slope(pool, hall_columns(pool), excess, self._phis, self._alpha)
-        return math.inf if slope is None else slope.half_width + slope.spread
 
     def _pool(self, role: str, bounds: Bounds) -> Pool:
         pool = Pool()
