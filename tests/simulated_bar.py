@@ -63,7 +63,7 @@ class Sample:
     def field(self, time_s: np.ndarray) -> np.ndarray:
         """Field in T."""
         times, fields = zip(*self.corners)
-        return np.interp(time_s, times, fields)
+        return np.asarray(np.interp(time_s, times, fields))
 
     def streams(self, seed: int = 1) -> Streams:
         """Field, longitudinal and Hall readings, each a list of (channel, time, x, y, status)."""

@@ -14,7 +14,7 @@ import pytest
 from analyse import Excitation, HallBar, LockinFilter, Signal, SquareRootInformation
 from analyse.basis import COLUMNS, HALL_LINE
 from analyse.line_fit import LineFit, fit_columns
-from analyse.pairing import Pairing
+from analyse.pairing import Pair, Pairing
 from analyse.segments import Pool, Segments
 from analyse.setup import Setup
 
@@ -47,7 +47,7 @@ def impedances(detection: str, phase_deg: float = 0.0) -> tuple[list[float], lis
     signal = Signal(detection=detection, phase_deg=phase_deg)  # type: ignore[arg-type]
     setup = Setup(signal, signal, Excitation(measured=Signal()))
     pairing = Pairing(HallBar(1.0, "GaAs"), setup)
-    found = []
+    found: list[Pair] = []
     for k, (volt, milliampere, phase) in enumerate(zip(VOLT, MILLIAMPERE, PHASE)):
         angle = phase + math.radians(phase_deg)
         found += pairing.push("field", float(k), 0.0, None, "ok")

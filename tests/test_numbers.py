@@ -27,7 +27,7 @@ def test_without_further_parts_the_interval_is_the_statistical_one() -> None:
     assert one.interval == pytest.approx((2.9, 3.2), rel=1e-15)
     assert one.standard_uncertainty == pytest.approx(0.03, rel=1e-15)
     assert one.relative_half_width == pytest.approx(0.2 / 3, rel=1e-15)
-    assert (one.statistical, one.model, one.systematic) == (pytest.approx(0.03), 0.0, 0.0)
+    assert (one.statistical, one.model, one.systematic) == pytest.approx((0.03, 0.0, 0.0))
 
 
 def test_parts_are_absolute_and_add_in_quadrature() -> None:

@@ -63,7 +63,7 @@ def test_rows_fit_their_tables(reference: list[Record]) -> None:
 
 def test_both_bars_are_merged_by_time(reference: list[Record]) -> None:
     found = cells(reference, "estimates")
-    times = [row[COLUMN["time_s"]] for row in found]
+    times = [float(row[COLUMN["time_s"]] or 0.0) for row in found]
     assert times == sorted(times)
     for name in ("left", "right"):
         own = [row for row in found if row[COLUMN["hall_bar"]] == name]

@@ -295,7 +295,8 @@ class InThread:
     """The loop in a thread of its own. ``status``: what it returned."""
 
     def __init__(self, bench: LiveBench) -> None:
-        self.stop, self.status = Stop(), None
+        self.stop = Stop()
+        self.status: int | None = None
         self._bench = bench
         self._thread = threading.Thread(target=self._run)
 
