@@ -43,6 +43,19 @@ def _children() -> set[int]:
     return {child.pid for child in psutil.Process().children(recursive=True)}
 
 
+def _started_since(before: set[int]) -> set[int]:
+    """Children that were not there before, and were not started by one that was: a browser that
+    tests share starts processes as it needs them."""
+    return {pid for pid in _children() - before if not before & _ancestors(pid)}
+
+
+def _ancestors(pid: int) -> set[int]:
+    try:
+        return {parent.pid for parent in psutil.Process(pid).parents()}
+    except psutil.NoSuchProcess:
+        return set()
+
+
 def _sockets() -> set[str]:
     """The sockets of this process, by their number in the kernel; none where it does not tell."""
     found: set[str] = set()
@@ -70,9 +83,9 @@ def nothing_left_over() -> Iterator[None]:
     yield
 
     def gone() -> bool:
-        return _children() <= children and _sockets() <= sockets
+        return not _started_since(children) and _sockets() <= sockets
 
     if gone() or (gc.collect() >= 0 and _until(gone, LEFT_OVER_S)):
         return
-    left = [psutil.Process(pid).cmdline() for pid in _children() - children]
+    left = [psutil.Process(pid).cmdline() for pid in _started_since(children)]
     pytest.fail(f"left over: processes {left}, sockets {sorted(_sockets() - sockets)}")

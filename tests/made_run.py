@@ -28,6 +28,7 @@ from acquire.journal import Journal
 from acquire.run_folder import RunFolder, create_run
 from acquire.tables import Cell, Row, Table
 from analyse.estimate_table import ESTIMATES, EVENTS
+from dashboard.quantities import QUANTITIES
 from dashboard.streams import run_tables
 
 READY_S = 30.0
@@ -84,7 +85,7 @@ def estimates(
     """Rows of the table of estimates without their seq, for a ramp through these fields in T."""
     chance = random.Random(seed)
     slope, rho_0 = 1 / (density * 1.602176634e-19), 1 / (density * 1.602176634e-19 * mobility)
-    end_T, reached, marked = 0.45 * max(map(abs, fields)) + 1.0, 0.0, [None, None]
+    end_T, reached = 0.45 * max(map(abs, fields)) + 1.0, 0.0
     for index, field in enumerate(fields):
         size = abs(field)
         reached = max(reached, size)
@@ -95,33 +96,52 @@ def estimates(
         share = 3.0 / (1 + index) ** 0.5 / max(reached * 20, 1e-3) + 0.002
         known = index >= 5 and share < 0.9
         tremble = chance.gauss(0, 0.03 * share)
-        numbers: list[Cell] = []
-        for value, width in (
-            (density, share),
-            (mobility, 1.3 * share),
-            (mobility * 3.81e-13, 1.3 * share),
-        ):
-            shown = value * (1 + tremble)
-            parts = (shown, shown * width / 3, shown * (1 - width), shown * (1 + width))
-            numbers += parts if known else (None,) * 4
+        cells: dict[str, Cell] = {
+            "time_s": seconds_per_point * index,
+            "hall_bar": bar,
+            "field_T": field,
+            "rho_xx_ohm": along,
+            "rho_xy_ohm": across,
+            "field_points": index + 1,
+            "used": int(size < end_T),
+            "verdict": "converging",
+            "waiting_for": "sheet density known to 3 %, wanted 1 %",
+            "cautions": "oscillations" if reached > end_T else None,
+        }
         if slope * reached > 6250:
-            marked[0] = 6250 / slope * 1e15
+            cells["quick_density_per_m2"] = 6250 / slope * 1e15
         if reached * mobility > 1.1:
-            marked[1] = mobility * 1.01
-        stable = known and 1.3 * share < 0.01
-        left = None if stable or not known else 60 * (1.3 * share / 0.01 - 1)
-        yield (
-            seconds_per_point * index, bar, field, along, across, index + 1, int(size < end_T),
-            *numbers,
-            *((rho_0, 0.01 * rho_0, slope, 0.01 * slope, 6.0) if known else (None,) * 5),
-            "electrons" if known else None,
-            *((0.0, min(reached, end_T)) if known else (None, None)),
-            *marked,
-            "stable" if stable else "converging",
-            left, None if left is None else min(reached + left / 100, 12.0),
-            "oscillations" if reached > end_T else None,
-            None if stable else "sheet density known to 3 %, wanted 1 %",
-        )  # fmt: skip
+            cells["quick_mobility_m2_per_V_s"] = mobility * 1.01
+        if known:
+            truths = (density, mobility, mobility * 3.81e-13)
+            for column, truth, width in zip(QUANTITIES, truths, (share, 1.3 * share, 1.3 * share)):
+                shown = truth * (1 + tremble)
+                cells |= {
+                    column: shown,
+                    f"{column}_u": shown * width / 3,
+                    f"{column}_low": shown * (1 - width),
+                    f"{column}_high": shown * (1 + width),
+                }
+            cells |= {
+                "rho_0_ohm": rho_0,
+                "hall_slope_ohm_per_T": slope,
+                "hall_offset_ohm": 6.0,
+                "carriers": "electrons",
+                "window_low_T": 0.0,
+                "window_high_T": min(reached, end_T),
+            }
+        if known and 1.3 * share < 0.01:
+            cells |= {"verdict": "stable", "waiting_for": None}
+        elif known:
+            left = 60 * (1.3 * share / 0.01 - 1)
+            where = min(reached + left / 100, 12.0)
+            cells |= {
+                "time_to_target_s": left,
+                "field_to_target_T": where,
+                "field_to_target_low_T": 0.9 * where,
+                "field_to_target_high_T": 1.2 * where,
+            }
+        yield tuple(cells.get(name) for name in ESTIMATES.names[1:])
 
 
 def ramp(top_T: float, points: int, bottom_T: float = 0.0) -> list[float]:

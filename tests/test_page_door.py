@@ -14,6 +14,7 @@ import psutil
 import pytest
 from made_run import MadeRun, PageProcess, estimates, ramp
 
+from dashboard.page.__main__ import main
 from dashboard.page.door import Door
 
 
@@ -152,15 +153,17 @@ def test_the_door_decides_without_a_server() -> None:
 
 
 def test_what_can_not_be_served_is_told_in_one_sentence_with_a_next_step(
-    run: Path, port: int, tmp_path: Path
+    run: Path, port: int, tmp_path: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:
-    taken, nothing = PageProcess(run, port), PageProcess(tmp_path)
-    for process, told in ((taken, f"Port {port} is taken"), (nothing, "is not a run")):
-        assert process.wait() == 1
-        assert process.unread() == []
-        said = "".join(process.errors)
-        assert said.startswith("page: ") and told in said and said.count("\n") == 1
-    assert "--port N" in "".join(taken.errors)
+    assert main([str(run), "--port", str(port)]) == 1
+    told = capsys.readouterr()
+    assert told.out == ""
+    assert told.err.startswith(f"page: Port {port} is taken") and "--port N" in told.err
+    assert told.err.count("\n") == 1
+    assert main([str(tmp_path)]) == 1
+    told = capsys.readouterr()
+    assert told.err.startswith("page: ") and "is not a run" in told.err
+    assert told.err.count("\n") == 1
 
 
 def test_the_page_ends_when_its_parent_is_another_one(run: Path) -> None:

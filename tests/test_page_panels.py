@@ -80,6 +80,7 @@ def test_the_verdict_says_what_is_missing_or_since_when(store: RunStore) -> None
     store.begin("live", lambda: 24.0)
     said = words(field_panel(store.bar("bar3"), store.run(), RIG))
     assert re.search(r"to the target about .* s, near \d\.\d\d T", said)
+    assert re.search(r"between \d\.\d\d and \d\.\d\d T", said)
     store.begin("ended", None)
     assert "target not met" in words(field_panel(store.bar("bar3"), store.run(), RIG))
 
@@ -110,7 +111,7 @@ def test_streams_are_told_with_shape_word_age_and_count(store: RunStore) -> None
     store.begin("live", lambda: 120.3)
     panel = stream_panel(store.run())
     assert HARM not in panel
-    assert "magnet ● running 0.4 s 1 200" in words(panel)
+    assert "magnet &lt;script&gt;alert(1)&lt;/script&gt; ● running 0.4 s 1 200" in words(panel)
     assert "lockin_xx ▲ nothing yet 0" in words(panel)
 
 

@@ -37,16 +37,16 @@ def main(arguments: Sequence[str] | None = None) -> int:
     parser.add_argument("--most-pages", type=int, default=MOST_PAGES, help="open at once")
     parser.add_argument("--parent", type=int, default=None, help="end when this process has ended")
     options = parser.parse_args(arguments)
-    faulthandler.enable()
-    logging.basicConfig(level=logging.ERROR, format="%(name)s: %(message)s")
-    stop = Stop()
-    stop.install()
     try:
         run = open_run(options.run_folder)
         sockets, port = _listen(options.port)
     except RampsideError as error:
         print(f"page: {error}", file=sys.stderr, flush=True)
         return 1
+    faulthandler.enable()
+    logging.basicConfig(level=logging.ERROR, format="%(name)s: %(message)s")
+    stop = Stop()
+    stop.install()
     door = Door(port, options.most_pages)
     asyncio.run(_show(run, sockets, door, stop, options.parent))
     return 0

@@ -8,8 +8,8 @@ from dataclasses import dataclass
 from acquire.config import Rig
 from acquire.readings import Reading
 
-MEMORY_S = 15.0
-LEAST_S = 3.0  # over less than that a rate is mostly noise
+MEMORY_S = 6.0
+LEAST_S = 2.0  # over less than that a rate is mostly noise
 
 
 @dataclass(frozen=True)

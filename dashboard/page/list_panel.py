@@ -98,22 +98,20 @@ def _phase(run: RunFacts) -> str:
 
 
 def _stream_rows(line: StreamLine) -> Html:
-    """A row of facts, and one below it for what the instrument said, if it said anything."""
-    shape = span("shape", _SHAPES[line.level])
+    """A row of facts, and one below it for what went wrong, if anything did."""
+    identity = element("span", line.identity, class_="identity", title=line.identity)
     facts = element(
         "tr",
-        element("td", div("stream", line.name)),
-        element("td", shape, f" {line.state}"),
+        element("td", span("stream", line.name), identity),
+        element("td", span("shape", _SHAPES[line.level]), f" {line.state}"),
         element("td", "" if line.age_s is None else age(line.age_s), class_="figure"),
         element("td", grouped(line.rows), class_="figure"),
         class_=line.level,
     )
-    said = [div("", text) for text in (line.identity, line.note) if text]
-    if not said:
+    if not line.note:
         return facts
-    return join(
-        facts, element("tr", element("td", *said, colspan="4"), class_=f"aside {line.level}")
-    )
+    note = element("td", line.note, colspan="4")
+    return join(facts, element("tr", note, class_=f"aside {line.level}"))
 
 
 def _event(event: Event, several_bars: bool) -> Html:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from acquire.config import Rig
 from dashboard.page.html import Html, div, element, join, span
+from dashboard.page.list_panel import clock
 from dashboard.page.store import BarFacts, RunFacts
 from dashboard.quantities import (
     NOT_KNOWN,
@@ -91,6 +92,7 @@ def field_panel(bar: BarFacts, run: RunFacts, rig: Rig) -> Html:
         *field,
         div("name second", "to the target"),
         div("left", _left(bar, run)),
+        div("soft", _left_range(bar, run)),
     )
 
 
@@ -138,7 +140,7 @@ def _verdict(bar: BarFacts) -> tuple[str, str]:
 def _why(state: str, bar: BarFacts, run: RunFacts) -> str:
     if state == "stable" and bar.stable_at is not None:
         time_s, field_T = bar.stable_at
-        return f"good enough since {signed(field_T, 3)} T, {duration(time_s)} after the start"
+        return f"good enough since {signed(field_T, 3)} T (at {clock(time_s)})"
     if not bar.curves.newest:
         return "waiting for the first field point" if run.now_s is not None else "no field points"
     waiting = bar.curves.text("waiting_for")
@@ -180,6 +182,14 @@ def _left(bar: BarFacts, run: RunFacts) -> str:
         return NOT_KNOWN if field_T is None else f"near {field_T:.2f} T"
     where = "" if field_T is None else f", near {field_T:.2f} T"
     return f"about {duration(seconds)}{where}"
+
+
+def _left_range(bar: BarFacts, run: RunFacts) -> str:
+    """Between which fields the target is expected; empty while that is not known, or past."""
+    low, high = (bar.curves.number(f"field_to_target_{end}_T") for end in ("low", "high"))
+    if low is None or bar.curves.text("verdict") == "stable" or run.now_s is None:
+        return ""
+    return f"between {low:.2f} and {high:.2f} T" if high is not None else f"not before {low:.2f} T"
 
 
 def _interval(quantity: Quantity, value: float, low: float, high: float, confidence: float) -> Html:

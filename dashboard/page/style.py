@@ -75,7 +75,7 @@ h2:first-child {{ margin-top: 0; }}
 .list {{ overflow-y: auto; flex: none; }}
 .list.cautions {{ flex: 0 2 auto; min-height: 40px; }}
 .list.streams {{ flex: 0 1 auto; min-height: 90px; }}
-.list.events {{ flex: 1 4 120px; min-height: 70px; }}
+.list.events {{ flex: 1 4 80px; min-height: 70px; }}
 #silent {{ position: fixed; z-index: 10; inset: 0 0 auto 0; padding: 14px 20px; text-align: center;
   font: 600 18px var(--font); color: #fff; background: var(--alarm); }}
 body.silent main {{ opacity: 0.45; filter: grayscale(1); }}
@@ -161,10 +161,13 @@ PANELS = """
 .caution .text, .event .said, tr.aside td { overflow-wrap: anywhere; }
 table { width: 100%; border-collapse: collapse; }
 th { text-align: left; font-weight: 400; color: var(--soft); padding: 0 4px 2px 0; }
-th:nth-child(n+3), .figure { text-align: right; white-space: nowrap; }
+th:nth-child(n+3), .figure { text-align: right; white-space: nowrap; padding-left: 6px; }
 td { vertical-align: top; padding: 3px 4px 2px 0; white-space: nowrap; }
 tr:not(.aside) td { border-top: 1px solid var(--grid); }
-td .stream { font-weight: 600; }
+td:first-child { max-width: 0; width: 52%; overflow: hidden; text-overflow: ellipsis; }
+td .stream { font-weight: 600; margin-right: 8px; }
+td .identity { color: var(--soft); font-size: 12px; font-weight: 400; }
+tr.aside td { max-width: none; }
 tr.aside td { font-size: 12px; padding-top: 0; white-space: normal; }
 tr.aside td, td.aside { color: var(--soft); }
 tr.good .shape { color: var(--good); }
