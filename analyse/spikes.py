@@ -21,8 +21,10 @@ class SpikeGate(Generic[Item]):
     """Passes items on in order, saying of each whether it is wild.
 
     The usual step is the trimmed mean of the last ``memory`` absolute steps between good
-    readings, and not less than the smallest of them that is a step at all (the last digit); before ``memory / 4`` of them are known nothing is called wild. A good reading is
-    passed on at once, one that jumps only when it is known what it was.
+    readings, and not less than the last digit; before ``memory / 4`` of them are known nothing is
+    called wild. The last digit is what readings that are mostly equal now and then differ by: the
+    second smallest departure ever seen, if the smallest is of its kind. A good reading is passed
+    on at once, one that jumps only when it is known what it was.
     """
 
     def __init__(
@@ -35,12 +37,16 @@ class SpikeGate(Generic[Item]):
         self._needed = memory // 4
         self._good: float | None = None
         self._held: list[tuple[float | None, Item]] = []
+        self._departures: list[float] = []
 
     def push(self, value: float, item: Item) -> list[tuple[Item, bool]]:
         """Take a reading; returns what can be judged now, in order."""
         if self._good is None:
             return [self._accept(value, item)]
-        away, usual = abs(value - self._good), self._usual_step()
+        away = abs(value - self._good)
+        if away and not self._held:
+            self._departures = sorted([*self._departures, away])[:2]
+        usual = self._usual_step()
         if not self._held:
             if away <= self.factor * usual:
                 return [self._accept(value, item)]
@@ -83,5 +89,11 @@ class SpikeGate(Generic[Item]):
             return float("inf")
         ordered = sorted(self._steps)
         kept = ordered[: max(1, (len(ordered) * 9) // 10)]
-        digit = next((step for step in ordered if step > 0), 1e-300)
-        return max(sum(kept) / len(kept), digit)
+        return max(sum(kept) / len(kept), self._last_digit())
+
+    def _last_digit(self) -> float:
+        if len(self._departures) == 2:
+            smallest, second = self._departures
+            if second <= self.factor * smallest:
+                return second
+        return 1e-300

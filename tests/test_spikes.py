@@ -76,6 +76,21 @@ def test_a_glitch_amid_readings_that_are_all_equal() -> None:
     assert judged(raised([1.5] * 100, [50], 1.0)) == [50]
 
 
+@pytest.mark.parametrize("share", [0.01, 0.08, 0.3])
+def test_the_last_digit_is_not_wild(share: float) -> None:
+    """Readings that are mostly equal: the first that differs may be a glitch, the others are not,
+    and a real glitch still is."""
+    rng = np.random.default_rng(7)
+    values = [1.0 + 0.1 * bool(one) for one in rng.random(3000) < share]
+    found = judged(list(values), longest=3)
+    assert len(found) <= 3
+    assert judged(raised(list(values), [2000], 30.0), longest=3) == [*found, 2000]
+
+
+def test_a_glitch_after_a_single_last_digit_is_wild() -> None:
+    assert judged(raised(raised([1.5] * 200, [50], 0.1), [100], 8.0)) == [50, 100]
+
+
 def test_white_noise_is_hardly_ever_wild() -> None:
     assert judged(noise(20_000, seed=2)) == []
 
