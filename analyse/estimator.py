@@ -184,7 +184,7 @@ class Estimator:
         bounds, zero = self._fit.bounds, self._fit.zero_in_reach
         numbers = self._numbers(fit) if zero else (None, None, None)
         density, mobility, tau = numbers
-        carriers = _carriers(fit)
+        carriers = "unknown" if self.setup.hall.detection == "R" else _carriers(fit)
         cautions = self._cautions(fit, carriers, density, mobility)
         window = self._fit.window_T
         missing = what_is_missing(

@@ -172,6 +172,14 @@ def test_magnitudes_gain_and_sign() -> None:
     assert_holds(found, PLAIN)
 
 
+def test_a_magnitude_does_not_tell_the_carriers() -> None:
+    signal = Signal(LockinFilter(0.3, 4), "R")
+    last = run(estimator(hall=signal), by_time(PLAIN.streams()))[-1]
+    assert last.carriers == "unknown"
+    assert last.sheet_density is not None
+    assert last.sheet_density.low <= 3e15 <= last.sheet_density.high
+
+
 def test_resistances_need_no_current() -> None:
     streams = changed(PLAIN.streams(), "longitudinal", by=1e6)
     streams = changed(streams, "hall", by=1e6)
