@@ -225,10 +225,23 @@ class Pairing:
             return value / excitation.shunt_ohm if excitation.shunt_ohm is not None else value
         other = "hall" if role == "longitudinal" else "longitudinal"
         beside = self._voltages[other].interpolated(sample.time_s)
-        if beside is None:
-            return None
-        v_xx, v_xy = (sample.value, beside) if role == "longitudinal" else (beside, sample.value)
+        return None if beside is None else self._current_behind_resistor(
+            {role: sample.value, other: beside}
+        )
+
+    def _current_behind_resistor(self, values: dict[str, float]) -> float:
+        """Current out of a source behind a series resistor, from what both signals read."""
+        excitation = self._setup.excitation
+        assert excitation is not None
         assert excitation.source_V is not None and excitation.series_ohm is not None
         squares = excitation.source_to_drain_squares or self._bar.squares
-        drop = v_xx * squares / self._bar.squares + abs(v_xy)
-        return (excitation.source_V - drop) / (excitation.series_ohm + excitation.contact_ohm)
+        resistance, drop = excitation.series_ohm + excitation.contact_ohm, 0.0
+        for role, part in (
+            ("longitudinal", values["longitudinal"] * squares / self._bar.squares),
+            ("hall", abs(values["hall"])),
+        ):
+            if self._voltages[role].signal.resistance:
+                resistance += part
+            else:
+                drop += part
+        return (excitation.source_V - drop) / resistance if resistance else 0.0

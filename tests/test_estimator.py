@@ -527,11 +527,11 @@ def test_one_voltage_alone_gives_no_estimate(missing: str) -> None:
     assert run(estimator(), by_time(streams)) == []
 
 
-def test_without_a_field_points_are_counted_and_nothing_is_known() -> None:
+def test_without_a_field_nothing_is_known() -> None:
     streams = PLAIN.streams()
     streams["field"] = []
     found = run(estimator(), by_time(streams))
-    assert [one.field_points for one in found] == list(range(1, 301))
+    assert len(found) == 300
     assert {(one.field_T, one.sheet_density, one.used) for one in found} == {(None, None, False)}
 
 

@@ -198,6 +198,21 @@ def test_a_current_behind_a_series_resistor() -> None:
         assert pair.rho_ohm == pytest.approx(value / current, rel=1e-12)
 
 
+def test_a_series_resistor_where_one_signal_is_read_in_ohm() -> None:
+    excitation = Excitation(source_V=1.0, series_ohm=1e4, source_to_drain_squares=6.0)
+    pairing = Pairing(BAR, Setup(OHM, Signal(), excitation))
+    current = 1.0 / (1e4 + 400.0 * 6 / 4 + 900.0)
+    rows = [row("field", float(k), 0.1) for k in range(30)]
+    rows += [row("longitudinal", float(k), 400.0) for k in range(30)]
+    rows += [row("hall", k + 0.5, 900.0 * current) for k in range(29)]
+    for pair in pairs_of(pairing, rows):
+        if pair.role == "hall":
+            assert pair.current_A == pytest.approx(current, rel=1e-12)
+            assert pair.rho_ohm == pytest.approx(900.0, rel=1e-12)
+        else:
+            assert pair.rho_ohm == 100.0
+
+
 @pytest.mark.parametrize(("shunt_ohm", "reading"), [(None, 2e-6), (1e4, 2e-2)])
 def test_a_measured_current_is_interpolated(shunt_ohm: float | None, reading: float) -> None:
     excitation = Excitation(measured=Signal(), shunt_ohm=shunt_ohm)
