@@ -225,12 +225,13 @@ class Pairing:
             return value / excitation.shunt_ohm if excitation.shunt_ohm is not None else value
         other = "hall" if role == "longitudinal" else "longitudinal"
         beside = self._voltages[other].interpolated(sample.time_s)
-        return None if beside is None else self._current_behind_resistor(
-            {role: sample.value, other: beside}
-        )
+        if beside is None:
+            return None
+        return self._current_behind_resistor({role: sample.value, other: beside})
 
-    def _current_behind_resistor(self, values: dict[str, float]) -> float:
-        """Current out of a source behind a series resistor, from what both signals read."""
+    def _current_behind_resistor(self, values: dict[str, float]) -> float | None:
+        """Current out of a source behind a series resistor, from what both signals read; None if
+        they would take more than the source has."""
         excitation = self._setup.excitation
         assert excitation is not None
         assert excitation.source_V is not None and excitation.series_ohm is not None
@@ -244,4 +245,6 @@ class Pairing:
                 resistance += part
             else:
                 drop += part
-        return (excitation.source_V - drop) / resistance if resistance else 0.0
+        if drop >= excitation.source_V or resistance <= 0.0:
+            return None
+        return (excitation.source_V - drop) / resistance

@@ -233,11 +233,12 @@ def test_without_a_current_there_is_no_resistivity(current: float | None) -> Non
     assert kinds(pairs_of(pairing, rows)) == [("hall", 4.5, "lost")]
 
 
-def test_a_source_that_the_sample_takes_all_of_gives_no_resistivity() -> None:
+@pytest.mark.parametrize("volt", [1.0, 1.5, 1e30])
+def test_a_source_that_the_sample_takes_all_of_gives_no_resistivity(volt: float) -> None:
     excitation = Excitation(source_V=1.0, series_ohm=1e6)
     pairing = Pairing(BAR, Setup(Signal(), Signal(), excitation))
     rows = [row("field", float(k), 0.1) for k in range(9)]
-    rows += [row("longitudinal", k + 0.5, 1.0) for k in range(8)]
+    rows += [row("longitudinal", k + 0.5, volt) for k in range(8)]
     rows += [row("hall", k + 0.5, 0.0) for k in range(8)]
     assert {pair.kind for pair in pairs_of(pairing, rows)} == {"lost"}
 
