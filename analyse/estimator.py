@@ -165,8 +165,8 @@ class Estimator:
         field_T, rho_xx, rho_xy = map(
             _mean, (point.fields, point.rho["longitudinal"], point.rho["hall"])
         )
-        self._field_points += 1
         if field_T is not None:
+            self._field_points += 1
             self._last_field = field_T
             if rho_xx is not None and rho_xy is not None:
                 self._quick.add(field_T, rho_xx, rho_xy)

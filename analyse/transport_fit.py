@@ -7,7 +7,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from functools import lru_cache
 
-from scipy.stats import f as f_distribution
+from scipy.special import fdtri
 
 from analyse.basis import CUBIC, CURVED, HALL_BENT, HALL_LINE, LEVEL, OTHER_PARITY, SLOPING, SQUARE
 from analyse.confidence import best_phi
@@ -152,7 +152,7 @@ def noise_excess(pool: Pool, columns: tuple[int, ...]) -> float:
 
 @lru_cache(maxsize=65536)
 def _f_limit(between: int, within: int) -> float:
-    return float(f_distribution.isf(LACK_OF_FIT_LEVEL, between, within))
+    return float(fdtri(between, within, 1.0 - LACK_OF_FIT_LEVEL))
 
 
 def choose_models(hall: Pool, along: Pool) -> Models:

@@ -14,8 +14,7 @@ import math
 from dataclasses import dataclass
 from functools import lru_cache
 
-from scipy.stats import f as f_distribution
-from scipy.stats import t as t_distribution
+from scipy.special import fdtri, stdtrit
 
 from analyse.basis import CURVED, HALL_LINE, LEVEL, regressors
 from analyse.line_fit import LineFit, fit_columns
@@ -75,12 +74,12 @@ def is_rough(segment: Segment, fit: LineFit, limit: float) -> bool:
 
 @lru_cache(maxsize=4096)
 def _t_limit(nu: int) -> float:
-    return float(t_distribution.isf(ODD_LEVEL / 2, nu))
+    return float(stdtrit(nu, 1.0 - ODD_LEVEL / 2))
 
 
 @lru_cache(maxsize=4096)
 def _f_limit(one: int, two: int) -> float:
-    return float(f_distribution.isf(ODD_LEVEL, one, two))
+    return float(fdtri(one, two, 1.0 - ODD_LEVEL))
 
 
 def _size(fit: LineFit, role: str, u: float) -> float:
