@@ -19,6 +19,8 @@ from analyse.lockin import LockinFilter
 from analyse.setup import Setup
 from analyse.spikes import SpikeGate
 
+WILD_FIELDS = 5
+"""Field readings in a row that may be wild."""
 CHANNELS = ("field", "longitudinal", "hall", "current")
 LARGEST_T = 1e4
 """No field that was ever made is larger; a larger reading is none."""
@@ -66,7 +68,7 @@ class Pairing:
         measured = excitation.measured if excitation is not None else None
         self._current = Channel(measured) if measured is not None else None
         self._field_passed_s = -math.inf
-        self._gate: SpikeGate[tuple[float, float | None]] = SpikeGate()
+        self._gate: SpikeGate[tuple[float, float | None]] = SpikeGate(WILD_FIELDS)
         self.wild_field_readings = 0
 
     def push(

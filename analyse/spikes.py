@@ -3,16 +3,20 @@
 A reading that jumps by more than ``factor`` usual steps from the last good one is held back, with
 those that follow it, until one comes back to within ``back`` usual steps of the last good one: then
 all that were held are wild (a glitch, a change of range and the filter's answer to it). If none
-comes back within ``longest`` readings it was a real step, and all of them are good.
+comes back within ``longest`` readings it was a real step, and they are judged by their own steps.
 """
 
 from __future__ import annotations
 
+import itertools
+import statistics
 from collections import deque
 from typing import Generic, TypeVar
 
 Item = TypeVar("Item")
 
+ROUNDING = 1e-9
+"""Departures below this share of a value are none."""
 SILENT = 5
 """Rows without a value, more than ``longest``, after which a reading that jumped is called wild."""
 
@@ -21,9 +25,9 @@ class SpikeGate(Generic[Item]):
     """Passes items on in order, saying of each whether it is wild.
 
     The usual step is the trimmed mean of the last ``memory`` absolute steps between good
-    readings, and not less than the last digit; before ``memory / 4`` of them are known nothing is
-    called wild. The last digit is what readings that are mostly equal now and then differ by: the
-    second smallest departure ever seen, if the smallest is of its kind. A good reading is passed
+    readings, and not less than the last digit. The first ``memory / 4 + 1`` readings are held back
+    until they can be judged together, by the median of their steps. The last digit is what readings that are mostly equal now and then differ by: the
+    smallest departure that was seen twice. A good reading is passed
     on at once, one that jumps only when it is known what it was.
     """
 
@@ -38,14 +42,19 @@ class SpikeGate(Generic[Item]):
         self._good: float | None = None
         self._held: list[tuple[float | None, Item]] = []
         self._departures: list[float] = []
+        self._first: list[tuple[float | None, Item]] | None = []
 
     def push(self, value: float, item: Item) -> list[tuple[Item, bool]]:
         """Take a reading; returns what can be judged now, in order."""
+        if self._first is not None:
+            self._first.append((value, item))
+            known = sum(one is not None for one, _ in self._first)
+            return self._begin() if known > self._needed else []
         if self._good is None:
             return [self._accept(value, item)]
         away = abs(value - self._good)
-        if away and not self._held:
-            self._departures = sorted([*self._departures, away])[:2]
+        if away > ROUNDING * abs(self._good) and not self._held:
+            self._departures = sorted([*self._departures, away])[:8]
         usual = self._usual_step()
         if not self._held:
             if away <= self.factor * usual:
@@ -56,10 +65,20 @@ class SpikeGate(Generic[Item]):
         if away <= self.back * usual * (1 + len(self._held)) ** 0.5:
             return [*self._let_go(wild=True), self._accept(value, item)]
         self._held.append((value, item))
-        return self.flush() if len(self._held) > self.longest else []
+        return self._anew() if len(self._held) > self.longest else []
+
+    def _anew(self) -> list[tuple[Item, bool]]:
+        """What was held is a step, or the start of a ramp: judge it by its own steps."""
+        self._first, self._held = self._held, []
+        self._good = None
+        self._steps.clear()
+        return self._begin()
 
     def pass_by(self, item: Item) -> list[tuple[Item, bool]]:
         """Take something that has no value, to be passed on in its order."""
+        if self._first:
+            self._first.append((None, item))
+            return self.flush() if len(self._first) > 4 * self._needed else []
         if not self._held:
             return [(item, False)]
         self._held.append((None, item))
@@ -68,7 +87,28 @@ class SpikeGate(Generic[Item]):
 
     def flush(self) -> list[tuple[Item, bool]]:
         """Let go of all that is held; it is taken as good."""
+        if self._first is not None:
+            self._held, self._first = self._first, None
         return self._let_go(wild=False)
+
+    def _begin(self) -> list[tuple[Item, bool]]:
+        """Judge the first readings together; the median step does not mind a few wild ones."""
+        first, self._first = self._first or [], None
+        values = [value for value, _ in first if value is not None]
+        steps = [abs(b - a) for a, b in itertools.pairwise(values)]
+        usual = statistics.median(steps)
+        self._steps.extend([usual] * self._needed)
+        calm = (i for i, step in enumerate(steps) if step <= self.factor * usual)
+        start = next(calm, 0)
+        judged: list[tuple[Item, bool]] = []
+        seen = 0
+        for value, item in first:
+            if value is None:
+                judged += self.pass_by(item)
+                continue
+            judged += [(item, True)] if seen < start else self.push(value, item)
+            seen += 1
+        return judged
 
     def _let_go(self, wild: bool) -> list[tuple[Item, bool]]:
         held, self._held = self._held, []
@@ -89,11 +129,11 @@ class SpikeGate(Generic[Item]):
             return float("inf")
         ordered = sorted(self._steps)
         kept = ordered[: max(1, (len(ordered) * 9) // 10)]
-        return max(sum(kept) / len(kept), self._last_digit())
+        rounding = ROUNDING * abs(self._good) if self._good is not None else 0.0
+        return max(sum(kept) / len(kept), self._last_digit(), rounding)
 
     def _last_digit(self) -> float:
-        if len(self._departures) == 2:
-            smallest, second = self._departures
-            if second <= self.factor * smallest:
-                return second
+        for one, two in itertools.pairwise(self._departures):
+            if two <= 1.01 * one:
+                return two
         return 1e-300

@@ -85,11 +85,16 @@ def test_behind_a_filter_a_voltage_gets_the_field_behind_the_same_filter() -> No
 
 def test_a_voltage_waits_until_all_that_it_needs_is_past_its_moment() -> None:
     pairing = Pairing(BAR, setup())
+    for k in range(12):  # the first readings of a channel are judged together
+        time_s = 0.1 * k - 2.0
+        early = [("field", 0.1 * time_s), ("longitudinal", 4.0), ("hall", 5.0)]
+        pairs_of(pairing, [row(channel, time_s, x) for channel, x in early], end=False)
     waiting = [row("field", 0.0, 0.0), row("longitudinal", 1.0, 4.0), row("hall", 1.2, 5.0)]
-    assert pairs_of(pairing, waiting, end=False) == []
-    assert pairs_of(pairing, [row("field", 1.1, 0.1)], end=False) != []
+    assert all(pair.time_s < 0 for pair in pairs_of(pairing, waiting, end=False))
+    found = pairs_of(pairing, [row("field", 1.1, 0.11)], end=False)
+    assert kinds(found) == [("longitudinal", 1.0, "ok")]
     assert pairs_of(pairing, [row("longitudinal", 1.4, 4.0)], end=False) == []
-    found = pairs_of(pairing, [row("field", 1.3, 0.1)], end=False)
+    found = pairs_of(pairing, [row("field", 1.3, 0.13)], end=False)
     assert kinds(found) == [("hall", 1.2, "ok")]
 
 

@@ -17,6 +17,8 @@ SAG = 0.02
 """Share by which the known current may change before it is said."""
 FLAT_INTEGRAL_TIMES = 8.0
 """A filter's noise does not stand still within a digit for so many of its integral times."""
+UNUSABLE = 0.2
+"""Share of the last readings that can't be used at which that is said."""
 FLAT = 12
 """Readings in a row, equal to the last digit while the field moves, that can't be real."""
 
@@ -65,7 +67,7 @@ class RoleWatch:
                 "its line and its settings.",
             )
         bad = sum(kind in ("lost", "wild", "overload") for kind in recent)
-        if len(recent) >= MEMORY // 2 and bad > 0.1 * len(recent):
+        if len(recent) >= MEMORY // 2 and bad > UNUSABLE * len(recent):
             yield Caution(
                 "unusable_readings",
                 f"{bad} of the last {len(recent)} {self.role} readings can't be used (no answer, "
