@@ -264,7 +264,7 @@ class Estimator:
             density.value if density else None, mobility.value if mobility else None,
             self._quick.density, self._quick.mobility,
             self._fit.window_T[1] if self._fit.window_T is not None else None, self._fit.shapes,
-            self._lowest_T < 0.0 < self._highest_T,
+            self._lowest_T < 0.0 < self._highest_T, self._fit.noisy,
         )
         slope = fit.slope.value / self._scale_T if density and fit.slope else None
         found = [c for watch in self._watch.values() for c in watch.cautions()]

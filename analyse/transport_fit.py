@@ -9,7 +9,17 @@ from functools import lru_cache
 
 from scipy.special import fdtri
 
-from analyse.basis import CUBIC, CURVED, HALL_BENT, HALL_LINE, LEVEL, OTHER_PARITY, SLOPING, SQUARE
+from analyse.basis import (
+    CUBIC,
+    CURVED,
+    HALL_BENT,
+    HALL_LINE,
+    LEVEL,
+    OTHER_PARITY,
+    SLOPING,
+    SQUARE,
+    regressors,
+)
 from analyse.confidence import best_phi
 from analyse.line_fit import LineFit, fit_columns, lack_of_fit
 from analyse.segments import Pool
@@ -60,8 +70,7 @@ class Coefficient:
 
 @dataclass(frozen=True)
 class TransportFit:
-    """Slope in ohm per unit of u, offset and rho_0 in ohm, noise facts of both roles; ``groups``:
-    segments behind each (hall, longitudinal)."""
+    """Slope in ohm per unit of u, offset and rho_0 in ohm, noise facts of both roles."""
 
     slope: Coefficient | None
     offset_ohm: float | None
@@ -69,7 +78,6 @@ class TransportFit:
     rho_0: Coefficient | None
     noise_excess_hall: float
     noise_excess_longitudinal: float
-    groups: tuple[int, int]
 
 
 @dataclass(frozen=True)
@@ -82,10 +90,11 @@ class Models:
 
 @dataclass(frozen=True)
 class Phis:
-    """Mixture precisions, fixed before the data."""
+    """Mixture precisions and the scale of u in T, fixed before the data."""
 
     slope: float
     rho_0: float
+    scale_T: float
 
 
 def fixed_phis(setup: Setup, scale_T: float) -> Phis:
@@ -107,6 +116,7 @@ def fixed_phis(setup: Setup, scale_T: float) -> Phis:
     return Phis(
         best_phi(effective * width**2 / 12, SLOPE_SHARE * alpha),
         best_phi(effective, (1 - SLOPE_SHARE) * alpha),
+        scale_T,
     )
 
 
@@ -167,7 +177,7 @@ def best_inner(inner: Sequence[Pool], excess: bool, phis: Phis, alpha: float) ->
     for pool in inner:
         columns = longitudinal_columns(pool)
         part_excess = excess and noise_excess(pool, columns) > 1
-        parts.append(zero_field(pool, columns, part_excess, phis.rho_0, (1 - SLOPE_SHARE) * alpha))
+        parts.append(zero_field(pool, columns, part_excess, phis, (1 - SLOPE_SHARE) * alpha))
     return min((part for part in parts if part is not None), key=_total, default=None)
 
 
@@ -185,14 +195,13 @@ def fit_transport(
     offset_error = line.standard_error(0) if line is not None else math.inf
     slope = hall_slope(hall, models.hall, excess[0] > 1, phis, alpha)
     level_alpha = (1 - SLOPE_SHARE) * alpha
-    rho_0 = zero_field(along, models.longitudinal, excess[1] > 1, phis.rho_0, level_alpha)
+    rho_0 = zero_field(along, models.longitudinal, excess[1] > 1, phis, level_alpha)
     if inner is not None and (rho_0 is None or _total(inner) < _total(rho_0)):
         rho_0 = inner
     if rho_0 is not None and tail is not None:
         reach = min(abs(rho_0.value - level) for level in tail)
         rho_0 = replace(rho_0, floor=math.hypot(rho_0.floor, reach))
-    groups = (hall.groups, along.groups)
-    return TransportFit(slope, offset, offset_error, rho_0, excess[0], excess[1], groups)
+    return TransportFit(slope, offset, offset_error, rho_0, excess[0], excess[1])
 
 
 def hall_slope(
@@ -207,16 +216,22 @@ def hall_slope(
 
 
 def zero_field(
-    pool: Pool, columns: tuple[int, ...], excess: bool, phi: float, alpha: float
+    pool: Pool, columns: tuple[int, ...], excess: bool, phis: Phis, alpha: float
 ) -> Coefficient | None:
-    """The longitudinal resistivity at zero field from one pool."""
+    """The longitudinal resistivity at zero field from one pool.
+
+    What the model adds between the pool's lower end and zero goes into the model part.
+    """
     fit = fit_columns(pool, columns, excess)
     if fit is None:
         return None
     odd = tuple(column for column in columns if column == OTHER_PARITY)
     order = len(columns) - len(odd) - 1
     bent = fit_columns(pool, (SQUARE, CURVED, CUBIC)[order] + odd, excess)
-    return _coefficient(fit, 0, bent, phi, alpha, pool.effective, FLOOR, order)
+    found = _coefficient(fit, 0, bent, phis.rho_0, alpha, pool.effective, FLOOR, order)
+    lowest = regressors("longitudinal", pool.low_T / phis.scale_T)
+    beyond = fit.predict((*lowest[:OTHER_PARITY], 0.0))[0] - found.value
+    return replace(found, floor=math.hypot(found.floor, beyond))
 
 
 def _total(part: Coefficient) -> float:

@@ -112,18 +112,20 @@ def homogeneous_run(
 def _without_peak(
     ordered: list[Segment], bounds: Bounds, role: str, scale_T: float, lowest_T: float
 ) -> Bounds:
-    """Leave out what lies lowest and does not agree with all that lies above it."""
+    """Leave out all up to the uppermost segment below ``lowest_T`` that does not agree with what
+    lies above it (where the field reading has an offset, a peak is not at its zero)."""
     inside = [one for one in ordered if bounds.holds(one)]
-    for first, segment in enumerate(inside[:-1]):
-        if segment.low_T > lowest_T:
-            break
-        pool = Pool()
-        for one in inside[first + 1 :]:
-            pool.take(one)
-        if pool.effective < CORE_EFFECTIVE or agrees(segment, pool, role, scale_T):
-            break
-        bounds = Bounds(inside[first + 1].low_T, bounds.high_T)
-    return bounds
+    below = [one for one in inside if one.low_T <= lowest_T]
+    pool = Pool()
+    for one in inside[len(below) :]:
+        pool.take(one)
+    while below and pool.effective < CORE_EFFECTIVE:
+        pool.take(below.pop())
+    odd = [one.high_T for one in below if not agrees(one, pool, role, scale_T)]
+    if not odd:
+        return bounds
+    above = [one.low_T for one in inside if one.low_T > max(odd)]
+    return Bounds(min(above), bounds.high_T) if above else bounds
 
 
 def _grow(

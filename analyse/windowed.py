@@ -93,6 +93,7 @@ class WindowedFit:
         self._narrowed = False
         self.inner: Coefficient | None = None
         self.tail: tuple[float, float] | None = None
+        self.noisy = (False, False)
         self.models = Models()
         self.shapes = Shapes()
         self._time_s = [math.inf, -math.inf]
@@ -179,6 +180,20 @@ class WindowedFit:
         pools = [pool for pool, _ in self._inner]
         self.inner = best_inner(pools, self.excess[1] > 1, self._phis, self._alpha)
         self.tail = self._seen_tail()
+        self.noisy = self._still_noisy()
+
+    def _still_noisy(self) -> tuple[bool, bool]:
+        """Whether the excess of noise (hall, longitudinal) is there in the upper half of the window
+        by itself, too; what is structure near zero field is not."""
+        found = []
+        for role, excess in zip(ROLES, self.excess, strict=True):
+            if excess > 1:
+                half = Bounds(self._pools[role].high_T / 2, self.bounds.high_T)
+                pool = self._pool(role, half)
+                models = hall_columns(pool) if role == "hall" else longitudinal_columns(pool)
+                excess = noise_excess(pool, models)
+            found.append(excess > 1)
+        return found[0], found[1]
 
     def _seen_tail(self) -> tuple[float, float] | None:
         """(mean of what was left out around zero, level of the upper half of the window), where a
@@ -272,7 +287,7 @@ class WindowedFit:
         alpha = (1 - SLOPE_SHARE) * self._alpha
         return (
             hall_slope(hall, models.hall, excess[0], self._phis, self._alpha),
-            zero_field(along, models.longitudinal, excess[1], self._phis.rho_0, alpha),
+            zero_field(along, models.longitudinal, excess[1], self._phis, alpha),
         )
 
     def _uncertainty(self, hall: Pool, along: Pool) -> float:

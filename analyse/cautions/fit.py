@@ -20,8 +20,6 @@ BEND_CERTAIN = 4.5
 """Standard errors beyond the target at which a bend is called one; it is looked at all the time."""
 
 
-FEWEST_SEGMENTS = 12
-"""Segments before an excess of noise is told apart from structure that is not resolved yet."""
 NOISE_MATTERS = 0.3
 """Share of the target that the widened interval takes up when an excess of noise is said."""
 OFFSET_CLEAR = 5.0
@@ -45,11 +43,12 @@ class FitFacts:
     bounds_high_T: float | None
     shapes: Shapes
     zero_passed: bool
+    noisy: tuple[bool, bool]
 
 
 def fit_cautions(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
     """Cautions about the fit that hold now."""
-    yield from _noise(facts.fit, setup)
+    yield from _noise(facts, setup)
     sagging = _sag_share(facts)
     if sagging is not None:
         yield Caution(
@@ -85,15 +84,15 @@ def fit_cautions(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
     yield from _quick(facts)
 
 
-def _noise(fit: TransportFit, setup: Setup) -> Iterator[Caution]:
-    target = setup.target
-    for role, excess, stages, coefficient, limit, groups in (
-        ("Hall", fit.noise_excess_hall, setup.hall.filter, fit.slope, target.sheet_density,
-         fit.groups[0]),
-        ("longitudinal", fit.noise_excess_longitudinal, setup.longitudinal.filter, fit.rho_0,
-         target.mobility, fit.groups[1]),
+def _noise(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
+    target, fit, noisy = setup.target, facts.fit, facts.noisy
+    for role, excess, stages, coefficient, limit in (
+        ("Hall", fit.noise_excess_hall, setup.hall.filter if noisy[0] else None, fit.slope,
+         target.sheet_density),
+        ("longitudinal", fit.noise_excess_longitudinal,
+         setup.longitudinal.filter if noisy[1] else None, fit.rho_0, target.mobility),
     ):
-        if excess <= 1.0 or stages is None or coefficient is None or groups < FEWEST_SEGMENTS:
+        if excess <= 1.0 or stages is None or coefficient is None:
             continue
         if coefficient.half_width > NOISE_MATTERS * limit * abs(coefficient.value):
             yield Caution(
