@@ -15,10 +15,10 @@ from bisect import bisect_right
 from contextlib import suppress
 from dataclasses import dataclass
 from pathlib import Path
-from types import TracebackType
-from typing import BinaryIO, Self
+from typing import BinaryIO
 
 from acquire.cells import RowCodec
+from acquire.closing import Closing
 from acquire.disk import sync_folder, write_whole
 from acquire.errors import JournalError
 from acquire.journal_reader import check_header, read_rows, whole_lines
@@ -37,7 +37,7 @@ class Piece:
     next_seq: int
 
 
-class Journal:
+class Journal(Closing):
     """The writing end of one table. Opens or makes the file; one process at a time.
 
     A torn last line, left by a killed process or a power cut, is cut away on opening;
@@ -133,17 +133,6 @@ class Journal:
                 fd, self._fd = self._fd, -1
                 if fd >= 0:
                     os.close(fd)
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(
-        self,
-        kind: type[BaseException] | None,
-        error: BaseException | None,
-        trace: TracebackType | None,
-    ) -> None:
-        self.close()
 
     def _reopen(self) -> None:
         self._claim()

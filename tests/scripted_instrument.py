@@ -16,8 +16,9 @@ import struct
 import threading
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass
-from types import TracebackType
-from typing import Any, Self
+from typing import Any
+
+from acquire.closing import Closing
 
 Answer = Any
 DEADLINE_S = 20.0
@@ -97,7 +98,7 @@ def trickle(text: str, seconds: float) -> tuple[object, ...]:
     return tuple(step for sign in text for step in (Send(sign.encode()), Pause(seconds)))
 
 
-class ScriptedInstrument:
+class ScriptedInstrument(Closing):
     """A server for any number of connections, one after the other or at once.
 
     ``answers`` may be changed at any time. ``greeting``, where given, is done on each new
@@ -179,17 +180,6 @@ class ScriptedInstrument:
             thread.join(DEADLINE_S)
         assert not any(thread.is_alive() for thread in self._threads), "a line did not end"
         assert not self.failures, self.failures
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(
-        self,
-        kind: type[BaseException] | None,
-        error: BaseException | None,
-        trace: TracebackType | None,
-    ) -> None:
-        self.close()
 
     def _start(self, work: Callable[..., None], *things: object) -> threading.Thread:
         thread = threading.Thread(target=self._watched, args=(work, *things), daemon=True)

@@ -3,19 +3,19 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from types import TracebackType
-from typing import Any, Self
+from typing import Any
 
 import zmq
 
 from acquire.bus.sockets import LONGEST_QUESTION, bound, connected, milliseconds
 from acquire.bus.wire import pack_plain, unpack_plain
+from acquire.closing import Closing
 from acquire.errors import BusError
 
 REQUESTS_QUEUED = 100  # a peer
 
 
-class Inbox:
+class Inbox(Closing):
     """Takes requests at a loopback address. Belongs to one thread.
 
     Port 0 takes a free one; ``address`` tells which. Raises BusError if it can't be bound.
@@ -59,17 +59,6 @@ class Inbox:
             self._closed = True
             self._socket.close()
             self._context.term()
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(
-        self,
-        kind: type[BaseException] | None,
-        error: BaseException | None,
-        trace: TracebackType | None,
-    ) -> None:
-        self.close()
 
 
 def ask(address: str, message: dict[str, Any], timeout_s: float) -> dict[str, Any]:

@@ -3,17 +3,16 @@
 from __future__ import annotations
 
 import time
-from types import TracebackType
-from typing import Self
 
 import zmq
 
 from acquire.bus.progress import PATIENCE_S
 from acquire.bus.sockets import connected, milliseconds
 from acquire.bus.wire import ANY_RUN, NEWEST, Introduction, Question, pack, unpack
+from acquire.closing import Closing
 
 
-class Introducer:
+class Introducer(Closing):
     """Asks, again and again if need be, who publishes where questions are answered at ``address``.
 
     Belongs to one thread. Raises BusError if the address is not on loopback.
@@ -53,14 +52,3 @@ class Introducer:
         if not self._closed:
             self._closed = True
             self._context.destroy(linger=0)
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(
-        self,
-        kind: type[BaseException] | None,
-        error: BaseException | None,
-        trace: TracebackType | None,
-    ) -> None:
-        self.close()

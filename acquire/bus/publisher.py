@@ -5,14 +5,13 @@ from __future__ import annotations
 
 import threading
 import time
-from types import TracebackType
-from typing import Self
 
 import zmq
 
 from acquire.bus.addresses import Endpoint
 from acquire.bus.sockets import HIGH_WATER, bound, milliseconds
 from acquire.bus.wire import ANY_RUN, Answer, Introduction, Message, Question, pack, topic, unpack
+from acquire.closing import Closing
 from acquire.errors import BusError, JournalError
 from acquire.journal import Journal, Piece
 from acquire.tables import Cell, Table
@@ -21,7 +20,7 @@ SYNC_PERIOD_S = 1.0
 QUESTIONS_QUEUED = 64  # a peer; more are dropped and asked again
 
 
-class Publisher:
+class Publisher(Closing):
     """Publishes the rows of one table.
 
     A background thread answers questions and syncs the journal once a second, so that both go on
@@ -94,17 +93,6 @@ class Publisher:
         if stopped:
             self._context.term()
         self._journal.sync()
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(
-        self,
-        kind: type[BaseException] | None,
-        error: BaseException | None,
-        trace: TracebackType | None,
-    ) -> None:
-        self.close()
 
 
 class _Answerer:

@@ -5,8 +5,6 @@ from __future__ import annotations
 import time
 from collections.abc import Mapping
 from pathlib import Path
-from types import TracebackType
-from typing import Self
 
 import zmq
 
@@ -14,6 +12,7 @@ from acquire.bus.addresses import Endpoint
 from acquire.bus.progress import StreamHealth, StreamProgress
 from acquire.bus.sockets import HIGH_WATER, connected, milliseconds
 from acquire.bus.wire import Question, pack, topic
+from acquire.closing import Closing
 from acquire.errors import BusError, JournalError
 from acquire.journal_reader import JournalFollower
 from acquire.tables import Row, Table
@@ -23,7 +22,7 @@ MOST_AT_ONCE = 1000  # messages taken from one socket before the others have the
 RENEW_S = 10.0  # after so long a silence the sockets are made anew
 
 
-class Subscriber:
+class Subscriber(Closing):
     """Receives the streams of one run. Belongs to one thread.
 
     ``endpoints`` and ``tables`` have the same streams. ``start`` is the first number wanted, for
@@ -94,17 +93,6 @@ class Subscriber:
         if not self._closed:
             self._closed = True
             self._context.destroy(linger=0)
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(
-        self,
-        kind: type[BaseException] | None,
-        error: BaseException | None,
-        trace: TracebackType | None,
-    ) -> None:
-        self.close()
 
     def _ask(self) -> float:
         """Ask where it is due; returns when the next question will be."""

@@ -7,9 +7,8 @@ import socket
 import time
 from collections.abc import Callable
 from dataclasses import dataclass, field
-from types import TracebackType
-from typing import Self
 
+from acquire.closing import Closing
 from acquire.errors import LaboratoryError
 from acquire.laboratory.bench import Bench
 from acquire.laboratory.wire import Nonsense, Wire
@@ -26,7 +25,7 @@ class _Connection:
     wire: Wire = field(default_factory=Wire)
 
 
-class LaboratoryServer:
+class LaboratoryServer(Closing):
     """Takes any number of connections to each instrument.
 
     Parameters
@@ -69,17 +68,6 @@ class LaboratoryServer:
         for name in list(self._listening):
             self._deafen(name)
         self._selector.close()
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(
-        self,
-        kind: type[BaseException] | None,
-        error: BaseException | None,
-        trace: TracebackType | None,
-    ) -> None:
-        self.close()
 
     def _listen(self, name: str, port: int) -> None:
         listener = socket.socket()

@@ -4,17 +4,16 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable
-from types import TracebackType
-from typing import Self
 
 from acquire.bus import Endpoint, Introducer, Introduction, Subscriber
+from acquire.closing import Closing
 from acquire.errors import RunError
 from acquire.tables import Row, Table
 
 SILENT_S = 2.0  # after which it is asked whether another run is there now
 
 
-class FarSide:
+class FarSide(Closing):
     """The reader elsewhere. Belongs to one thread.
 
     Parameters
@@ -61,17 +60,6 @@ class FarSide:
         self._introducer.close()
         if self._subscriber is not None:
             self._subscriber.close()
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(
-        self,
-        kind: type[BaseException] | None,
-        error: BaseException | None,
-        trace: TracebackType | None,
-    ) -> None:
-        self.close()
 
     def _meet(self, introduction: Introduction) -> None:
         self._check(introduction)
