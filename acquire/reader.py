@@ -10,10 +10,8 @@ publisher, and needs no process. :func:`run_reader` is the loop around it.
 
 from __future__ import annotations
 
-import argparse
 import faulthandler
 import math
-import os
 import sys
 import time
 import zlib
@@ -21,13 +19,13 @@ from collections.abc import Callable, Sequence
 from contextlib import suppress
 from typing import Any
 
-from acquire.bus import Publisher
+from acquire.child_process import Child, child_parser
 from acquire.clock import RunClock
 from acquire.config.reader import ReaderSection, Setting
 from acquire.dialogue import Asked, Dialogue
-from acquire.errors import BadReply, InstrumentError, JournalError, RampsideError, RunError
+from acquire.errors import BadReply, InstrumentError, JournalError, RunError
 from acquire.instrument import Instrument
-from acquire.journal import Journal
+from acquire.reader_output import live_run_for, reader_output
 from acquire.readings import reading_table
 from acquire.recorder import Recorder
 from acquire.run_folder import RunFolder, open_run
@@ -225,51 +223,21 @@ def run_reader(
 
 def main(arguments: Sequence[str] | None = None) -> int:
     """The process. Returns its exit status: 0 ended in order, 1 failed (one sentence says why)."""
-    parser = argparse.ArgumentParser(
-        prog="python -m acquire.reader", description="Read one instrument for a run."
-    )
-    parser.add_argument("run_folder")
+    parser = child_parser("acquire.reader", "Read one instrument for a run.")
     parser.add_argument("reader")
-    parser.add_argument("--parent", type=int, metavar="PID", help="end when this process has died")
     options = parser.parse_args(arguments)
-    stop = Stop()
-    stop.install()
-
-    def complain(text: str) -> None:
-        with suppress(OSError):  # a terminal that has gone
-            print(f"reader {options.reader}: {text}", file=sys.stderr, flush=True)
-
-    try:
-        _read_for_run(open_run(options.run_folder), options, stop, complain)
-    except RampsideError as error:
-        complain(str(error))
-        return 1
-    return 0
+    child = Child(f"reader {options.reader}", options.parent)
+    return child.exit_status(
+        lambda: _read_for_run(open_run(options.run_folder), options.reader, child)
+    )
 
 
-def _read_for_run(
-    run: RunFolder, options: argparse.Namespace, stop: Stop, complain: Callable[[str], None]
-) -> None:
-    section, live = _section(run, options.reader), run.live()
-    table = reading_table(section.name, section)
-    if live is None or table.stream not in live.endpoints:
-        raise RunError(
-            f"{run.path}: does not wait for {section.name!r}; start it by rampside watch."
-        )
+def _read_for_run(run: RunFolder, name: str, child: Child) -> None:
+    section = _section(run, name)
+    live = live_run_for(run, name)
     clock = RunClock(live.monotonic_start)
-    told = [entry for entry in run.instruments() if entry.get("reader") == section.name]
-    with (
-        Journal(run.journal_path(table), table) as journal,
-        Publisher(
-            run.run_id,
-            table,
-            journal,
-            live.endpoints[table.stream],
-            started_utc=run.started_utc,
-        ) as publisher,
-    ):
-        if journal.torn:
-            complain(f"{journal.torn} bytes of a torn last line were cut away")
+    told = [entry for entry in run.instruments() if entry.get("reader") == name]
+    with reader_output(run, live, reading_table(name, section), child.complain) as publisher:
         instrument = Instrument(section)
         reader = Reader(
             section,
@@ -278,11 +246,11 @@ def _read_for_run(
             clock.now_s,
             known_identity=told[0].get("identity") if told else None,
             note=run.note_instrument,
-            complain=complain,
-            wait=stop.wait,
+            complain=child.complain,
+            wait=child.stop.wait,
         )
         try:
-            run_reader(reader, stop, clock.now_s, lambda: options.parent in (None, os.getppid()))
+            run_reader(reader, child.stop, clock.now_s, child.wanted)
         finally:
             instrument.close()
 

@@ -9,21 +9,19 @@ journals alone. A row that comes out otherwise than it was written is said loudl
 
 from __future__ import annotations
 
-import argparse
 import faulthandler
-import os
 import sys
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from typing import Any
 
 from acquire.bus import Inbox, Publisher, Subscriber
 from acquire.cells import RowCodec
+from acquire.child_process import Child, child_parser
 from acquire.clock import RunClock
-from acquire.errors import JournalError, RampsideError, RunError
+from acquire.errors import RunError
 from acquire.journal import Journal
 from acquire.readings import Reading, reading_table, stream_of
 from acquire.run_folder import LiveRun, RunFolder, open_run
-from acquire.stop import Stop
 from acquire.tables import Row, Table
 from analyse.estimate_table import ESTIMATES, EVENTS
 from analyse.row_maker import DETERMINED, Record, RowMaker
@@ -123,8 +121,8 @@ class Service:
         return {"ok": True, "estimates": self._estimates}
 
 
-def run_service(run: RunFolder, live: LiveRun, stop: Stop, parent: int | None) -> int:
-    """The loop around :class:`Service`. Returns the exit status."""
+def run_service(run: RunFolder, live: LiveRun, wanted: Callable[[], bool]) -> None:
+    """The loop around :class:`Service`, until it is not ``wanted`` any more."""
     tables = {name: _table_of(run, name) for name in RowMaker(run.rig).readers}
     streams = {stream_of(name): name for name in tables}
     clock = RunClock(live.monotonic_start)
@@ -164,13 +162,12 @@ def run_service(run: RunFolder, live: LiveRun, stop: Stop, parent: int | None) -
             {stream: tables[name] for stream, name in streams.items()},
             {stream: service.next_seq[name] for stream, name in streams.items()},
         ) as subscriber:
-            while not stop.requested and (parent is None or os.getppid() == parent):
+            while wanted():
                 for stream, row in subscriber.receive(LONGEST_WAIT_S):
                     service.take(Reading.from_row(streams[stream], row))
                 while (asked := inbox.receive(0.0)) is not None:
                     message, reply = asked
                     reply(service.request(message, catch_up))
-    return 0
 
 
 def _table_of(run: RunFolder, name: str) -> Table:
@@ -179,21 +176,16 @@ def _table_of(run: RunFolder, name: str) -> Table:
 
 def main(arguments: Sequence[str] | None = None) -> int:
     """Entry point; 0 ended in order, 1 failed with one sentence on stderr."""
-    parser = argparse.ArgumentParser(prog="python -m analyse.service", description=__doc__)
-    parser.add_argument("run_folder")
-    parser.add_argument("--parent", type=int, default=None, help="end when this process has ended")
-    options = parser.parse_args(arguments)
-    stop = Stop()
-    stop.install()
-    try:
-        run = open_run(options.run_folder)
-        live = run.live()
-        if live is None:
-            raise RunError(f"{run.path}: is not live; use `rampside replay` on a finished run.")
-        return run_service(run, live, stop, options.parent)
-    except (RampsideError, JournalError) as error:
-        print(f"estimator: {error}", file=sys.stderr, flush=True)
-        return 1
+    options = child_parser("analyse.service", __doc__).parse_args(arguments)
+    child = Child("estimator", options.parent)
+    return child.exit_status(lambda: _serve(open_run(options.run_folder), child))
+
+
+def _serve(run: RunFolder, child: Child) -> None:
+    live = run.live()
+    if live is None:
+        raise RunError(f"{run.path}: is not live; use `rampside replay` on a finished run.")
+    run_service(run, live, child.wanted)
 
 
 if __name__ == "__main__":

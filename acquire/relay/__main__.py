@@ -5,26 +5,23 @@ python -m acquire.relay RUN_FOLDER READER [--parent PID]
 
 from __future__ import annotations
 
-import argparse
 import faulthandler
-import os
 import sys
 import time
 from collections.abc import Callable, Sequence
-from contextlib import suppress
 from typing import Any
 
-from acquire.bus import Endpoint, Publisher
+from acquire.bus import Endpoint
+from acquire.child_process import Child, child_parser
 from acquire.clock import RunClock
 from acquire.config.reader import ReaderSection
-from acquire.errors import RampsideError, RunError
-from acquire.journal import Journal
+from acquire.errors import RunError
+from acquire.reader_output import live_run_for, reader_output
 from acquire.readings import reading_table, stream_of
 from acquire.relay.far_side import FarSide
 from acquire.relay.relaying import Relaying
 from acquire.relay.translation import STATUS, Translation, standing_of
 from acquire.run_folder import LiveRun, RunFolder, open_run
-from acquire.stop import Stop
 from acquire.tables import Row, Table
 
 LONGEST_WAIT_S = 0.1
@@ -32,58 +29,21 @@ LONGEST_WAIT_S = 0.1
 
 def main(arguments: Sequence[str] | None = None) -> int:
     """The process. Returns its exit status: 0 ended in order, 1 failed (one sentence says why)."""
-    parser = argparse.ArgumentParser(
-        prog="python -m acquire.relay", description="Have a reader elsewhere on record in a run."
-    )
-    parser.add_argument("run_folder")
+    parser = child_parser("acquire.relay", "Have a reader elsewhere on record in a run.")
     parser.add_argument("reader")
-    parser.add_argument("--parent", type=int, metavar="PID", help="end when this process has died")
     options = parser.parse_args(arguments)
-    stop = Stop()
-    stop.install()
-
-    def complain(text: str) -> None:
-        with suppress(OSError):  # a terminal that has gone
-            print(f"reader {options.reader}: {text}", file=sys.stderr, flush=True)
-
-    def wanted() -> bool:
-        return not stop.requested and options.parent in (None, os.getppid())
-
-    try:
-        run = open_run(options.run_folder)
-        section, far, live = _elsewhere(run, options.reader)
-        _relay(run, section, far, live, wanted, complain)
-    except RampsideError as error:
-        complain(str(error))
-        return 1
-    return 0
+    child = Child(f"reader {options.reader}", options.parent)
+    return child.exit_status(lambda: _relay(open_run(options.run_folder), options.reader, child))
 
 
-def _relay(
-    run: RunFolder,
-    section: ReaderSection,
-    far: Endpoint,
-    live: LiveRun,
-    wanted: Callable[[], bool],
-    complain: Callable[[str], None],
-) -> None:
-    table = reading_table(section.name, section)
+def _relay(run: RunFolder, name: str, child: Child) -> None:
+    section, far, live = _elsewhere(run, name)
+    table = reading_table(name, section)
 
     def note(known: dict[str, Any]) -> None:
-        run.note_instrument({"reader": section.name, "resource": far.publish, **known})
+        run.note_instrument({"reader": name, "resource": far.publish, **known})
 
-    with (
-        Journal(run.journal_path(table), table) as journal,
-        Publisher(
-            run.run_id,
-            table,
-            journal,
-            live.endpoints[table.stream],
-            started_utc=run.started_utc,
-        ) as publisher,
-    ):
-        if journal.torn:
-            complain(f"{journal.torn} bytes of a torn last line were cut away")
+    with reader_output(run, live, table, child.complain) as publisher:
         translation = Translation(run.started_utc, standing_of(run.rows(table)))
         relaying = Relaying(
             translation,
@@ -91,12 +51,12 @@ def _relay(
             len(section.values),
             publisher.publish,
             note,
-            complain,
+            child.complain,
             RunClock(live.monotonic_start).now_s,
         )
-        relaying.note_later(_unnoted(run, table, section.name))
+        relaying.note_later(_unnoted(run, table, name))
         with FarSide(table, far, translation.adopt) as far_side:
-            _listen(far_side, relaying, wanted)
+            _listen(far_side, relaying, child.wanted)
 
 
 def _listen(far_side: FarSide, relaying: Relaying, wanted: Callable[[], bool]) -> None:
@@ -121,12 +81,11 @@ def _unnoted(run: RunFolder, table: Table, name: str) -> list[Row]:
 def _elsewhere(run: RunFolder, name: str) -> tuple[ReaderSection, Endpoint, LiveRun]:
     """The reader, where it is, and where its rows are to go. Raises RunError."""
     sections = {reader.name: reader for reader in run.rig.readers}
-    section, live = sections.get(name), run.live()
+    section = sections.get(name)
     if section is None or section.elsewhere is None:
         names = ", ".join(one.name for one in run.rig.readers if one.elsewhere is not None)
         raise RunError(f"{run.path}: has no reader {name!r} elsewhere; it has {names or 'none'}.")
-    if live is None or stream_of(name) not in live.endpoints:
-        raise RunError(f"{run.path}: does not wait for {name!r}; start it by rampside watch.")
+    live = live_run_for(run, name)
     far = Endpoint(section.elsewhere.publish, section.elsewhere.answer)
     if {far.publish, far.answer} & {*vars(live.endpoints[stream_of(name)]).values()}:
         raise RunError(f"{run.path}: listens to {name!r} itself, so that no relay is needed.")

@@ -6,20 +6,18 @@ its parent has ended. Exit status 0, or 1 with one sentence on stderr.
 
 from __future__ import annotations
 
-import argparse
 import asyncio
 import faulthandler
 import logging
-import os
 import socket
 import sys
 from collections.abc import Sequence
 
 from bokeh.server.util import bind_sockets
 
+from acquire.child_process import Child, child_parser
 from acquire.errors import BusError, RampsideError
 from acquire.run_folder import RunFolder, open_run
-from acquire.stop import Stop
 from dashboard.page.door import MOST_PAGES, Door, close_sessions, serve
 from dashboard.page.feed import Feed
 from dashboard.page.session import Session
@@ -31,30 +29,26 @@ LOOK_S = 0.1
 
 def main(arguments: Sequence[str] | None = None) -> int:
     """Entry point."""
-    parser = argparse.ArgumentParser(prog="python -m dashboard.page", description=__doc__)
-    parser.add_argument("run_folder")
+    parser = child_parser("dashboard.page", __doc__)
     parser.add_argument("--port", type=int, default=0, help="0: any free one")
     parser.add_argument("--most-pages", type=int, default=MOST_PAGES, help="open at once")
-    parser.add_argument("--parent", type=int, default=None, help="end when this process has ended")
     options = parser.parse_args(arguments)
+    child = Child("page", options.parent)
     try:
         run = open_run(options.run_folder)
         sockets, port = _listen(options.port)
     except RampsideError as error:
-        print(f"page: {error}", file=sys.stderr, flush=True)
+        child.complain(str(error))
         return 1
     faulthandler.enable()
     logging.basicConfig(level=logging.ERROR, format="%(name)s: %(message)s")
-    stop = Stop()
-    stop.install()
+    child.stop.install()
     door = Door(port, options.most_pages)
-    asyncio.run(_show(run, sockets, door, stop, options.parent))
+    asyncio.run(_show(run, sockets, door, child))
     return 0
 
 
-async def _show(
-    run: RunFolder, sockets: list[socket.socket], door: Door, stop: Stop, parent: int | None
-) -> None:
+async def _show(run: RunFolder, sockets: list[socket.socket], door: Door, child: Child) -> None:
     store = RunStore(run.run_id, run.rig)
     feed = Feed(run, store)
     server = serve(lambda document: Session(store).open(document), sockets, door)
@@ -62,7 +56,7 @@ async def _show(
     feed.start()
     print(f"ready http://{LOOPBACK}:{door.port}/", flush=True)
     try:
-        while not stop.requested and (parent is None or os.getppid() == parent):
+        while child.wanted():
             await asyncio.sleep(LOOK_S)
     finally:
         await close_sessions(server)

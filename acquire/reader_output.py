@@ -1,0 +1,44 @@
+"""Where the rows of one reader go in a live run, whichever process has them."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+
+from acquire.bus import Publisher
+from acquire.errors import RunError
+from acquire.journal import Journal
+from acquire.readings import stream_of
+from acquire.run_folder import LiveRun, RunFolder
+from acquire.tables import Table
+
+
+def live_run_for(run: RunFolder, reader: str) -> LiveRun:
+    """The run as it is live. Raises RunError if it does not wait for rows of that reader."""
+    live = run.live()
+    if live is None or stream_of(reader) not in live.endpoints:
+        raise RunError(f"{run.path}: does not wait for {reader!r}; start it by rampside watch.")
+    return live
+
+
+@contextmanager
+def reader_output(
+    run: RunFolder, live: LiveRun, table: Table, complain: Callable[[str], None]
+) -> Iterator[Publisher]:
+    """The publisher of a reader's rows, with its journal open meanwhile.
+
+    Raises JournalError or BusError if another process has them; says what was cut away.
+    """
+    with (
+        Journal(run.journal_path(table), table) as journal,
+        Publisher(
+            run.run_id,
+            table,
+            journal,
+            live.endpoints[table.stream],
+            started_utc=run.started_utc,
+        ) as publisher,
+    ):
+        if journal.torn:
+            complain(f"{journal.torn} bytes of a torn last line were cut away")
+        yield publisher
