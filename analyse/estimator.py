@@ -6,14 +6,15 @@ import math
 from collections.abc import Iterable
 from dataclasses import dataclass
 
+from analyse.answer import Numbers, carriers_of, fitted_lines, measured, numbers_of
 from analyse.budget import combined, systematic_lines
 from analyse.cautions import DriftWatch, FieldWatch, FitFacts, RoleWatch, fit_cautions
-from analyse.drude import density_from_slope, mobility_from, scattering_time_from, transport
-from analyse.estimate import BudgetLine, Caution, Estimate, Measured, Moment
+from analyse.drude import transport
+from analyse.estimate import Caution, Estimate, Moment
 from analyse.forecast import State, field_range, field_to_target
 from analyse.hall_bar import HallBar
 from analyse.lockin import LockinFilter
-from analyse.numbers import Number, make_number
+from analyse.numbers import Number
 from analyse.pairing import Pair, Pairing
 from analyse.quick import QuickReadings
 from analyse.setup import Excitation, FieldSource, Ramp, Setup, Signal, Target, Window
@@ -182,9 +183,12 @@ class Estimator:
         fit: TransportFit,
     ) -> Estimate:
         bounds, zero = self._fit.bounds, self._fit.zero_in_reach
-        numbers = self._numbers(fit) if zero else (None, None, None)
+        numbers: Numbers = (None, None, None)
+        if zero:
+            confidence = self.setup.target.confidence
+            numbers = numbers_of(fit, self._scale_T, self.bar, self._systematic, confidence)
         density, mobility, tau = numbers
-        carriers = "unknown" if self.setup.hall.detection == "R" else _carriers(fit)
+        carriers = "unknown" if self.setup.hall.detection == "R" else carriers_of(fit)
         cautions = self._cautions(fit, carriers, density, mobility)
         window = self._fit.window_T
         missing = what_is_missing(
@@ -200,61 +204,13 @@ class Estimator:
             time_s, field_T, rho_xx, rho_xy, self._field_points,
             field_T is not None and bounds.low_T <= abs(field_T) <= bounds.high_T,
             density, mobility, tau,
-            self._measured(fit, "rho_0"), self._measured(fit, "slope"), fit.offset_ohm,
+            measured(fit.rho_0), measured(fit.slope, self._scale_T), fit.offset_ohm,
             carriers, window, self._quick.density, self._quick.mobility,
             transport(density.value, mobility.value, self.bar.carrier_gas)
             if density and mobility else None,
-            self._budget(fit), "converging" if missing else "stable", missing, self._stable_at,
+            fitted_lines(fit) + self._systematic, "converging" if missing else "stable", missing, self._stable_at,
             *ahead, cautions, self._sweeps.number,
         )
-
-    def _numbers(self, fit: TransportFit) -> tuple[Number | None, Number | None, Number | None]:
-        slope, rho_0 = fit.slope, fit.rho_0
-        confidence = self.setup.target.confidence
-        s_n, s_mu, s_tau = combined(self._systematic)
-        if slope is None or abs(slope.value) <= slope.half_width:
-            return None, None, None
-        per_T = self._scale_T
-        a, h = abs(slope.value) / per_T, slope.half_width / per_T
-        stat_a, model_a = slope.standard_error / per_T / a, slope.spread / per_T / a
-        density = make_number(
-            density_from_slope(a), density_from_slope(a + h), density_from_slope(a - h),
-            stat_a, model_a, s_n, confidence,
-        )
-        if density is None or rho_0 is None or rho_0.value <= rho_0.half_width:
-            return density, None, None
-        r, hr = rho_0.value, rho_0.half_width
-        stat = math.hypot(stat_a, rho_0.standard_error / r)
-        model = math.hypot(model_a, rho_0.spread / r)
-        ends = (mobility_from(a, r), (a - h) / (r + hr), (a + h) / (r - hr))
-        mobility = make_number(*ends, stat, model, s_mu, confidence)
-        mass = self.bar.carrier_gas.mass_kg(density.value)
-        times = (scattering_time_from(mu, mass) for mu in ends)
-        return density, mobility, make_number(*times, stat, model, s_tau, confidence)
-
-    def _measured(self, fit: TransportFit, name: str) -> Measured | None:
-        coefficient = fit.slope if name == "slope" else fit.rho_0
-        if coefficient is None:
-            return None
-        scale = self._scale_T if name == "slope" else 1.0
-        parts = math.hypot(coefficient.standard_error, coefficient.spread)
-        return Measured(coefficient.value / scale, parts / scale)
-
-    def _budget(self, fit: TransportFit) -> tuple[BudgetLine, ...]:
-        slope, rho_0 = fit.slope, fit.rho_0
-        if slope is None or rho_0 is None or not slope.value or not rho_0.value:
-            return ()
-        a, r = abs(slope.value), abs(rho_0.value)
-        lines = (
-            ("Hall slope", "statistical", slope.standard_error / a, True),
-            ("zero-field resistivity", "statistical", rho_0.standard_error / r, False),
-            ("bend of the Hall line", "model", slope.spread / a, True),
-            ("bend of the longitudinal resistivity", "model", rho_0.spread / r, False),
-        )
-        fitted = tuple(
-            BudgetLine(source, kind, u if both else 0.0, u, u) for source, kind, u, both in lines
-        )
-        return fitted + self._systematic
 
     def _cautions(
         self, fit: TransportFit, carriers: str, density: Number | None, mobility: Number | None
@@ -304,10 +260,3 @@ class Estimator:
 
 def _mean(values: list[float]) -> float | None:
     return sum(values) / len(values) if values else None
-
-
-def _carriers(fit: TransportFit) -> str:
-    slope = fit.slope
-    if slope is None or abs(slope.value) <= slope.half_width:
-        return "unknown"
-    return "holes" if slope.value > 0 else "electrons"

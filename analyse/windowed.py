@@ -5,8 +5,8 @@ from __future__ import annotations
 import math
 
 from analyse.basis import LEVEL, OTHER_PARITY
+from analyse.inflation import Inflation
 from analyse.line_fit import fit_columns
-from analyse.lockin import LockinFilter
 from analyse.pairing import Pair
 from analyse.segments import Pool, Segments
 from analyse.setup import Setup
@@ -50,27 +50,6 @@ REACH = 0.3
 """Zero field is in reach when the window begins below this share of its upper end."""
 
 
-class _Inflation:
-    """Variance inflation of one role's readings by their spacing, remembered by spacing."""
-
-    def __init__(self) -> None:
-        self.stages: LockinFilter | None = None
-        self._known: dict[str, float] = {}
-        self._last_s: float | None = None
-
-    def next(self, time_s: float, stages: LockinFilter | None) -> float:
-        """Kappa for a reading at a time behind a filter."""
-        if stages != self.stages:
-            self.stages, self._known = stages, {}
-        last, self._last_s = self._last_s, time_s
-        if stages is None or last is None or time_s <= last:
-            return 1.0
-        key = f"{time_s - last:.2g}"
-        if key not in self._known:
-            self._known[key] = stages.inflation(time_s - last)
-        return self._known[key]
-
-
 class WindowedFit:
     """Takes pairs; gives the pools inside the window."""
 
@@ -82,7 +61,7 @@ class WindowedFit:
         self._phis = fixed_phis(setup, scale_T)
         self._wide = {role: Pool() for role in ROLES}
         self._pools = dict(self._wide)
-        self._inflation = {role: _Inflation() for role in ROLES}
+        self._inflation = {role: Inflation() for role in ROLES}
         given = setup.window
         high = given.high_T if given.high_T is not None else math.inf
         self.bounds = self._widest = Bounds(given.low_T or 0.0, high)

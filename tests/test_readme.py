@@ -24,7 +24,7 @@ def _readings() -> list[tuple[str, float, float, None]]:
 
 def test_the_python_example_runs_and_prints_estimates(capsys) -> None:
     text = (Path(__file__).parent.parent / "README.md").read_text(encoding="utf-8")
-    block = re.search(r"```python\n(.*?)```", text, re.S)
+    block = re.search(r"```python\n(.*?)```", text, re.DOTALL)
     assert block is not None
     names: dict[str, object] = {"readings": _readings()}
     exec(compile(block[1], "README.md", "exec"), names)  # noqa: S102

@@ -66,6 +66,13 @@ def fit_cautions(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
             "what is configured as longitudinal grows linearly from zero with the field and what "
             "is configured as Hall does not: the two are exchanged, in wiring or configuration.",
         )
+    rho_0 = facts.fit.rho_0
+    if rho_0 is not None and rho_0.value < -rho_0.half_width:
+        yield Caution(
+            "longitudinal_negative",
+            "the longitudinal resistivity is negative: its two leads are exchanged, or the phase "
+            "is off by half a turn; set sign = -1 for it.",
+        )
     yield from _sweeps(facts, setup.target)
     yield from _offset(facts)
     if facts.shapes.ripples:
