@@ -47,6 +47,8 @@ def _hall_bar(one: Estimate) -> dict[str, Any]:
             for name in one.transport.__dataclass_fields__
             if name != "sheet_density_per_m2"
         }
+        if one.field_T:
+            derived["filling_factor"] = one.transport.filling_factor(one.field_T)
     return {
         "sheet_density_per_m2": _number(one.sheet_density),
         "mobility_m2_per_V_s": _number(one.mobility),

@@ -70,8 +70,15 @@ def left_to_target(bar: BarSummary) -> str:
     seconds, field_T = bar.get("time_to_target_s"), bar.get("field_to_target_T")
     if bar.verdict == "stable" or seconds is None:
         return ""
-    where = "" if field_T is None else f", near {field_T:.2f} T"
+    where = "" if field_T is None else f", near {field_T:.2f} T{_range(bar)}"
     return f"about {duration(seconds)} left to the target{where}"
+
+
+def _range(bar: BarSummary) -> str:
+    low, high = bar.get("field_to_target_low_T"), bar.get("field_to_target_high_T")
+    if low is None:
+        return ""
+    return f" ({low:.2f} to {high:.2f} T)" if high is not None else f" ({low:.2f} T or later)"
 
 
 def _bar_lines(name: str, bar: BarSummary, summary: Summary) -> Iterator[str]:
@@ -84,8 +91,24 @@ def _bar_lines(name: str, bar: BarSummary, summary: Summary) -> Iterator[str]:
     low, high = bar.get("window_low_T"), bar.get("window_high_T")
     window = "" if low is None or high is None else f", window {low:.3f} to {high:.3f} T"
     yield f"  carriers {bar.get('carriers') or 'not known yet'}, {points} field points{window}"
+    yield from _quick_lines(bar)
     for code, sentence in bar.cautions.items():
         yield f"  caution {code}: {sentence}"
+
+
+def _quick_lines(bar: BarSummary) -> Iterator[str]:
+    """The two quick readings of the trade, as a cross-check beside the fit (common practice)."""
+    readings = (
+        ("quick_density_per_m2", 1e15, "× 10¹⁵ m⁻² where the Hall resistivity is 6.25 kOhm"),
+        ("quick_mobility_m2_per_V_s", 1.0, "m²/Vs where rho_xx = rho_xy"),
+    )
+    found = [
+        f"{bar.get(column) / unit:.3g} {where}"
+        for column, unit, where in readings
+        if bar.get(column) is not None
+    ]
+    if found:
+        yield f"  read off the curves {'; '.join(found)}"
 
 
 def _verdict(bar: BarSummary, timed: bool) -> str:
