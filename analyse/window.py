@@ -4,8 +4,9 @@ Segments are sorted by the magnitude of field. Beginning with those next to zero
 must agree with the fit to the ones before: its mean within the noise or within a tolerance, and
 its scatter no more than theirs. The window ends below the first one that does not (oscillations,
 plateaus, a bend). If what lies next to zero is itself apart (a peak or dip around zero field), a
-later beginning that leads further is taken, for the longitudinal resistivity alone: the Hall line
-holds there.
+later beginning that leads further is taken, and what then still lies below and does not agree with
+what lies above is left out; for the longitudinal resistivity alone, since the Hall line holds there,
+and only far below the field where rho_xx = rho_xy.
 """
 
 from __future__ import annotations
