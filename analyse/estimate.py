@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from analyse.drude import Transport
 from analyse.numbers import Number
 from analyse.quick import QuickReading
+from analyse.sweeps import Sweep
 
 
 @dataclass(frozen=True)
@@ -78,4 +79,4 @@ class Estimate:
     field_to_target_T: float | None
     field_to_target_range_T: tuple[float | None, float | None]
     cautions: tuple[Caution, ...]
-    sweep: int
+    sweeps: tuple[Sweep, ...]

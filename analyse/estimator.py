@@ -156,7 +156,7 @@ class Estimator:
         self._last_rate = pair.rate_T_per_s
         self._point.fields.append(pair.field_T)
         self._point.rho[pair.role].append(pair.rho_ohm)
-        kappa = self._fit.add(self._sweeps.add(pair.field_T), pair)
+        kappa = self._fit.add(self._sweeps.add(pair.time_s, pair.field_T), pair)
         self._drift_watch.add(pair)
         if pair.role == "hall":
             self._field_watch.add(pair, kappa)
@@ -209,7 +209,7 @@ class Estimator:
             transport(density.value, mobility.value, self.bar.carrier_gas)
             if density and mobility else None,
             fitted_lines(fit) + self._systematic, "converging" if missing else "stable", missing, self._stable_at,
-            *ahead, cautions, self._sweeps.number,
+            *ahead, cautions, self._sweeps.all(),
         )
 
     def _cautions(

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator
+from dataclasses import asdict
 from typing import Any
 
 from acquire.config.rig import Rig
@@ -75,6 +76,7 @@ def _hall_bar(one: Estimate) -> dict[str, Any]:
              "scattering_time_relative": line.scattering_time}
             for line in one.budget
         ],
+        "sweeps": [asdict(sweep) for sweep in one.sweeps],
     }
 
 
@@ -84,7 +86,7 @@ _NOTHING: dict[str, Any] = {
     "stable_at": None, "cautions": [], "waiting_for": ["no field point is complete yet"],
     "rho_0_ohm": None, "hall_slope_ohm_per_T": None, "hall_offset_ohm": None,
     "quick_density_per_m2": None, "quick_mobility_m2_per_V_s": None, "derived": None,
-    "budget": [],
+    "budget": [], "sweeps": [],
 }
 
 

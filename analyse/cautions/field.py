@@ -9,6 +9,7 @@ from dataclasses import dataclass
 
 from analyse.estimate import Caution
 from analyse.pairing import Pair
+from analyse.scatter import scatter_about_line
 from analyse.setup import Ramp
 
 MEMORY = 60
@@ -50,6 +51,7 @@ class FieldWatch:
         self._fastest = 0.0
         self._delay_s = 0.0
         self._farthest_T = 0.0
+        self._move: Move | None = None
 
     def add(self, pair: Pair, kappa: float) -> None:
         """Take a usable Hall pair with its inflation by the filter."""
@@ -62,13 +64,16 @@ class FieldWatch:
                 return
             kappa = min(kappa, 2.0 / SPACING)
         self._kappa = kappa
+        self._move = None
         self._pairs.append((pair.time_s, pair.field_T, pair.rho_ohm))
 
     def cautions(self, slope_ohm_per_T: float | None) -> Iterator[Caution]:
         """Cautions that hold now. The slope is None while it is not known."""
         if len(self._pairs) < MEMORY:
             return
-        move = last_move(list(self._pairs), self._kappa)
+        if self._move is None:
+            self._move = last_move(list(self._pairs), self._kappa)
+        move = self._move
         rate = abs(move.field_T) / move.seconds if move.seconds > 0 else 0.0
         self._fastest = max(self._fastest, rate)
         lag_T = rate * self._delay_s
@@ -105,8 +110,8 @@ def last_move(pairs: list[tuple[float, float, float]], kappa: float) -> Move:
     """How field and resistivity moved from the first ``EDGE`` of the pairs to the last."""
     one, two = pairs[:EDGE], pairs[-EDGE:]
     (t1, b1, r1), (t2, b2, r2) = _means(one), _means(two)
-    jitter = max(_scatter([(t, b) for t, b, _ in part]) for part in (one, two))
-    noise = max(_scatter([(t, r) for t, _, r in part]) for part in (one, two))
+    jitter = max(scatter_about_line([(t, b) for t, b, _ in part]) for part in (one, two))
+    noise = max(scatter_about_line([(t, r) for t, _, r in part]) for part in (one, two))
     whole = sum(r for _, _, r in pairs) / len(pairs)
     return Move(
         t2 - t1, b2 - b1, jitter * math.sqrt(2 / EDGE), r2 - r1,
@@ -117,14 +122,3 @@ def last_move(pairs: list[tuple[float, float, float]], kappa: float) -> Move:
 def _means(part: list[tuple[float, float, float]]) -> tuple[float, float, float]:
     n = len(part)
     return sum(p[0] for p in part) / n, sum(p[1] for p in part) / n, sum(p[2] for p in part) / n
-
-
-def _scatter(points: list[tuple[float, float]]) -> float:
-    """Standard deviation about a straight line."""
-    n = len(points)
-    t0, y0 = sum(t for t, _ in points) / n, sum(y for _, y in points) / n
-    stt = sum((t - t0) ** 2 for t, _ in points)
-    sty = sum((t - t0) * (y - y0) for t, y in points)
-    syy = sum((y - y0) ** 2 for _, y in points)
-    left = syy - sty * sty / stt if stt > 0 else syy
-    return math.sqrt(max(0.0, left) / (n - 2))
