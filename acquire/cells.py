@@ -15,7 +15,7 @@ import math
 import operator
 from collections.abc import Callable, Iterable, Iterator
 
-from acquire.errors import JournalError
+from acquire.errors import JournalError, RowError
 from acquire.tables import Cell, Row, Table
 
 LONGEST_LINE = 65_536  # bytes; the csv module reads cells of up to 131 072 characters
@@ -38,22 +38,22 @@ class RowCodec:
     def canonical(self, cells: Row) -> Row:
         """The cells of a row without its ``seq`` as they will read back.
 
-        Raises JournalError for a wrong number of cells, a wrong kind, nan or infinity.
+        Raises RowError for a wrong number of cells, a wrong kind, nan or infinity.
         """
         if len(cells) != len(self._clean):
             wanted = f"{len(self._clean)} cells after seq, got {len(cells)}"
-            raise JournalError(f"{self.table.path}: a row takes {wanted}.")
+            raise RowError(f"{self.table.path}: a row takes {wanted}.")
         try:
             return tuple([clean(cell) for clean, cell in zip(self._clean, cells)])
         except (TypeError, ValueError, OverflowError):
-            raise JournalError(f"{self.table.path}: {self._culprit(cells)}.") from None
+            raise RowError(f"{self.table.path}: {self._culprit(cells)}.") from None
 
     def line(self, row: Row) -> bytes:
-        """One line of CSV for a canonical row with its ``seq``. Raises JournalError if too long."""
+        """One line of CSV for a canonical row with its ``seq``. Raises RowError if too long."""
         line = (",".join([_text(cell) for cell in row]) + "\n").encode("utf-8")
         if len(line) > LONGEST_LINE:
             size = f"{len(line)} bytes, at most {LONGEST_LINE}"
-            raise JournalError(f"{self.table.path}: a row is too long ({size}).")
+            raise RowError(f"{self.table.path}: a row is too long ({size}).")
         return line
 
     def rows(self, lines: Iterable[str], first: int) -> Iterator[Row]:

@@ -9,6 +9,7 @@ RampsideError                 its text says what happened and what to do next
     BadReply                  a reply that is not what was configured
     SessionLost               the line broke
   JournalError                acquire.journal: a table on disk can't be written or read
+    RowError                  a row that its table does not take, whatever the disk
   BusError                    acquire.bus: an address can't be bound or used
   TableError                  acquire.table: a table measured elsewhere can't be used
   RunError                    acquire.run_folder: a folder that is not a run
@@ -47,7 +48,18 @@ class SessionLost(InstrumentError):
 
 
 class JournalError(RampsideError):
-    """A table on disk can't be written or read."""
+    """A table on disk can't be written or read.
+
+    ``reason`` says it in a few words (``disk full``) where the disk is to blame, else it is empty.
+    """
+
+    def __init__(self, text: str, reason: str = "") -> None:
+        super().__init__(text)
+        self.reason = reason
+
+
+class RowError(JournalError):
+    """A row that its table does not take; tried again it would be refused again."""
 
 
 class BusError(RampsideError):

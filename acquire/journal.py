@@ -26,6 +26,8 @@ from acquire.tables import Row, Table
 
 __all__ = ["Journal", "Piece", "read_rows"]
 
+_FULL = {errno.ENOSPC: "disk full", errno.EDQUOT: "disk full: the quota is used up"}
+
 
 @dataclass(frozen=True)
 class Piece:
@@ -208,7 +210,8 @@ class Journal(Closing):
 
     def _error(self, what: str, error: OSError) -> JournalError:
         reason = error.strerror or str(error)
-        return JournalError(f"{self.path}: {what} ({reason}); see to the disk, then try again.")
+        text = f"{self.path}: {what} ({reason}); see to the disk, then try again."
+        return JournalError(text, _FULL.get(error.errno or 0, reason[:1].lower() + reason[1:]))
 
 
 def _scan(file: BinaryIO, path: Path, header: bytes) -> tuple[int, array[int]]:

@@ -23,17 +23,16 @@ from acquire.child_process import Child, child_parser
 from acquire.clock import RunClock
 from acquire.config.reader import ReaderSection, Setting
 from acquire.dialogue import Asked, Dialogue
-from acquire.errors import BadReply, InstrumentError, JournalError, RunError
+from acquire.errors import BadReply, InstrumentError, RunError
 from acquire.instrument import Instrument
 from acquire.reader_output import live_run_for, reader_output
 from acquire.readings import reading_table
-from acquire.recorder import Recorder
+from acquire.recorder import RETRY_S, Recorder
 from acquire.run_folder import RunFolder, open_run
 from acquire.stop import Stop, Stopped
 
 SHORTEST_PAUSE_S, LONGEST_PAUSE_S = 0.5, 10.0
 SILENT_ROW_S = 1.0  # a reader without an instrument says so at least so often
-RETRY_RECORDING_S = 1.0
 LONGEST_SLEEP_S = 0.2  # so soon it is seen that the parent has died
 
 
@@ -55,7 +54,8 @@ class Reader:
     followed by attempts to reopen with growing pauses. Until one succeeds, a row says once a
     second (or once a period, if that is longer) that there is no answer.
 
-    When a row can't be recorded nothing is asked until one can be again.
+    What can't be recorded waits (see :mod:`acquire.recorder`). When too much does, the session is
+    closed and nothing is asked until there is room; then identity and settings are asked anew.
 
     Parameters
     ----------
@@ -91,30 +91,29 @@ class Reader:
 
     def step(self) -> float:
         """Do what is due and return when the next thing is, in seconds of the run."""
-        if self._now() < self._due:
-            return self._due
-        try:
-            if self._recorder.lost:
-                self._record_again()
+        if self._now() >= self._due:
+            if self._recorder.full:
+                self._pause()
             elif self.connected:
                 self._read()
             else:
                 self._reconnect()
-            self._recorder.note()
-        except JournalError:  # told by the recorder
-            self._due = self._now() + RETRY_RECORDING_S
-        return self._due
+        self._recorder.step()
+        return min(self._due, self._recorder.retry_at)
 
     def end(self) -> None:
-        """Close the instrument and publish that nothing follows. Raises no JournalError."""
+        """Close the instrument and publish that nothing follows."""
         self.connected = False
         self._dialogue.close()
-        with suppress(JournalError):  # told by the recorder
-            self._recorder.row("end")
+        self._recorder.end()
+
+    def _pause(self) -> None:
+        """Ask nothing while nothing more can be kept; afterwards it is opened anew."""
+        self.connected, self._to_ask = False, []
+        self._dialogue.close()
+        self._due = self._try_at = self._silent_at = self._now() + RETRY_S
 
     def _read(self) -> None:
-        if not self._told:
-            self._tell()
         began = self._now()
         try:
             reply = self._dialogue.reading()
@@ -194,13 +193,8 @@ class Reader:
             self._tell()
 
     def _tell(self) -> None:
-        self._told = False
         self._recorder.settings(self._dialogue.identity, self._dialogue.settings)
         self._told = True
-
-    def _record_again(self) -> None:
-        self._recorder.try_again()
-        self._due = self._next_slot() if self.connected else self._now()
 
 
 def run_reader(

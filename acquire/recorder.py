@@ -1,24 +1,44 @@
-"""What a reader has to tell, put on record; and what it does when that can't be done."""
+"""What a reader has to tell, put on record; and what it does when that can't be done.
+
+A row that can't be recorded is not published. It waits in memory in its turn, and so do those
+after it, up to :data:`MOST_WAITING`; once a second the first is tried again. When there is room
+again all of them are recorded and published with their own times, so that a disk that was full
+for some minutes costs no reading. Only when so many wait that memory must not take more, no
+readings are taken, and a row says afterwards from when to when, how many were due, and why.
+"""
 
 from __future__ import annotations
 
 import json
+import math
+from collections import deque
 from collections.abc import Callable, Sequence
+from dataclasses import dataclass
 from typing import Any
 
 from acquire.clock import utc_now_text
 from acquire.config.reader import ReaderSection
-from acquire.errors import JournalError, RampsideError
+from acquire.errors import JournalError, RampsideError, RowError
+from acquire.tables import Row
 
+RETRY_S = 1.0
 RETRY_NOTE_S = 10.0
+MOST_WAITING = 10_000  # rows: 200 s of a reader at 50 Hz, some 5 MB
+
+
+@dataclass(frozen=True)
+class _Waiting:
+    """The cells of a row after ``seq``; with what is known of the instrument, if it says that."""
+
+    cells: Row
+    known: dict[str, Any] | None = None
 
 
 class Recorder:
-    """Publishes the rows of one reader (see :mod:`acquire.readings`).
+    """Publishes the rows of one reader (see :mod:`acquire.readings`), each once and in order.
 
-    When a row can't be recorded, the method that was called raises JournalError, ``lost`` is
-    True, and a person is told, once. :meth:`try_again` until it has worked: the first row then
-    says from when on and why nothing was recorded.
+    No method raises JournalError. A person is told once when rows begin to wait, and once when
+    they are recorded again. Call :meth:`step` now and then, at :attr:`retry_at` at the latest.
 
     Parameters
     ----------
@@ -41,14 +61,23 @@ class Recorder:
         self._now = now_s
         self._note = note
         self._complain = complain
-        self._lost: str | None = None
+        self._waiting: deque[_Waiting] = deque()
+        self._retry_at = -math.inf
+        self._why: str | None = None  # why rows wait; None while they are recorded
+        self._full_since: float | None = None
         self._unnoted: list[dict[str, Any]] = []
-        self._note_at = now_s()
+        self._note_at = -math.inf
+        self._told_note = False
 
     @property
-    def lost(self) -> bool:
-        """Whether the last row could not be recorded."""
-        return self._lost is not None
+    def full(self) -> bool:
+        """Whether so many rows wait that no more readings are to be taken."""
+        return len(self._waiting) >= MOST_WAITING
+
+    @property
+    def retry_at(self) -> float:
+        """When :meth:`step` has something to do, in seconds of the run; inf if nothing waits."""
+        return self._retry_at if self._waiting else math.inf
 
     def row(
         self,
@@ -56,47 +85,102 @@ class Recorder:
         detail: str = "",
         values: Sequence[float | None] = (),
         took: tuple[float, float] | None = None,
-    ) -> int:
+    ) -> None:
         """Publish a row that stands for the middle of ``took`` (from, to), or for now."""
-        time_s, took_s = self._now(), None
-        if took is not None:
-            time_s, took_s = (took[0] + took[1]) / 2, took[1] - took[0]
-        cells = values or (None,) * len(self._section.values)
-        try:
-            return self._publish(time_s, took_s, status, detail, *cells)
-        except JournalError as error:
-            self._lose(error)
-            raise
+        self._add(self._cells(status, detail, values, took))
 
     def settings(self, identity: str | None, settings: object) -> None:
         """Publish who the instrument is and how it is set, and note it in ``instruments.json``."""
         known = {"identity": identity, "settings": settings}
-        time_s = self._now()
-        seq = self.row("settings", json.dumps(known), took=None)
-        entry = {"reader": self._section.name, "seq": seq, "time_s": time_s, "utc": utc_now_text()}
-        self._unnoted.append({**entry, "resource": self._section.resource, **known})
-        self.note()
+        told = {"utc": utc_now_text(), "resource": self._section.resource, **known}
+        self._add(self._cells("settings", json.dumps(known)), told)
+        self._write_notes()
 
-    def note(self) -> None:
-        """Write what has not been noted yet. It comes second to readings: if it can't be written,
-        it is tried again later."""
+    def step(self) -> None:
+        """Record what waits, if it is time to try again, and write what is to be noted."""
+        self._record()
+        self._write_notes()
+
+    def end(self) -> None:
+        """Publish that nothing follows, and try a last time to record and note what waits."""
+        self._retry_at = self._note_at = -math.inf
+        self.row("end")
+        self._write_notes()
+        if self._waiting:
+            self._complain(f"{len(self._waiting)} rows could never be recorded: {self._why}")
+
+    def _cells(
+        self,
+        status: str,
+        detail: str = "",
+        values: Sequence[float | None] = (),
+        took: tuple[float, float] | None = None,
+    ) -> Row:
+        time_s, took_s = self._now(), None
+        if took is not None:
+            time_s, took_s = (took[0] + took[1]) / 2, took[1] - took[0]
+        return (time_s, took_s, status, detail, *(values or self._nothing))
+
+    @property
+    def _nothing(self) -> Row:
+        return (None,) * len(self._section.values)
+
+    def _add(self, cells: Row, known: dict[str, Any] | None = None) -> None:
+        self._waiting.append(_Waiting(cells, known))
+        if self.full and self._full_since is None:
+            self._full_since = self._now()
+        self._record()
+
+    def _record(self) -> None:
+        """Publish what waits, in order, as far as it goes."""
+        while self._waiting and self._now() >= self._retry_at:
+            one = self._waiting[0]
+            try:
+                seq = self._publish(*one.cells)
+            except RowError as error:  # no disk will ever take it
+                self._waiting[0] = self._refused(one, error)
+                continue
+            except JournalError as error:
+                self._wait(error)
+                return
+            self._waiting.popleft()
+            if one.known is not None:
+                about = {"reader": self._section.name, "seq": seq, "time_s": one.cells[0]}
+                self._unnoted.append({**about, **one.known})
+        if self._why is not None and not self._waiting:
+            self._recorded_again(self._why)
+
+    def _refused(self, one: _Waiting, error: RowError) -> _Waiting:
+        time_s, took_s, *_ = one.cells
+        return _Waiting((time_s, took_s, "bad_reply", str(error)[:1000], *self._nothing))
+
+    def _wait(self, error: JournalError) -> None:
+        self._retry_at = self._now() + RETRY_S
+        if self._why is None:
+            self._why = str(error)
+            self._complain(
+                f"nothing can be recorded, so nothing is published; readings wait: {error}"
+            )
+
+    def _recorded_again(self, why: str) -> None:
+        self._why, self._retry_at = None, -math.inf
+        since, self._full_since = self._full_since, None
+        self._complain("readings are recorded again")
+        if since is not None:
+            now = self._now()
+            due = math.floor((now - since) / self._section.period_s)
+            span = f"from {since:.3f} to {now:.3f} s"
+            self.row("no_answer", f"no readings were taken {span}, {due} were due: {why}")
+
+    def _write_notes(self) -> None:
+        """It comes second to readings: what can't be written is tried again later."""
         while self._unnoted and self._now() >= self._note_at:
             try:
                 self._note(self._unnoted[0])
             except RampsideError as error:
-                self._complain(f"tried again in {RETRY_NOTE_S:g} s: {error}")
-                self._note_at = self._now() + RETRY_NOTE_S
+                if not self._told_note:
+                    self._complain(f"tried again every {RETRY_NOTE_S:g} s: {error}")
+                self._note_at, self._told_note = self._now() + RETRY_NOTE_S, True
                 return
+            self._told_note = False
             del self._unnoted[0]
-
-    def try_again(self) -> None:
-        """Publish the row about what was lost. Raises JournalError if that can't be done yet."""
-        assert self._lost is not None
-        self.row("no_answer", self._lost)
-        self._lost = None
-        self._complain("readings are recorded again")
-
-    def _lose(self, error: JournalError) -> None:
-        if self._lost is None:
-            self._lost = f"not recorded from {self._now():.3f} s on: {error}"
-            self._complain(f"nothing can be recorded, so nothing is published: {error}")

@@ -24,7 +24,8 @@ BETWEEN_TRIES_S = 0.5
 class EventSender:
     """Sends events to the inbox at ``address``, one after the other, from a thread of its own.
 
-    ``ask`` is :func:`acquire.bus.ask`: it raises BusError where no reply comes in time.
+    ``ask`` is :func:`acquire.bus.ask`: it raises BusError where no reply comes in time. A reply
+    with ``again`` says that the event could not be written, now.
     """
 
     def __init__(self, address: str, ask: Ask) -> None:
@@ -59,10 +60,10 @@ class EventSender:
 
     def _deliver(self, message: dict[str, object]) -> None:
         while not self._closing.is_set():
-            try:
-                self._ask(self._address, message, ONE_TRY_S)
-            except BusError:
-                self._closing.wait(BETWEEN_TRIES_S)
-            else:
+            written = False
+            with suppress(BusError):
+                written = not self._ask(self._address, message, ONE_TRY_S).get("again")
+            if written:
                 self._waiting.task_done()
                 return
+            self._closing.wait(BETWEEN_TRIES_S)

@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+
+from acquire.bus import StreamHealth
 from acquire.config import Rig
 from acquire.readings import stream_of
 from acquire.tables import Row
@@ -21,6 +24,7 @@ class Progress:
         self.readings = {reader.name: 0 for reader in rig.readers}
         self.unusable = dict.fromkeys(self.readings, 0)
         self.trouble: dict[str, str] = {}
+        self.unrecorded: dict[str, str] = {}  # by stream: why its publisher can't record
         self.field_T: float | None = None
         self.field_time_s: float | None = None
         self._readers = {stream_of(name): name for name in self.readings}
@@ -36,6 +40,13 @@ class Progress:
             self.summary.add_event(row)
         else:
             self._take_reading(stream, row)
+
+    def hear(self, health: Mapping[str, StreamHealth]) -> tuple[list[str], list[str]]:
+        """Take note of who can't record. Returns the streams that no more can, and can again."""
+        now = {stream: one.trouble for stream, one in health.items() if one.trouble}
+        begun, over = sorted(now.keys() - self.unrecorded), sorted(self.unrecorded.keys() - now)
+        self.unrecorded = now
+        return begun, over
 
     def _take_reading(self, stream: str, row: Row) -> None:
         status, name = row[_STATUS], self._readers[stream]

@@ -83,7 +83,8 @@ class LineView(_Written):
 
     def show(self, progress: Progress, moment: Moment) -> None:
         """Write a line, if it is time for one."""
-        now = (progress.field_T is None, tuple(progress.trouble), tuple(moment.states.values()))
+        troubles = (*progress.trouble, *progress.unrecorded)
+        now = (progress.field_T is None, troubles, tuple(moment.states.values()))
         pause_s = LINE_EVERY_S if now == self._last else NEWS_EVERY_S
         if self._now() - self._last_s >= pause_s:
             self._last_s, self._last = self._now(), now
@@ -122,7 +123,7 @@ def line(progress: Progress, moment: Moment) -> str:
     for name, bar in progress.summary.bars.items():
         numbers = "  ".join(numbers_of(bar))
         parts.append(f"{name}: {numbers}  {_state(bar)}")
-    parts += [f"{name}: {why}" for name, why in progress.trouble.items()]
+    parts += [f"{name}: {why}" for name, why in _troubles(progress)]
     parts += [f"{name} {state}" for name, state in moment.states.items() if state != "ready"]
     return " | ".join(parts)
 
@@ -138,9 +139,15 @@ def picture(rig: Rig, progress: Progress, moment: Moment) -> RenderableType:
     parts: list[RenderableType] = [head]
     for name, bar in progress.summary.bars.items():
         parts += [_numbers(name, bar, progress.summary.confidence), *_in_the_way(bar)]
-    parts += [Text(f"{name}: {why}", "red") for name, why in progress.trouble.items()]
+    parts += [Text(f"{name}: {why}", "red") for name, why in _troubles(progress)]
     parts.append(_processes(moment))
     return Group(*parts)
+
+
+def _troubles(progress: Progress) -> list[tuple[str, str]]:
+    """What is wrong with which stream."""
+    unrecorded = [(name, f"cannot record: {why}") for name, why in progress.unrecorded.items()]
+    return [*progress.trouble.items(), *unrecorded]
 
 
 def _numbers(name: str, bar: BarSummary, confidence: float) -> Table:

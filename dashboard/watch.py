@@ -225,6 +225,17 @@ class _Watcher:
             self._news_at[stream] = time.monotonic()
             self._note_field()
         self._health = self._subscriber.health()
+        self._note_recording()
+
+    def _note_recording(self) -> None:
+        """Have in the run's events who could not record; they are written once there is room."""
+        begun, over = self.progress.hear(self._health)
+        for stream in begun:
+            why = self.progress.unrecorded[stream]
+            text = f"{stream}: cannot record, so nothing is published ({why})"
+            self._events.send("process", "cannot_record", text)
+        for stream in over:
+            self._events.send("process", "recorded_again", f"{stream}: is recorded again")
 
     def _note_field(self) -> None:
         time_s, field_T = self.progress.field_time_s, self.progress.field_T

@@ -426,7 +426,7 @@ def test_a_closed_publisher_takes_nothing(journal):
     assert journal.next_seq == 0
 
 
-def test_what_can_not_be_recorded_is_not_published(publisher, monkeypatch):
+def test_what_can_not_be_recorded_is_not_published_and_told(publisher, monkeypatch, wait_for):
     def full(fd, data):
         raise OSError(errno.ENOSPC, "No space left on device")
 
@@ -436,10 +436,18 @@ def test_what_can_not_be_recorded_is_not_published(publisher, monkeypatch):
             patch.setattr(os, "write", full)
             with pytest.raises(JournalError, match="No space left"):
                 publisher.publish(2, "lost", 2)
+            # Nothing comes, so it is asked whether anything is new; the answer says why not.
+            wait_for(lambda: told_trouble(subscriber) == "disk full", "it is told")
         with pytest.raises(JournalError, match="for the column x"):
             publisher.publish(2, "wrong", float("nan"))
         assert publisher.publish(3, "recorded", 3) == first
         assert receive(subscriber, 1) == [(first, 3.0, "recorded", 3.0)]
+        assert told_trouble(subscriber) == ""
+
+
+def told_trouble(subscriber):
+    subscriber.receive(0.0)
+    return subscriber.health()["a"].trouble
 
 
 def test_the_journal_is_synced_within_a_second_and_a_failure_is_told(publisher, monkeypatch):

@@ -148,6 +148,15 @@ def test_a_number_from_nowhere_neither_stops_nor_floods_the_publisher():
     assert progress.take_message(message(0), 0.2) == [row(0)]
 
 
+def test_a_publisher_that_cannot_record_is_known_by_its_answers_until_it_publishes():
+    one = started(0, 3)
+    one.ask(0.0)
+    one.take_answer(pack(Answer("run", "a", 3, 3, 3, b"", "disk full")), 0.0)
+    assert one.health().trouble == "disk full"
+    one.take_message(message(3), 1.0)
+    assert one.health().trouble == ""
+
+
 def test_a_publisher_that_has_lost_rows_is_noticed():
     progress = started(count=5)
     assert progress.take_answer(answer(progress.ask(1.0), 3), 1.0) == []

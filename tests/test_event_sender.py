@@ -14,10 +14,11 @@ from dashboard.event_sender import EventSender
 
 
 class Estimator:
-    """Answers from the ``deaf_for``-th question on."""
+    """Answers from the ``deaf_for``-th question on, and has room from the ``full_for``-th on."""
 
-    def __init__(self, deaf_for: int = 0) -> None:
+    def __init__(self, deaf_for: int = 0, full_for: int = 0) -> None:
         self.deaf_for = deaf_for
+        self.full_for = full_for
         self.asked: list[dict[str, object]] = []
         self.answered: list[dict[str, object]] = []
         self.heard = threading.Condition()
@@ -29,6 +30,8 @@ class Estimator:
             self.heard.notify_all()
             if len(self.asked) <= self.deaf_for:
                 raise BusError("no reply")
+            if len(self.asked) <= self.full_for:
+                return {"ok": False, "error": "events.csv: no space", "again": True}
             self.answered.append(message)
             return {"ok": True}
 
@@ -85,3 +88,14 @@ def test_over_a_real_inbox() -> None:
         reply({"ok": True})
         assert (message["kind"], message["code"]) == ("process", "died")
         assert sender.close(2.0) == 0
+
+
+def test_sent_again_until_there_is_room_for_it(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(module, "BETWEEN_TRIES_S", 0.001)
+    estimator = Estimator(full_for=3)
+    sender = EventSender("tcp://127.0.0.1:1", estimator.ask)
+    sender.send("process", "cannot_record", "readings/magnet: disk full")
+    estimator.wait(1)
+    assert sender.close() == 0
+    assert len({message["id"] for message in estimator.asked}) == 1
+    assert len(estimator.asked) == 4

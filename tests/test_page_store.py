@@ -8,10 +8,11 @@ from pathlib import Path
 import pytest
 from made_run import MadeRun, config, estimates, ramp
 
+from acquire.bus import StreamHealth
 from acquire.config import parse
 from acquire.errors import JournalError
 from acquire.journal import Journal
-from acquire.readings import Reading
+from acquire.readings import Reading, stream_of
 from acquire.tables import SEQ, TIME, Column, Row, Table
 from analyse.estimate_table import ESTIMATES
 from dashboard.page import store as store_module
@@ -141,6 +142,21 @@ def test_cells_that_are_not_known_are_no_points() -> None:
     assert (curves.xx.shape, curves.xy.shape) == ((2, 1), (2, 0))
     assert curves.number("mobility_m2_per_V_s") is None
     assert curves.text("verdict") == ""
+
+
+def test_a_stream_that_cannot_be_recorded_says_why() -> None:
+    store = RunStore("run", RIG)
+    store.begin("live", lambda: 5.0)
+    names = [line.name for line in store.run().streams]
+    heard = StreamHealth(3, 4.0, 0, 0)
+    health = dict.fromkeys((*map(stream_of, names[:-2]), "estimates", "events"), heard)
+    health[stream_of("magnet")] = StreamHealth(3, 4.0, 0, 0, 0, "disk full")
+    store.hear(health, 4.0)
+    lines = {line.name: line for line in store.run().streams}
+    assert (lines["magnet"].level, lines["magnet"].state) == ("warning", "cannot record: disk full")
+    store.hear(dict.fromkeys(health, heard), 4.0)
+    lines = {line.name: line for line in store.run().streams}
+    assert lines["magnet"].state != "cannot record: disk full"
 
 
 def test_events_are_kept_newest_first_and_bounded() -> None:

@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import json
 import os
+import re
 import signal
 import subprocess
 import sys
 import threading
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
+from itertools import pairwise
 from pathlib import Path
 from typing import Any
 
@@ -311,23 +313,52 @@ def test_a_setting_that_fails_costs_the_session_and_is_told() -> None:
     assert bench.rows[-1][3] == "ok"
 
 
-def test_a_full_disk_stops_publishing_and_asking_until_there_is_room() -> None:
+def test_a_full_disk_stops_publishing_and_costs_no_reading() -> None:
     bench = Bench()
     reader = bench.reader()
     bench.run(reader, 1.0)
-    before, asked = len(bench.rows), len(bench.asked)
-    bench.disk = JournalError("readings/lockin.csv: no space")
+    before = len(bench.rows)
+    bench.disk = JournalError("readings/lockin.csv: no space", "disk full")
     bench.run(reader, 5.0)
     assert len(bench.rows) == before
-    assert len(bench.asked) == asked + 1
     assert len(bench.words) == 1
     assert "nothing can be recorded" in bench.words[0]
     bench.disk = None
     bench.run(reader, 2.0)
     assert bench.words[1:] == ["readings are recorded again"]
-    assert bench.statuses()[before] == "no_answer"
-    assert "not recorded from 101.0" in bench.rows[before][4]
-    assert bench.statuses()[before + 1] == "ok"
+    assert set(bench.statuses()[before:]) == {"ok"}
+    times = [row[1] for row in bench.rows[before - 1 :]]
+    assert all(0.1 < b - a < 0.3 for a, b in pairwise(times)), "no reading is missing"
+    assert in_order(bench)
+
+
+def test_a_disk_full_for_longer_than_memory_lasts_is_said_with_how_many_and_why(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    monkeypatch.setattr("acquire.recorder.MOST_WAITING", 10)
+    bench = Bench()
+    reader = bench.reader()
+    bench.run(reader, 1.0)
+    before = len(bench.rows)
+    bench.disk = JournalError("readings/lockin.csv: no space", "disk full")
+    bench.run(reader, 60.0)
+    asked = len(bench.asked)
+    assert not bench.is_open
+    bench.run(reader, 60.0)
+    assert len(bench.asked) == asked, "nothing is asked that can't be kept"
+    bench.disk = None
+    bench.answers["T?"] = "10"  # changed meanwhile
+    bench.run(reader, 5.0)
+    assert bench.statuses()[before : before + 13] == ["ok"] * 10 + ["no_answer", "settings", "ok"]
+    gap = bench.rows[before + 10]
+    span = re.fullmatch(
+        r"no readings were taken from (.*) to (.*) s, (.*) were due: .*no space", gap[4]
+    )
+    assert span is not None, gap
+    began, ended, due = map(float, span.groups())
+    assert began == pytest.approx(bench.rows[before + 9][1], abs=0.1)
+    assert ended == pytest.approx(gap[1], abs=0.01)
+    assert due == pytest.approx(117 / 0.2, abs=10)
     assert in_order(bench)
 
 
@@ -338,8 +369,8 @@ def test_settings_that_could_not_be_recorded_come_when_there_is_room() -> None:
     assert (bench.rows, bench.notes) == ([], [])
     bench.disk = None
     bench.run(reader, 2.0)
-    assert bench.statuses()[:3] == ["no_answer", "settings", "ok"]
-    assert len(bench.notes) == 1
+    assert bench.statuses()[:2] == ["settings", "ok"]
+    assert [note["seq"] for note in bench.notes] == [0]
 
 
 def test_a_full_disk_and_an_instrument_that_is_off_end_in_reading() -> None:

@@ -18,6 +18,7 @@ from two_bars import CONFIG, interleaved, rig, rows
 
 from acquire.bus import Publisher, Subscriber, ask, free_address, free_endpoints
 from acquire.cells import RowCodec
+from acquire.errors import JournalError
 from acquire.journal import Journal
 from acquire.readings import Reading, reading_table, stream_of
 from acquire.run_folder import RunFolder, create_run
@@ -26,7 +27,7 @@ from acquire.tables import Row
 from analyse.estimate_table import ESTIMATES, EVENTS
 from analyse.replay import RowMaker, merge_by_time, replay_readings
 from analyse.row_maker import DETERMINED
-from analyse.service import ID, KIND, Output, Service, main, run_service
+from analyse.service import ID, KIND, RETRY_S, Output, Service, main, run_service
 
 READERS = {reader.name: reading_table(reader.name, reader) for reader in rig().readers}
 FINISH = {"kind": "run", "code": "finish"}
@@ -53,6 +54,9 @@ class Desk:
 
     def __init__(self, tables: dict[str, list[Row]] | None = None, now_s: float = 7.0) -> None:
         self.tables = {"estimates": [], "events": []} if tables is None else tables
+        self.full = False
+        self.words: list[str] = []
+        self.now = now_s
         written = {name: list(known) for name, known in self.tables.items()}
         self.service = Service(
             RowMaker(rig()),
@@ -62,14 +66,17 @@ class Desk:
                 lambda row: row[KIND] in DETERMINED,
             ),
             self._publish("events"),
-            lambda: now_s,
+            lambda: self.now,
             written["events"],
+            self.words.append,
         )  # fmt: skip
 
     def _publish(self, name: str) -> Callable[[Row], None]:
         codec = RowCodec({"estimates": ESTIMATES, "events": EVENTS}[name])
 
         def publish(cells: Row) -> None:
+            if self.full:
+                raise JournalError(f"{name}.csv: no space", "disk full")
             self.tables[name].append((len(self.tables[name]), *codec.canonical(cells)))
 
         return publish
@@ -170,6 +177,40 @@ def test_killed_anywhere_and_started_again(whole: dict[str, list[Row]], share: f
     assert again.determined() == whole
     notes = [row[ID] for row in again.tables["events"] if row[KIND] == "note"]
     assert notes.count("2") == 1
+
+
+def test_a_full_disk_delays_estimates_and_events_and_changes_none(
+    whole: dict[str, list[Row]]
+) -> None:
+    desk, readings = Desk(), list(merge_by_time(rows()))
+    desk.take(readings[:500])
+    before = {name: list(known) for name, known in desk.tables.items()}
+    desk.full = True
+    taken = 500
+    while not desk.service.behind:
+        desk.take(readings[taken : taken + 1])
+        taken += 1
+    note = {"kind": "note", "code": "n", "text": "while full", "id": "1"}
+    reply = desk.request(**note)
+    assert (reply["ok"], reply["again"]) == (False, True)
+    assert "no space" in reply["error"]
+    reply = desk.request(**FINISH)
+    assert (reply["ok"], reply["again"]) == (False, True)
+    assert desk.tables == before
+    assert len(desk.words) == 1
+    assert "nothing is published" in desk.words[0]
+    desk.full = False
+    desk.service.step()
+    assert desk.tables == before, "not before its time"
+    desk.now += RETRY_S
+    desk.service.step()
+    assert not desk.service.behind
+    assert desk.words[1:] == ["estimates and events are recorded again"]
+    assert desk.request(**note)["ok"]
+    desk.take(readings[taken:])
+    assert desk.request(**FINISH)["differing"] == 0
+    assert desk.determined() == whole
+    assert [row[ID] for row in desk.tables["events"] if row[KIND] == "note"] == ["1"]
 
 
 def test_a_row_that_was_written_otherwise_is_told() -> None:

@@ -8,11 +8,12 @@ from collections.abc import Callable
 import pytest
 from rich.console import Console
 
+from acquire.bus import StreamHealth
 from acquire.config import Rig, parse
 from acquire.readings import stream_of
 from acquire.tables import Cell
 from dashboard.progress import Progress
-from dashboard.terminal import LineView, LiveView, open_view, printable
+from dashboard.terminal import LineView, LiveView, line, open_view, printable
 from dashboard.watch import Moment
 
 CONFIG = b"""
@@ -142,3 +143,13 @@ def test_a_closed_terminal_stops_nothing(
 def test_control_characters_do_nothing() -> None:
     assert printable("a\x1b[2Jb\nc\x07") == "a\\x1b[2Jb\nc\\x07"
     assert printable("µ ± ●") == "µ ± ●"
+
+
+def test_who_cannot_record_is_shown_until_it_can() -> None:
+    progress = Progress("run", parse(CONFIG))
+    good, bad = StreamHealth(3, 1.0, 0, 0), StreamHealth(3, 1.0, 0, 0, 0, "disk full")
+    assert progress.hear({"events": good}) == ([], [])
+    assert progress.hear({"events": good, "readings/magnet": bad}) == (["readings/magnet"], [])
+    assert "readings/magnet: cannot record: disk full" in line(progress, MOMENT)
+    assert progress.hear({"events": good, "readings/magnet": good}) == ([], ["readings/magnet"])
+    assert "cannot record" not in line(progress, MOMENT)

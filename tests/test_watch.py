@@ -162,6 +162,36 @@ def test_any_process_killed_in_mid_ramp_changes_nothing(
             ), (role, code, events)
 
 
+def test_a_full_disk_is_told_everywhere_and_costs_nothing(
+    watch: Running, bench: RampBench, tmp_path: Path, wait_for: Callable[..., None]
+) -> None:
+    """Files that may not grow stand for the disk: the system refuses a write in the same place."""
+    wait_for(lambda: bench.field_T > 0.02, "the ramp has begun")
+    full = [watch.children()[name] for name in ("magnet", "analyse.service")]
+    for process in full:
+        process.rlimit(psutil.RLIMIT_FSIZE, (0, psutil.RLIM_INFINITY))
+    watch.wait_for("readings/magnet: cannot record: file too large")
+    watch.wait_for("reader magnet: nothing can be recorded, so nothing is published")
+    full[0].rlimit(psutil.RLIMIT_FSIZE, (psutil.RLIM_INFINITY, psutil.RLIM_INFINITY))
+    watch.wait_for("reader magnet: readings are recorded again")
+    watch.wait_for("estimates: cannot record: file too large")
+    watch.wait_for("estimator: nothing can be recorded, so nothing is published")
+    full[1].rlimit(psutil.RLIMIT_FSIZE, (psutil.RLIM_INFINITY, psutil.RLIM_INFINITY))
+    watch.wait_for("estimator: estimates and events are recorded again")
+    run = open_run(watch.run)
+
+    def told() -> set[tuple[object, ...]]:
+        return {(row[4], str(row[5]).partition(":")[0]) for row in run.rows(EVENTS)}
+
+    wanted = {("cannot_record", "readings/magnet"), ("recorded_again", "readings/magnet")}
+    wait_for(lambda: told() >= {*wanted, ("recorded_again", "estimates")}, "events say it")
+    assert watch.end()[0] == 0
+    assert_whole(watch.run, tmp_path)
+    rows = list(run.rows(reading_tables(run.rig)["readings/magnet"]))
+    assert {row[3] for row in rows} == {"settings", "ok", "end"}, "no reading was lost"
+    assert "started again" not in watch.text
+
+
 def test_no_orphan_when_the_watch_itself_is_killed(
     watch: Running, tmp_path: Path, wait_for: Callable[..., None]
 ) -> None:

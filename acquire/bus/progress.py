@@ -27,7 +27,8 @@ class StreamHealth:
     ``last_heard_monotonic``: ``time.monotonic()`` when the publisher last proved that it lives,
     by a row or an answer; None before. ``filled``: rows got by asking. ``refused``: messages
     dropped because they were malformed or of another run. ``rewound``: answers of a publisher
-    that had fewer rows than were delivered (its last second went with a power cut).
+    that had fewer rows than were delivered (its last second went with a power cut). ``trouble``:
+    why the publisher can't record, and so not publish, what it has; empty while it can.
     """
 
     last_seq: int
@@ -35,6 +36,7 @@ class StreamHealth:
     filled: int
     refused: int
     rewound: int = 0
+    trouble: str = ""
 
 
 class StreamProgress:
@@ -55,11 +57,13 @@ class StreamProgress:
         self._silence_s = FIRST_SILENCE_S
         self._heard: float | None = None
         self._filled = self._refused = self._rewound = 0
+        self._trouble = ""
 
     def health(self) -> StreamHealth:
         """What is known now."""
         last = -1 if self._next is None else self._next - 1
-        return StreamHealth(last, self._heard, self._filled, self._refused, self._rewound)
+        counts = self._filled, self._refused, self._rewound
+        return StreamHealth(last, self._heard, *counts, self._trouble)
 
     def next_question(self) -> float:
         """From when on a question is due; -inf if at once."""
@@ -92,7 +96,7 @@ class StreamProgress:
         except JournalError:
             self._refused += 1
             return []
-        self._heard = now
+        self._heard, self._trouble = now, ""
         self._silence_s = SILENCE_S
         if message.seq == self._next:
             return self._deliver([row])
@@ -118,6 +122,7 @@ class StreamProgress:
             self._refused += 1
             return []
         self._heard, self._asked, self._in_vain = now, None, False
+        self._trouble = answer.trouble
         self._silence_s = min(2 * self._silence_s, SILENCE_S)
         if self._next is None:
             self._next = answer.first

@@ -14,7 +14,7 @@ from acquire.bus.wire import ANY_RUN, Answer, Introduction, Message, Question, p
 from acquire.closing import Closing
 from acquire.errors import BusError, JournalError
 from acquire.journal import Journal, Piece
-from acquire.tables import Cell, Table
+from acquire.tables import Cell, Row, Table
 
 SYNC_PERIOD_S = 1.0
 QUESTIONS_QUEUED = 64  # a peer; more are dropped and asked again
@@ -72,13 +72,23 @@ class Publisher(Closing):
         """
         if self._closed:
             raise BusError(f"{self._stream}: the publisher is closed.")
-        self._answerer.raise_failure()
-        row = self._journal.record(cells)
+        row = self._record(cells)
         seq = row[0]
         assert isinstance(seq, int)
         message = pack(Message(self._run_id, self._stream, seq, row[1:]))
         self._socket.send_multipart([self._topic, message], zmq.NOBLOCK)
         return seq
+
+    def _record(self, cells: Row) -> Row:
+        """The row as recorded. Whoever asks meanwhile is told if that can't be done."""
+        try:
+            self._answerer.raise_failure()
+            row = self._journal.record(cells)
+        except JournalError as error:
+            self._answerer.trouble = error.reason
+            raise
+        self._answerer.trouble = ""
+        return row
 
     def close(self) -> None:
         """Stop answering, sync, give what is queued a moment to be sent. Ends within 1 s.
@@ -107,6 +117,7 @@ class _Answerer:
         journal: Journal,
     ) -> None:
         self.refused = 0
+        self.trouble = ""  # why nothing can be recorded; written by the owner's thread
         self._run_id = introduction.run
         self._stream = stream = introduction.stream
         self._introduction = pack(introduction)
@@ -175,6 +186,6 @@ class _Answerer:
         else:
             piece = self._journal.piece(question.start)
         head = (self._run_id, self._stream, question.start)
-        answer = Answer(*head, piece.first, piece.next_seq, piece.lines)
+        answer = Answer(*head, piece.first, piece.next_seq, piece.lines, self.trouble)
         # A peer that does not take its answers loses them here; this never blocks.
         self._router.send_multipart([frames[0], pack(answer)], zmq.NOBLOCK)

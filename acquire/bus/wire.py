@@ -41,7 +41,8 @@ class Question(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_fiel
 class Answer(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_fields=True):
     """Rows from number ``first`` on, perhaps none; ``next_seq`` is how many there are in all.
 
-    ``start`` is that of the question.
+    ``start`` is that of the question. ``trouble``: why the publisher can't record, and so not
+    publish, what it has; empty while it can.
     """
 
     run: str
@@ -50,6 +51,7 @@ class Answer(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_fields
     first: Number
     next_seq: Number
     lines: bytes
+    trouble: str = ""
 
 
 class Introduction(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_fields=True):

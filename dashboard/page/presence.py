@@ -52,6 +52,7 @@ class Presence:
         self.rows = 0
         self.silence_s = max(LEAST_SILENCE_S, PERIODS * period_s)
         self.ended = False
+        self.unrecorded = ""  # why its publisher can't record, and so not publish, what it has
         self._own_clock = own_clock
         self._usable_s: float | None = None
         self._any_s: float | None = None
@@ -91,6 +92,8 @@ class Presence:
     def _state(self, now_s: float | None) -> tuple[Level, str]:
         if now_s is None or self.ended:
             return "ended", "ended"
+        if self.unrecorded:
+            return "warning", f"cannot record: {self.unrecorded}"
         if self._any_s is None:
             late = now_s > max(self.silence_s, FIRST_ROW_S)
             return ("warning" if late else "waiting"), "nothing yet"

@@ -120,8 +120,11 @@ class RunStore:
             self._state.phase, self._state.clock = phase, clock
 
     def hear(self, health: Mapping[str, StreamHealth], monotonic_s: float) -> None:
-        """Take note that the publisher of events lives: it may have nothing new for hours."""
+        """Take note of who can't record, and that the publisher of events lives: it may have
+        nothing new for hours."""
         with self._lock:
+            for stream, one in health.items():
+                self._presence[stream].unrecorded = one.trouble
             now_s, heard = self._now_s(), health[EVENTS.stream].last_heard_monotonic
             if now_s is not None and heard is not None:
                 self._presence[EVENTS.stream].heard(now_s - (monotonic_s - heard))
