@@ -4,7 +4,8 @@ RampsideError                 its text says what happened and what to do next
   ConfigError                 acquire.config: mistakes in a configuration (exit status 2)
   UsageError                  a command line that can't be obeyed (exit status 2)
   InstrumentError             acquire.instrument: an exchange with an instrument failed
-    ConnectError              nobody there, or somebody else
+    ConnectError              nobody there, or somebody who does not prove to be the instrument
+      OtherInstrument         another one than that with which the run began
     ReplyTimeout              no complete reply in time
     BadReply                  a reply that is not what was configured
     SessionLost               the line broke
@@ -33,6 +34,10 @@ class InstrumentError(RampsideError):
 
 class ConnectError(InstrumentError):
     """Nobody answers at the resource, or somebody else does."""
+
+
+class OtherInstrument(ConnectError):
+    """Another instrument answers than that with which the run began."""
 
 
 class ReplyTimeout(InstrumentError):

@@ -20,5 +20,8 @@ def identity_problem(asked: Identity, answer: str, known: str | None = None) -> 
     if not re.search(asked.pattern, answer):
         return f"{who}, which does not match {asked.pattern!r}; is it the right instrument?"
     if known is not None and answer != known:
-        return f"{who}, but the run began with {escaped(known)!r}; put that one back"
+        return (
+            f"{who}, but the run began with {escaped(known)!r}: nothing that it says is used. "
+            "Put that one back, or begin another run with the new one"
+        )
     return None

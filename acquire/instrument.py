@@ -28,10 +28,18 @@ from pyvisa.constants import BufferOperation, Parity, StatusCode, StopBits
 from pyvisa.resources import MessageBasedResource, SerialInstrument, TCPIPSocket
 
 from acquire.config.reader import ReaderSection, SerialLine
-from acquire.errors import BadReply, ConnectError, InstrumentError, ReplyTimeout, SessionLost
+from acquire.errors import (
+    BadReply,
+    ConnectError,
+    InstrumentError,
+    OtherInstrument,
+    ReplyTimeout,
+    SessionLost,
+)
 from acquire.identity import identity_problem
 from acquire.reply import escaped
 from acquire.socket_line import (
+    acknowledge_at_once,
     connection_problem,
     is_readable,
     is_writable,
@@ -86,7 +94,10 @@ class Instrument:
         problem = identity_problem(self.section.identity, identity, known_identity)
         if problem is not None:
             self.close()
-            raise ConnectError(f"{self.section.resource}: {problem}")
+            other = identity_problem(self.section.identity, identity) is None
+            raise (OtherInstrument if other else ConnectError)(
+                f"{self.section.resource}: {problem}"
+            )
         return identity
 
     def ask(self, query: str) -> str:
@@ -103,6 +114,23 @@ class Instrument:
                 self._write(query)
                 self.last_reply = self._read(query)
                 return self._text(query, self.last_reply)
+        except BaseException:
+            self.close()
+            raise
+
+    def expect_silence(self, wait_s: float = 0.0) -> None:
+        """Make sure that nothing comes unasked within that time.
+
+        An answer that was not the question's own (one that came twice, or late) leaves the true
+        one behind it, which shows here. Buses that mark the end of a message (USB, GPIB) keep
+        question and answer together by themselves; nothing is done there.
+        Raises BadReply or SessionLost, and is closed then.
+        """
+        if self._resource is None:
+            raise SessionLost("the session is not open")
+        try:
+            with self._translated("(nothing)"):
+                self._expect_silence(wait_s)
         except BaseException:
             self.close()
             raise
@@ -157,12 +185,13 @@ class Instrument:
         if self._socket is not None:
             self._socket.settimeout(self._timeout_s)  # a full line would block a write for ever
 
-    def _expect_silence(self) -> None:
+    def _expect_silence(self, wait_s: float = 0.0) -> None:
         """Bytes that wait before a question is asked answer an earlier one."""
         if self._socket is not None:
-            waiting = len(waiting_bytes(self._socket)) if is_readable(self._socket, 0.0) else 0
+            acknowledge_at_once(self._socket)
+            waiting = len(waiting_bytes(self._socket)) if is_readable(self._socket, wait_s) else 0
         elif isinstance(self._resource, SerialInstrument):
-            waiting = self._resource.bytes_in_buffer
+            waiting = self._serial_waiting(self._now() + wait_s)
         else:
             return
         if waiting:
@@ -177,6 +206,8 @@ class Instrument:
         if self._socket is not None and not is_writable(self._socket, self._timeout_s):
             raise SessionLost(f"{query!r} can't be sent: the line is blocked")
         self._resource.write_raw(data)
+        if self._socket is not None:
+            acknowledge_at_once(self._socket)
 
     def _read(self, query: str) -> bytes:
         if not _is_stream(self._resource):
@@ -206,12 +237,16 @@ class Instrument:
 
     def _read_serial(self, deadline: float) -> bytes:
         """Waits by itself: pyvisa-py counts by the wall clock, which may be set back."""
-        waiting = self._resource.bytes_in_buffer
+        size = min(self._serial_waiting(deadline), _GULP)
+        return bytes(self._resource.read_bytes(size, break_on_termchar=True)) if size else b""
+
+    def _serial_waiting(self, deadline: float) -> int:
+        """How many bytes wait, as soon as there are any or it is too late."""
+        waiting = int(self._resource.bytes_in_buffer)
         while not waiting and self._now() < deadline:
             time.sleep(_POLL_S)
-            waiting = self._resource.bytes_in_buffer
-        size = min(waiting, _GULP)
-        return bytes(self._resource.read_bytes(size, break_on_termchar=True)) if size else b""
+            waiting = int(self._resource.bytes_in_buffer)
+        return waiting
 
     def _read_byte(self) -> bytes:
         """One byte, for asking for more would lose what came before a timeout."""

@@ -15,6 +15,7 @@ import math
 import sys
 import time
 import zlib
+from collections import deque
 from collections.abc import Callable, Sequence
 from contextlib import suppress
 from typing import Any
@@ -22,17 +23,19 @@ from typing import Any
 from acquire.child_process import Child, child_parser
 from acquire.clock import RunClock
 from acquire.config.reader import ReaderSection, Setting
-from acquire.dialogue import Asked, Dialogue
-from acquire.errors import BadReply, InstrumentError, RunError
+from acquire.dialogue import Asked, Dialogue, Known
+from acquire.errors import BadReply, InstrumentError, OtherInstrument, RunError
 from acquire.instrument import Instrument
 from acquire.reader_output import live_run_for, reader_output
 from acquire.readings import reading_table
 from acquire.recorder import RETRY_S, Recorder
 from acquire.run_folder import RunFolder, open_run
+from acquire.settings import changes, not_understood
 from acquire.stop import Stop, Stopped
 
 SHORTEST_PAUSE_S, LONGEST_PAUSE_S = 0.5, 10.0
 SILENT_ROW_S = 1.0  # a reader without an instrument says so at least so often
+SHORTEST_SILENCE_S = 0.005  # so long, at least, the line is watched after a reading
 LONGEST_SLEEP_S = 0.2  # so soon it is seen that the parent has died
 
 
@@ -53,6 +56,10 @@ class Reader:
     skipped, not made up for. Whatever fails closes the session, is a row of its own, and is
     followed by attempts to reopen with growing pauses. Until one succeeds, a row says once a
     second (or once a period, if that is longer) that there is no answer.
+
+    A reading is published once the line has stayed silent after it for as long as the slowest of
+    the last readings took, but at most half of the time that is left to the next one: had it been
+    the answer to an earlier question, its own would still have come.
 
     What can't be recorded waits (see :mod:`acquire.recorder`). When too much does, the session is
     closed and nothing is asked until there is room; then identity and settings are asked anew.
@@ -79,8 +86,9 @@ class Reader:
         self.missed = 0  # readings that were due while something else took its time
         self.attempts = 0  # failures since the last good reading
         self.connected = False
-        self._dialogue = Dialogue(section, instrument, known_identity, wait)
+        self._dialogue = Dialogue(section, instrument, known_identity, wait, now_s)
         self._recorder = Recorder(section, publish, now_s, note, complain)
+        self._complain = complain
         self._now = now_s
         self._due = self._try_at = self._silent_at = now_s()
         self._slot = math.floor(self._due / section.period_s)
@@ -88,6 +96,9 @@ class Reader:
         self._told = False  # whether identity and settings as they are stand in the journal
         self._to_ask: list[Setting] = []
         self._settings_at = 0.0
+        self._known: Known = {}  # the settings that were told last
+        self._took: deque[float] = deque(maxlen=16)
+        self._stranger = False  # whether it was said that another instrument answers
 
     def step(self) -> float:
         """Do what is due and return when the next thing is, in seconds of the run."""
@@ -105,6 +116,7 @@ class Reader:
         """Close the instrument and publish that nothing follows."""
         self.connected = False
         self._dialogue.close()
+        self._recorder.confirm(self._dialogue.answers, at_once=True)
         self._recorder.end()
 
     def _pause(self) -> None:
@@ -117,10 +129,13 @@ class Reader:
         began = self._now()
         try:
             reply = self._dialogue.reading()
+            took = (began, self._now())
+            if reply.in_order:
+                self._took.append(took[1] - began)
+                self._dialogue.expect_silence(self._silence_s())
         except InstrumentError as error:
             self._fail(error, began)
             return
-        took = (began, self._now())
         if reply.in_order:
             self.attempts = 0
         else:
@@ -130,6 +145,12 @@ class Reader:
             self._refresh_settings()
         if self.connected:
             self._due = self._next_slot()
+
+    def _silence_s(self) -> float:
+        """How long nothing more may come after an answer before it is believed."""
+        period_s = self.section.period_s
+        left_s = period_s - self._now() % period_s
+        return min(max(SHORTEST_SILENCE_S, *self._took), left_s / 2)
 
     def _next_slot(self) -> float:
         slot = max(math.floor(self._now() / self.section.period_s), self._slot) + 1
@@ -147,11 +168,14 @@ class Reader:
         began = self._now()
         try:
             changed = self._dialogue.refresh(self._to_ask.pop(0))
+            self._dialogue.expect_silence(self._silence_s())
         except InstrumentError as error:
             self._fail(error, began)
             return
         if changed:
             self._tell()
+        if not self._to_ask:
+            self._recorder.confirm(self._dialogue.answers)
 
     def _fail(self, error: InstrumentError, began: float) -> None:
         self._disconnect(str(error))
@@ -175,6 +199,9 @@ class Reader:
             except InstrumentError as error:
                 self._dialogue.close()
                 self._failed(str(error))
+                if isinstance(error, OtherInstrument) and not self._stranger:
+                    self._stranger = True
+                    self._complain(str(error))
             else:
                 self._begin(changed)
                 return
@@ -185,16 +212,24 @@ class Reader:
 
     def _begin(self, changed: bool) -> None:
         now = self._now()
-        self.connected = True
+        self.connected, self._stranger = True, False
         self._settings_at = now + self.section.settings_period_s
         self._slot = math.floor(now / self.section.period_s)
         self._due = self._next_slot()
         if changed or not self._told:
             self._tell()
+        else:
+            self._recorder.confirm(self._dialogue.answers)
 
     def _tell(self) -> None:
-        self._recorder.settings(self._dialogue.identity, self._dialogue.settings)
+        dialogue = self._dialogue
+        before, self._known = self._known, dialogue.settings
+        words = tuple(changes(self.section, before, self._known))
+        self._recorder.settings(dialogue.identity, dialogue.settings, dialogue.answers, words)
         self._told = True
+        news = {name: one for name, one in self._known.items() if one != before.get(name)}
+        for text in not_understood(self.section, news):
+            self._complain(text)
 
 
 def run_reader(

@@ -12,7 +12,7 @@ from __future__ import annotations
 import json
 import math
 from collections import deque
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -24,14 +24,20 @@ from acquire.tables import Row
 RETRY_S = 1.0
 RETRY_NOTE_S = 10.0
 MOST_WAITING = 10_000  # rows: 200 s of a reader at 50 Hz, some 5 MB
+CONFIRM_S = 10.0  # so often it is noted that settings were answered as before
+
+Answers = Mapping[str, tuple[float, float, int]]
+"""By setting: when it was first and last answered as it stands, and how often."""
 
 
 @dataclass(frozen=True)
 class _Waiting:
-    """The cells of a row after ``seq``; with what is known of the instrument, if it says that."""
+    """The cells of a row after ``seq``; with what is known of the instrument, if it says that,
+    and what a person is to be told of it."""
 
     cells: Row
     known: dict[str, Any] | None = None
+    words: tuple[str, ...] = ()
 
 
 class Recorder:
@@ -68,6 +74,8 @@ class Recorder:
         self._unnoted: list[dict[str, Any]] = []
         self._note_at = -math.inf
         self._told_note = False
+        self._confirm_at = -math.inf
+        self._entry: dict[str, Any] | None = None
 
     @property
     def full(self) -> bool:
@@ -89,12 +97,36 @@ class Recorder:
         """Publish a row that stands for the middle of ``took`` (from, to), or for now."""
         self._add(self._cells(status, detail, values, took))
 
-    def settings(self, identity: str | None, settings: object) -> None:
-        """Publish who the instrument is and how it is set, and note it in ``instruments.json``."""
+    def settings(
+        self,
+        identity: str | None,
+        settings: object,
+        answers: Answers = {},
+        words: tuple[str, ...] = (),
+    ) -> None:
+        """Publish who the instrument is and how it is set, and note it in ``instruments.json``.
+
+        ``words`` say what has changed; a person is told with the row from which that holds.
+        """
         known = {"identity": identity, "settings": settings}
         told = {"utc": utc_now_text(), "resource": self._section.resource, **known}
-        self._add(self._cells("settings", json.dumps(known)), told)
+        self._entry = None
+        cells = self._cells("settings", json.dumps(known))
+        self._add(cells, {**told, "answers": _noted(answers)}, words)
         self._write_notes()
+
+    def confirm(self, answers: Answers, at_once: bool = False) -> None:
+        """Note that settings were answered as before, when and how often; in the entry that is
+        there, and now and then only, unless ``at_once``."""
+        if self._entry is not None and (at_once or self._now() >= self._confirm_at):
+            self._note_entry({**self._entry, "answers": _noted(answers)})
+            self._write_notes()
+
+    def _note_entry(self, entry: dict[str, Any]) -> None:
+        """To be written next; once only if one for the same row waits yet."""
+        self._entry, self._confirm_at = entry, self._now() + CONFIRM_S
+        self._unnoted = [one for one in self._unnoted if one["seq"] != entry["seq"]]
+        self._unnoted.append(entry)
 
     def step(self) -> None:
         """Record what waits, if it is time to try again, and write what is to be noted."""
@@ -125,8 +157,10 @@ class Recorder:
     def _nothing(self) -> Row:
         return (None,) * len(self._section.values)
 
-    def _add(self, cells: Row, known: dict[str, Any] | None = None) -> None:
-        self._waiting.append(_Waiting(cells, known))
+    def _add(
+        self, cells: Row, known: dict[str, Any] | None = None, words: tuple[str, ...] = ()
+    ) -> None:
+        self._waiting.append(_Waiting(cells, known, words))
         if self.full and self._full_since is None:
             self._full_since = self._now()
         self._record()
@@ -146,7 +180,9 @@ class Recorder:
             self._waiting.popleft()
             if one.known is not None:
                 about = {"reader": self._section.name, "seq": seq, "time_s": one.cells[0]}
-                self._unnoted.append({**about, **one.known})
+                self._note_entry({**about, **one.known})
+            for text in one.words:
+                self._complain(f"{text}; that holds from row {seq + 1} on")
         if self._why is not None and not self._waiting:
             self._recorded_again(self._why)
 
@@ -184,3 +220,10 @@ class Recorder:
                 return
             self._told_note = False
             del self._unnoted[0]
+
+
+def _noted(answers: Answers) -> dict[str, Any]:
+    return {
+        name: {"first_s": first, "last_s": last, "count": count}
+        for name, (first, last, count) in answers.items()
+    }

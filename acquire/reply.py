@@ -23,7 +23,7 @@ from dataclasses import dataclass
 
 from acquire.config.reader import ReaderSection, Setting, Value
 
-SENTINEL = 9.9e37
+SENTINEL = 9.9e37 * (1 - 2**-22)  # also as a number of single precision has it
 LONGEST_TEXT = 256  # characters of an identity or a setting: they must fit a row of the journal
 
 _NUMBER = re.compile(r"[+-]?(?:\d+(?:\.\d*)?|\.\d+)(?:[eE][+-]?\d{1,3})?", re.ASCII)

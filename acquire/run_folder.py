@@ -149,12 +149,13 @@ class RunFolder:
     def note_instrument(self, entry: Mapping[str, Any]) -> None:
         """Add an entry to ``instruments.json``; several processes may do so at once.
 
+        It takes the place of an entry for the same reader and row (``seq``), if there is one.
         Raises RunError if it can't be written.
         """
         try:
             with open(self.path / "config.toml", "rb") as lock:  # a file that is never replaced
                 fcntl.flock(lock, fcntl.LOCK_EX)
-                self._write("instruments.json", [*self.instruments(), dict(entry)])
+                self._write("instruments.json", _with(self.instruments(), dict(entry)))
         except OSError as error:
             raise _run_error(self.path / "instruments.json", "can't be locked", error) from None
 
@@ -163,6 +164,14 @@ class RunFolder:
             write_whole(self.path / name, _json(content))
         except OSError as error:
             raise _run_error(self.path / name, "can't be written", error) from None
+
+
+def _with(entries: list[dict[str, Any]], entry: dict[str, Any]) -> list[dict[str, Any]]:
+    place = [entry.get("reader"), entry.get("seq")]
+    for index in range(len(entries) - 1, -1, -1):
+        if None not in place and [entries[index].get("reader"), entries[index].get("seq")] == place:
+            return [*entries[:index], entry, *entries[index + 1 :]]
+    return [*entries, entry]
 
 
 def create_run(

@@ -28,6 +28,14 @@ def connection_problem(line: socket.socket) -> str | None:
     return os.strerror(code) if code else None
 
 
+def acknowledge_at_once(line: socket.socket) -> None:
+    """Let the other end know of what arrives without the usual wait (some 40 ms), where that can
+    be had. Until it knows, its system holds back what the instrument sends next, and an answer too
+    many would show only when the next question has been sent. Holds for a while only."""
+    if hasattr(socket, "TCP_QUICKACK"):
+        line.setsockopt(socket.IPPROTO_TCP, socket.TCP_QUICKACK, 1)
+
+
 def is_readable(line: socket.socket, wait_s: float) -> bool:
     """Whether bytes, or the news that the line was closed, come within that time."""
     return bool(select.select([line], [], [], wait_s)[0])

@@ -33,6 +33,14 @@ class Send:
 
 
 @dataclass(frozen=True)
+class ToNewest:
+    """Send bytes on the connection that was made last, as a gateway would that has one line to
+    its instrument: what was asked on one connection is answered on the next."""
+
+    data: bytes
+
+
+@dataclass(frozen=True)
 class Hold:
     """Wait until the event is set."""
 
@@ -90,7 +98,7 @@ def half_then_close(text: str) -> tuple[object, ...]:
 
 def long_line(size: int) -> tuple[object, ...]:
     """A line of ``size`` bytes before its terminator."""
-    return (*(Send(b"7" * 65_536) for _ in range(size // 65_536)), "")
+    return (*(Send(piece) for piece in [b"7" * 65_536] * (size // 65_536)), "")
 
 
 def trickle(text: str, seconds: float) -> tuple[object, ...]:
@@ -124,6 +132,7 @@ class ScriptedInstrument(Closing):
         self._listening: tuple[threading.Event, threading.Thread] | None = None
         self._threads: list[threading.Thread] = []
         self._lines: set[socket.socket] = set()
+        self._newest: socket.socket | None = None
         self.port = 0
         self.listen()
 
@@ -203,6 +212,7 @@ class ScriptedInstrument(Closing):
                 except TimeoutError:
                     continue
                 self._lines.add(line)
+                self._newest = line
                 with self._changed:
                     number, self.connections = self.connections, self.connections + 1
                     self._changed.notify_all()
@@ -251,6 +261,9 @@ class ScriptedInstrument(Closing):
                 _send(line, step, self._over)
             elif isinstance(step, Send):
                 _send(line, step.data, self._over)
+            elif isinstance(step, ToNewest):
+                assert self._newest is not None
+                _send(self._newest, step.data, self._over)
             elif isinstance(step, Hold):
                 while not step.event.wait(_TICK_S):
                     if self._over.is_set():

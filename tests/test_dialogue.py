@@ -48,6 +48,9 @@ class Puppet:
             raise answer
         return answer
 
+    def expect_silence(self, wait_s: float = 0.0) -> None:
+        assert self.is_open
+
     def close(self) -> None:
         self.is_open = False
 

@@ -26,6 +26,7 @@ from acquire.errors import (
     ConnectError,
     InstrumentError,
     JournalError,
+    OtherInstrument,
     ReplyTimeout,
     RunError,
 )
@@ -56,6 +57,7 @@ class Bench:
     notes: list[dict[str, Any]] = field(default_factory=list)
     words: list[str] = field(default_factory=list)
     disk: Exception | None = None
+    stray: InstrumentError | None = None  # what shows once in the silence after an answer
     notes_fail: bool = False
 
     def __post_init__(self) -> None:
@@ -83,6 +85,15 @@ class Bench:
             self.is_open = False
             raise answer
         return str(answer)
+
+    def expect_silence(self, wait_s: float = 0.0) -> None:
+        assert self.is_open, "a closed session was watched"
+        assert wait_s >= 0
+        self.now += wait_s
+        if isinstance(self.stray, InstrumentError):
+            error, self.stray = self.stray, None
+            self.is_open = False
+            raise error
 
     def close(self) -> None:
         self.is_open = False
@@ -257,6 +268,90 @@ def test_an_instrument_comes_back_and_reading_goes_on_in_step() -> None:
     back = bench.asked_times("X?")[-1]
     assert back / 0.2 == pytest.approx(round(back / 0.2))
     assert in_order(bench)
+
+
+def test_after_an_hour_without_an_instrument_it_is_found_again_within_seconds() -> None:
+    bench = Bench(answers={"T?": ["9", "10"]})
+    reader = bench.reader()
+    bench.run(reader, 1.0)
+    bench.answers |= {"X?": ReplyTimeout("nothing"), "open": ConnectError("nobody there")}
+    bench.run(reader, 3600.0)
+    assert bench.rows[-1][3] == "no_answer"
+    tried = len(bench.known)
+    assert 360 <= tried <= 480
+    del bench.answers["open"]
+    bench.answers["X?"] = "3.5"
+    began = bench.now
+    bench.run(reader, 10.5)
+    back = next(row for row in bench.rows if row[1] > began and row[3] == "ok")
+    assert back[1] - began < 10.3
+    assert len(bench.known) == tried + 1
+    told = [row for row in bench.rows if row[3] == "settings"]
+    assert json.loads(told[-1][4])["settings"]["time_constant"]["value"] == 1.0
+    assert told[-1][0] == back[0] - 1
+    assert bench.words == [
+        f"time_constant has changed from 0.3 to 1.0; that holds from row {back[0]} on"
+    ]
+    assert in_order(bench)
+
+
+def test_another_instrument_is_said_once_and_never_used() -> None:
+    bench = Bench()
+    reader = bench.reader()
+    bench.run(reader, 1.0)
+    other = OtherInstrument("*IDN? was answered by 'OTHER', but the run began with 'MAKER'")
+    bench.answers |= {"X?": ReplyTimeout("nothing"), "open": other}
+    bench.run(reader, 60.0)
+    assert bench.words == [str(other)]
+    assert set(bench.statuses()[6:]) == {"no_answer"}
+    assert "but the run began with" in bench.rows[-1][4]
+    assert set(bench.known[1:]) == {IDENTITY}
+    del bench.answers["open"]
+    bench.answers["X?"] = "3.5"
+    bench.run(reader, 12.0)
+    assert bench.rows[-1][3] == "ok"
+
+
+def test_what_comes_in_the_silence_after_an_answer_makes_it_a_bad_one() -> None:
+    bench = Bench(took_s=0.03)
+    reader = bench.reader()
+    bench.run(reader, 1.0)
+    bench.stray = BadReply("'1.5' came without a question")
+    bench.run(reader, 2.0)
+    assert bench.statuses().count("bad_reply") == 1
+    bad = bench.rows[bench.statuses().index("bad_reply")]
+    assert bad[5] is None
+    assert "without a question" in bad[4]
+    assert bench.rows[-1][3] == "ok"
+
+
+def test_a_code_that_is_not_configured_is_said_once() -> None:
+    bench = Bench(answers={"T?": "17"})
+    bench.run(bench.reader(settings_period_s=1.0), 5.0)
+    (words,) = bench.words
+    assert "time_constant: the answer '17' to 'T?' is not among the configured codes (9, 10)" in words
+    assert json.loads(bench.rows[0][4])["settings"]["time_constant"] == {"raw": "17", "value": None}
+
+
+def test_a_setting_that_changed_is_believed_if_the_instrument_still_says_who_it_is() -> None:
+    """An answer that belongs to the question before comes with one too many."""
+    bench = Bench(answers={"T?": ["9", "10"], "*IDN?": [IDENTITY, IDENTITY, "10", IDENTITY]})
+    bench.run(bench.reader(settings_period_s=1.0), 1.6)
+    assert bench.statuses().count("settings") == 1
+    assert "out of turn" in next(row for row in bench.rows if row[3] == "no_answer")[4]
+
+
+def test_every_answer_to_a_setting_is_counted_in_the_notes() -> None:
+    bench = Bench()
+    reader = bench.reader(settings_period_s=1.0)
+    bench.run(reader, 30.0)
+    reader.end()
+    assert {note["seq"] for note in bench.notes} == {0}
+    assert len(bench.notes) <= 5
+    told = bench.notes[-1]["answers"]["time_constant"]
+    assert told["count"] == len(bench.asked_times("T?"))
+    assert told["first_s"] == pytest.approx(100.02)
+    assert told["last_s"] == pytest.approx(bench.asked_times("T?")[-1] + 0.01)
 
 
 def test_with_a_long_period_silence_is_told_once_a_period() -> None:

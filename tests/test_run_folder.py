@@ -228,6 +228,17 @@ def test_instruments_are_noted_in_order(run):
     assert not list(run.path.glob(".*"))
 
 
+def test_an_entry_for_the_same_row_takes_the_place_of_the_one_before(run):
+    for entry in ({"reader": "a", "seq": 0}, {"reader": "b", "seq": 0}, {"reader": "a", "seq": 4}):
+        run.note_instrument(entry)
+    run.note_instrument({"reader": "a", "seq": 0, "answers": 2})
+    run.note_instrument({"reader": "a", "identity": "no row"})
+    run.note_instrument({"reader": "a", "identity": "no row either"})
+    assert [(one["reader"], one.get("seq"), one.get("answers")) for one in run.instruments()] == [
+        ("a", 0, 2), ("b", 0, None), ("a", 4, None), ("a", None, None), ("a", None, None),
+    ]
+
+
 def test_several_processes_note_instruments_at_once(run):
     command = [sys.executable, instrument_noter.__file__, str(run.path)]
     noters = [subprocess.Popen([*command, reader, "20"]) for reader in ("a", "b", "c")]

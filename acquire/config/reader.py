@@ -77,6 +77,13 @@ class Identity(Section):
         return pattern
 
 
+class Proof(Section):
+    """A question, sent after those of each reading, that has one answer only: ``reply``."""
+
+    query: Annotated[str, Field(min_length=1)]
+    reply: Annotated[str, Field(min_length=1)]
+
+
 class SerialLine(Section):
     """Settings of a serial line (ASRL resources only)."""
 
@@ -110,6 +117,7 @@ class ReaderSection(Section):
     period_s: Annotated[float, Field(ge=0.005, le=3600)] = 0.2
     values: Several[Value]
     overload: OverloadBits | None = None
+    proof: Proof | None = None
     settings: Several[Setting] = ()
     settings_period_s: NotNegative = 0.0
     elsewhere: Elsewhere | None = None

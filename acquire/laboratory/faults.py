@@ -9,7 +9,7 @@ import numpy as np
 
 from acquire.laboratory.scenario import Misbehaviour
 
-OF_REPLIES = ("delay", "split", "drop", "garble", "overload", "disconnect")
+OF_REPLIES = ("delay", "split", "drop", "garble", "duplicate", "overload", "disconnect")
 GARBLED_SHARE = 0.2  # of the bytes of a reply, but at least one
 
 
@@ -59,6 +59,7 @@ class Treatment:
     drop: bool = False
     delay_s: float = 0.0
     split_s: float | None = None
+    again_s: float | None = None
     garble: np.random.Generator | None = None
 
     def pieces(self, reply: bytes) -> tuple[Piece, ...]:
@@ -67,11 +68,12 @@ class Treatment:
             return ()
         if self.garble is not None:
             reply = garbled(reply, self.garble)
+        again = () if self.again_s is None else (Piece(self.delay_s + self.again_s, reply),)
         if self.split_s is None or len(reply) < 2:
-            return (Piece(self.delay_s, reply),)
+            return (Piece(self.delay_s, reply), *again)
         half = len(reply) // 2
         later_s = self.delay_s + self.split_s
-        return (Piece(self.delay_s, reply[:half]), Piece(later_s, reply[half:]))
+        return (Piece(self.delay_s, reply[:half]), Piece(later_s, reply[half:]), *again)
 
 
 @dataclass
@@ -143,6 +145,8 @@ def _add(found: Treatment, fault: _Fault) -> Treatment:
             return replace(found, delay_s=found.delay_s + later_s)
         case "split":
             return replace(found, split_s=later_s)
+        case "duplicate":
+            return replace(found, again_s=later_s)
         case "drop":
             return replace(found, drop=True)
         case "garble":

@@ -16,7 +16,8 @@ MAGNET = "magnet"
 Port = Annotated[int, Field(ge=0, le=65535)]
 LineEnd = Literal["\n", "\r\n"]
 What = Literal[
-    "delay", "split", "drop", "garble", "overload", "disconnect", "silence", "ignore", "off"
+    "delay", "split", "drop", "garble", "duplicate", "overload", "disconnect", "silence",
+    "ignore", "off",
 ]
 
 
@@ -109,6 +110,7 @@ class Misbehaviour(Section):
     split      half the reply at once, the rest ``delay_s`` later
     drop       the command is carried out, its reply is lost
     garble     some bytes of the reply are others, one at least not ASCII
+    duplicate  the reply comes twice, the second time ``delay_s`` later
     overload   a lock-in stands at full scale with its overload bit set, the supply reads 9.9e37
     disconnect the connection is cut in place of a reply
     silence    nothing is heard: no command is carried out, no question answered
