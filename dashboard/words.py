@@ -55,6 +55,11 @@ def field(field_T: float | None) -> str:
     return "no field yet" if field_T is None else f"{field_T:+.4f} T"
 
 
+def signed(number: float, decimals: int) -> str:
+    """A number with its sign, minus as long as plus."""
+    return f"{number:+.{decimals}f}".replace("-", "−")
+
+
 def duration(seconds: float) -> str:
     """A time in minutes and seconds, or hours and minutes."""
     whole = round(seconds)

@@ -13,9 +13,11 @@ from made_run import config, estimates, ramp
 
 from acquire.config import parse
 from dashboard.page import html
+from dashboard.page.caution_panel import caution_panel
+from dashboard.page.field_panel import field_panel
 from dashboard.page.html import Html, div, element
-from dashboard.page.list_panel import banner_panel, caution_panel, clock, event_panel, stream_panel
-from dashboard.page.number_panel import field_panel, number_panel, verdict_panel
+from dashboard.page.list_panel import banner_panel, clock, event_panel, stream_panel
+from dashboard.page.number_panel import number_panel, verdict_panel
 from dashboard.page.session import PANELS, Session
 from dashboard.page.store import RunStore
 
@@ -99,7 +101,7 @@ def test_cautions_and_events_tell_their_sentence(store: RunStore) -> None:
     store.take("events", (1, 3725.0, "note", None, "note", "filled helium", 0, None))
     cautions, events = caution_panel(store.bar("bar3")), event_panel(store.run(), True)
     assert HARM not in cautions + events
-    assert words(cautions).startswith("▲ oscillations wave &lt;script&gt;")
+    assert "Also seen: oscillations wave &lt;script&gt;" in words(cautions)
     assert words(events).startswith("1:02:05 note filled helium 01:05 caution bar3 oscillations")
     assert clock(59.9) == "00:59"
 

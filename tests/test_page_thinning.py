@@ -7,14 +7,15 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from analyse.sweeps import Sweeps
 from dashboard.page.scales import sensible, steady
-from dashboard.page.thinning import SweepCounter, Thinned
+from dashboard.page.thinning import Thinned
 
 FIELDS = st.floats(-20, 20, allow_subnormal=False)
 
 
 def thinned(rows: list[tuple[float, ...]], limit: int) -> Thinned:
-    kept, sweeps = Thinned(len(rows[0]), limit), SweepCounter()
+    kept, sweeps = Thinned(len(rows[0]), limit), Sweeps(0.05)
     for row in rows:
         kept.add(row, sweeps.add(row[0]))
     return kept
@@ -71,17 +72,6 @@ def test_whatever_comes_the_number_kept_is_bounded_and_rows_are_genuine(
     assert 0 < len(kept) <= 2 * limit
     assert tuple(kept[0]) == rows[0] and tuple(kept[-1]) == rows[-1]
     assert {tuple(row) for row in kept} <= set(rows)
-
-
-def test_noise_of_the_field_begins_no_sweep() -> None:
-    noise = np.random.default_rng(2).normal(0, 1e-3, 2000)
-    there_and_back = np.concatenate([np.linspace(0, 1, 1000), np.linspace(1, -1, 1000)])
-    sweeps = SweepCounter()
-    numbers = [sweeps.add(field) for field in there_and_back + noise]
-    assert numbers[999] == numbers[200]  # while it goes up
-    assert numbers[-1] == numbers[999] + 1
-    assert sweeps.add(-1.0) == numbers[-1]  # it stands
-    assert numbers == sorted(numbers)
 
 
 def test_a_range_holds_still_while_it_is_filled() -> None:

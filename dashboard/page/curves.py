@@ -12,7 +12,8 @@ from numpy.typing import NDArray
 
 from acquire.tables import Cell, Row
 from analyse.estimate_table import ESTIMATES
-from dashboard.page.thinning import Array, SweepCounter, Thinned
+from dashboard.page.sweeps import Sweep, SweepList
+from dashboard.page.thinning import Array, Thinned
 from dashboard.quantities import QUANTITIES
 
 KEPT = 900
@@ -55,6 +56,7 @@ class Curves:
     xy: Array
     paths: Mapping[str, Path]
     marks: tuple[Mark, ...]
+    sweeps: tuple[Sweep, ...]
 
     def number(self, column: str) -> float | None:
         """A numeric cell of the newest row; None where not known yet."""
@@ -68,12 +70,15 @@ class Curves:
 
 
 class CurveKeeper:
-    """Brought up to date row by row; the cost of a row and the memory do not grow with the ramp."""
+    """Brought up to date row by row; the cost of a row and the memory do not grow with the ramp.
 
-    def __init__(self) -> None:
+    ``turn_T``: by how much the field must come back to begin a new sweep.
+    """
+
+    def __init__(self, turn_T: float = 0.01) -> None:
         self.version = 0
         self._newest: Row | None = None
-        self._sweeps = SweepCounter()
+        self._sweeps = SweepList(turn_T)
         self._xx, self._xy = Thinned(2, KEPT), Thinned(2, KEPT)
         self._paths = {column: Thinned(4, KEPT) for column in QUANTITIES}
         self._marks: dict[str, Mark] = {}
@@ -112,6 +117,7 @@ class CurveKeeper:
                 self._xy.columns(),
                 MappingProxyType(paths),
                 tuple(self._marks.values()),
+                self._sweeps.sweeps(),
             )
         return self._curves
 

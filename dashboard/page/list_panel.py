@@ -1,11 +1,12 @@
-"""The other text panels: the head of the page, streams, cautions and events, the banner."""
+"""The other text panels: the head of the page, streams, events, the banner."""
 
 from __future__ import annotations
 
 from acquire.config import Rig
+from dashboard.page.caution_panel import NOTES
 from dashboard.page.html import NOTHING, Html, div, element, join, span
 from dashboard.page.presence import StreamLine
-from dashboard.page.store import BarFacts, Event, RunFacts
+from dashboard.page.store import Event, RunFacts
 from dashboard.quantities import grouped
 from dashboard.words import duration
 
@@ -38,17 +39,6 @@ def stream_panel(run: RunFacts) -> Html:
     head = element("tr", *(element("th", text) for text in ("stream", "state", "age", "rows")))
     rows = [_stream_rows(line) for line in run.streams]
     return div("streams", element("table", element("thead", head), element("tbody", *rows)))
-
-
-def caution_panel(bar: BarFacts) -> Html:
-    """The open cautions, each with its sentence."""
-    if not bar.cautions:
-        return div("cautions", div("none", "No open cautions."))
-    cards = [
-        div("caution", div("code", f"▲ {code.replace('_', ' ')}"), div("text", text or "…"))
-        for code, text in bar.cautions.items()
-    ]
-    return div("cautions", *cards)
 
 
 def event_panel(run: RunFacts, several_bars: bool) -> Html:
@@ -117,8 +107,9 @@ def _stream_rows(line: StreamLine) -> Html:
 def _event(event: Event, several_bars: bool) -> Html:
     words = [event.text] if event.kind in ("note", "process", "run") else _coded(event)
     where = [span("bar", event.hall_bar)] if several_bars and event.hall_bar else []
+    loud = event.kind in _KINDS and event.code not in NOTES
     return div(
-        f"event of-{event.kind}" if event.kind in _KINDS else "event",
+        f"event of-{event.kind}" if loud else "event",
         span("when", clock(event.time_s)),
         span("kind", _KINDS.get(event.kind, event.kind)),
         span("said", *where, *words),

@@ -1,9 +1,12 @@
-"""What a person reads first: the verdict, the three numbers, the field and the time left."""
+"""What a person reads first: the verdict and the three numbers."""
 
 from __future__ import annotations
 
+import math
+
 from acquire.config import Rig
-from dashboard.page.html import Html, div, element, join, span
+from dashboard.page.caution_panel import touching
+from dashboard.page.html import Html, div, element, span
 from dashboard.page.list_panel import clock
 from dashboard.page.store import BarFacts, RunFacts
 from dashboard.quantities import (
@@ -16,14 +19,12 @@ from dashboard.quantities import (
     write,
     write_interval,
 )
-from dashboard.words import duration
+from dashboard.words import duration, signed
 
 GAUGE_TARGETS = 4.0
 """How many times the target the gauge reaches to either side."""
 
-STANDING_T_PER_MIN = 5e-4  # slower than this is told as no rate at all
-LEAST_LOW = 1e-3  # a window that begins below this share of its end begins at zero
-LONGEST = 15.5  # digits, and half of the unit's letters; longer ones are set smaller, to fit
+_WIDE = " known to "  # as in "mobility known to 3 %, wanted 1 %"
 
 _ICONS = {
     "unknown": "M4 8 H44 M4 40 H44",
@@ -36,10 +37,7 @@ _ICONS = {
 def verdict_panel(bar: BarFacts, run: RunFacts) -> Html:
     """The verdict in a word, and what it waits for or since when it holds."""
     state, word = _verdict(bar)
-    notes = [div("why", _why(state, bar, run))]
-    if bar.cautions:
-        count = len(bar.cautions)
-        notes.append(div("flag", f"▲ {count} open caution{'s' if count > 1 else ''}"))
+    notes = [_why(state, bar, run), *_flags(bar)]
     if stale := _stale(run):
         notes.append(div("flag loud", f"■ {stale}"))
     top = div("top", _icon(state), div("word", word))
@@ -57,56 +55,35 @@ def number_panel(column: str, bar: BarFacts, rig: Rig) -> Html:
         return div("card number", name, div("notyet", NOT_KNOWN), wanted)
     written = write(quantity, value, uncertainty)
     digits, _, spread = written.digits.partition("(")
-    long = len(written.digits) + len(written.units[0]) / 2 > LONGEST
-    size = "digits small" if long else "digits"
     share = half_width(value, low, high)
     return div(
         "card number",
         name,
-        div(
-            "value",
-            span(size, digits, span("spread", f"({spread}")),
+        element(
+            "div",
+            span("digits", digits, span("spread", f"({spread}")),
             span("unit", written.units[0]),
+            class_="value",
+            style=f"--ems:{_ems(bar):.2f}",
         ),
         div("also", *(f"= {text}" for text in written.texts[1:])),
         _gauge(value, low, high, target),
         _distance(share, target),
-        div("interval", _interval(quantity, value, low, high, rig.target.confidence)),
+        _interval(quantity, value, low, high, rig.target.confidence),
     )
 
 
-def field_panel(bar: BarFacts, run: RunFacts, rig: Rig) -> Html:
-    """The field now, its rate or how old it is, and the time left to the target."""
-    old = next((line for line in run.streams if line.name == rig.field.reader), None)
-    stopped = old is not None and old.level == "warning"
-    if run.field is None:
-        field = [div("notyet", "no field yet")]
-    else:
-        field = [
-            div("value", span("digits", signed(run.field.field_T, 4)), span("unit", "T")),
-            div("also", _moving(run) if not stopped else f"▲ {_age(run)} old"),
-        ]
-    return div(
-        "card field old" if stopped else "card field",
-        div("name", "last field" if run.now_s is None or stopped else "field now"),
-        *field,
-        div("name second", "to the target"),
-        div("left", _left(bar, run)),
-        div("soft", _left_range(bar, run)),
-    )
-
-
-def _moving(run: RunFacts) -> str:
-    """The rate of the field; empty where it is not known or nothing moves any more."""
-    if run.field is None or run.field.rate_T_per_min is None or run.now_s is None:
-        return ""
-    rate = run.field.rate_T_per_min
-    return "standing" if abs(rate) < STANDING_T_PER_MIN else f"{signed(rate, 3)} T/min"
-
-
-def _age(run: RunFacts) -> str:
-    assert run.field is not None and run.now_s is not None
-    return duration(max(run.now_s - run.field.time_s, 0.0))
+def _ems(bar: BarFacts) -> float:
+    """About how wide the widest of the numbers is, in heights of its digits; all are set to fit."""
+    widths = [5.0]
+    for column, quantity in QUANTITIES.items():
+        value, uncertainty = bar.curves.number(column), bar.curves.number(f"{column}_u")
+        if value is not None and uncertainty is not None:
+            written = write(quantity, value, uncertainty)
+            digits, _, spread = written.digits.partition("(")
+            unit = 0.22 * len(written.units[0])
+            widths.append(0.56 * len(digits) + 0.34 * (len(spread) + 1) + unit + 0.2)
+    return max(widths)
 
 
 def target_of(rig: Rig, column: str) -> float:
@@ -117,11 +94,6 @@ def target_of(rig: Rig, column: str) -> float:
         "mobility_m2_per_V_s": target.mobility_relative,
         "scattering_time_s": target.scattering_time_relative or target.mobility_relative,
     }[column]
-
-
-def signed(number: float, decimals: int) -> str:
-    """A number with its sign, minus as long as plus."""
-    return f"{number:+.{decimals}f}".replace("-", "−")
 
 
 def half_width(value: float, low: float, high: float) -> float:
@@ -137,31 +109,56 @@ def _verdict(bar: BarFacts) -> tuple[str, str]:
     return "converging", "Converging"
 
 
-def _why(state: str, bar: BarFacts, run: RunFacts) -> str:
+def _why(state: str, bar: BarFacts, run: RunFacts) -> Html:
     if state == "stable" and bar.stable_at is not None:
         time_s, field_T = bar.stable_at
-        return f"good enough since {signed(field_T, 3)} T (at {clock(time_s)})"
+        return div("why", f"good enough since {signed(field_T, 3)} T (at {clock(time_s)})")
     if not bar.curves.newest:
-        return "waiting for the first field point" if run.now_s is not None else "no field points"
-    waiting = bar.curves.text("waiting_for")
+        waits = run.now_s is not None
+        return div("why", "waiting for the first field point" if waits else "no field points")
+    if state == "unknown" and run.now_s is None:
+        return div("why", "the run ended before the numbers meant anything")
     if state == "unknown":
-        return "the field must move on before the numbers mean anything"
-    return waiting.replace(" %", "\u00a0%") or "narrowing towards the target"
+        return div("why", "the field must move on before the numbers mean anything")
+    reasons = _reasons(bar.curves.text("waiting_for")) or ["narrowing towards the target"]
+    return div("why", *(div("reason", reason) for reason in reasons))
 
 
-def _facts(bar: BarFacts) -> list[Html]:
+def _reasons(waiting: str) -> list[str]:
+    """What is in the way, one line each; several numbers that are too wide share a line."""
+    reasons = [reason.replace(" %", "\u00a0%") for reason in waiting.split("; ") if reason]
+    wide = [reason.partition(_WIDE)[0] for reason in reasons if _WIDE in reason]
+    if len(wide) < 2:
+        return reasons
+    names = f"{', '.join(wide[:-1])} and {wide[-1]} not yet as well known as wanted"
+    return [names, *(reason for reason in reasons if _WIDE not in reason)]
+
+
+def _flags(bar: BarFacts) -> list[Html]:
+    """How many cautions are open: loud for those that touch the answer, quiet for the others."""
+    loud = len(touching(bar))
+    quiet = len(bar.cautions) - loud
+    flags = []
+    if loud:
+        flags.append(div("flag", f"▲ {loud} open caution{'s' if loud > 1 else ''}"))
+    if quiet:
+        flags.append(div("flag quiet", f"{quiet} note{'s' if quiet > 1 else ''}"))
+    return flags
+
+
+def _facts(bar: BarFacts) -> list[str]:
     curves = bar.curves
     points = int(curves.number("field_points") or 0)
     facts = [f"{grouped(points)} field point{'' if points == 1 else 's'}"]
     low, high = curves.number("window_low_T"), curves.number("window_high_T")
     if low is not None and high is not None:
-        from_T = 0.0 if low < LEAST_LOW * high else low
-        facts.append(f"window {from_T:.3g} to {high:.3g} T")
+        decimals = 2 - math.floor(math.log10(high)) if high > 0 else 0
+        facts.append(f"window {round(low, decimals):g} to {round(high, decimals):g} T")
     if carriers := curves.text("carriers"):
         facts.append(carriers)
-    pieces: list[Html] = []
+    pieces: list[str] = []
     for fact in facts:
-        pieces += [span("", " · ")] * bool(pieces) + [span("fact", fact)]
+        pieces += [" · "] * bool(pieces) + [span("fact", fact)]
     return pieces
 
 
@@ -172,33 +169,16 @@ def _stale(run: RunFacts) -> str:
     return ""
 
 
-def _left(bar: BarFacts, run: RunFacts) -> str:
-    if bar.curves.text("verdict") == "stable":
-        return "target met"
-    if run.now_s is None:
-        return "target not met"
-    seconds, field_T = bar.curves.number("time_to_target_s"), bar.curves.number("field_to_target_T")
-    if seconds is None:
-        return NOT_KNOWN if field_T is None else f"near {field_T:.2f} T"
-    where = "" if field_T is None else f", near {field_T:.2f} T"
-    return f"about {duration(seconds)}{where}"
-
-
-def _left_range(bar: BarFacts, run: RunFacts) -> str:
-    """Between which fields the target is expected; empty while that is not known, or past."""
-    low, high = (bar.curves.number(f"field_to_target_{end}_T") for end in ("low", "high"))
-    if low is None or bar.curves.text("verdict") == "stable" or run.now_s is None:
-        return ""
-    return f"between {low:.2f} and {high:.2f} T" if high is not None else f"not before {low:.2f} T"
-
-
 def _interval(quantity: Quantity, value: float, low: float, high: float, confidence: float) -> Html:
     first, last = write_interval(quantity, value, low, high)
     unit = quantity.unit_texts(quantity.power(value))[0]
-    return join(
-        span("soft", f"{100 * confidence:g} % interval "),
-        span("", f"{first} to {last}"),
-        span("soft", f" {unit}"),
+    return div(
+        "interval",
+        span("soft", f"{100 * confidence:g} % interval"),
+        " ",
+        span("ends", f"{first} to {last}"),
+        " ",
+        span("soft", unit),
     )
 
 

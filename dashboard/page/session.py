@@ -13,14 +13,21 @@ from bokeh.models import Div, InlineStyleSheet, RadioButtonGroup, Range1d
 
 from dashboard.page import list_panel, number_panel, style
 from dashboard.page.axes import Follower
+from dashboard.page.budget_panel import budget, budget_panel
+from dashboard.page.caution_panel import caution_panel
+from dashboard.page.field_panel import field_panel
 from dashboard.page.path_plots import PathPlots
 from dashboard.page.resistivity_plots import ResistivityPlots
 from dashboard.page.store import BarFacts, RunStore
+from dashboard.page.sweeps import sweep_panel
 from dashboard.quantities import QUANTITIES
 
 PULL_MS = 400
 
-PANELS = ("banner", "head", "verdict", *QUANTITIES, "field", "cautions", "events", "streams")
+PANELS = (
+    "banner", "head", "verdict", *QUANTITIES, "field", "sweeps", "cautions", "budget", "streams",
+    "events",
+)  # fmt: skip
 
 
 class Session:
@@ -85,8 +92,10 @@ class Session:
         panels["verdict"].text = number_panel.verdict_panel(bar, run)
         for column in QUANTITIES:
             panels[column].text = number_panel.number_panel(column, bar, rig)
-        panels["field"].text = number_panel.field_panel(bar, run, rig)
-        panels["cautions"].text = list_panel.caution_panel(bar)
+        panels["field"].text = field_panel(bar, run, rig)
+        panels["sweeps"].text = sweep_panel(bar.curves.sweeps, run.now_s is not None)
+        panels["cautions"].text = caution_panel(bar)
+        panels["budget"].text = budget_panel(budget(bar.curves, self._store.systematic[bar.name]))
         panels["events"].text = list_panel.event_panel(run, len(self._store.bars) > 1)
         panels["streams"].text = list_panel.stream_panel(run)
         self._show_curves(bar)

@@ -13,9 +13,11 @@ from acquire.config import Rig
 from acquire.readings import Reading, stream_of
 from acquire.tables import Row
 from analyse.estimate_table import ESTIMATES, EVENTS
+from dashboard.page.budget_panel import systematic_by_bar
 from dashboard.page.curves import CurveKeeper, Curves
 from dashboard.page.field_now import FieldNow, FieldWatch
 from dashboard.page.presence import Presence, StreamLine
+from dashboard.page.sweeps import threshold_T
 from dashboard.summary import Summary
 
 EVENTS_KEPT = 200
@@ -80,10 +82,11 @@ class RunStore:
         self.run_id = run_id
         self.rig = rig
         self.bars = tuple(bar.name for bar in rig.hall_bars)
+        self.systematic = systematic_by_bar(rig)
         self._lock = threading.Lock()
         self._state = _State()
         self._summary = Summary(run_id, self.bars, rig.target.confidence)
-        self._curves = {name: CurveKeeper() for name in self.bars}
+        self._curves = {name: CurveKeeper(threshold_T(rig)) for name in self.bars}
         self._field = FieldWatch(rig)
         self._readers = {stream_of(name): name for name in _reader_names(rig)}
         self._presence = _presences(rig)

@@ -17,8 +17,8 @@ def _place(root: str, class_: str = "") -> str:
 
 
 _COLUMNS = (
-    ("left", ("resistivity", "residual_xx", "residual_xy")),
-    ("middle", ("path_sheet_density", "path_mobility", "path_scattering_time")),
+    ("left", _place("sweeps"), ("resistivity", "residual_xx", "residual_xy")),
+    ("middle", "", ("path_sheet_density", "path_mobility", "path_scattering_time")),
 )
 
 TEMPLATE = f"""
@@ -34,11 +34,13 @@ TEMPLATE = f"""
   </div>
   <div class="board">
     {"".join(
-        f'<div class="column {side}">{"".join(_place(name, f"plot {name}") for name in names)}</div>'
-        for side, names in _COLUMNS
+        f'<div class="column {side}">{before}'
+        f'{"".join(_place(name, f"plot {name}") for name in names)}</div>'
+        for side, before, names in _COLUMNS
     )}
     <div class="column right">
       <h2>Cautions</h2>{_place("cautions", "list cautions")}
+      <h2>Standard uncertainty, by source</h2>{_place("budget", "list budget")}
       <h2>Streams</h2>{_place("streams", "list streams")}
       <h2>Events</h2>{_place("events", "list events")}
     </div>
@@ -59,7 +61,7 @@ section.beat {{ display: none; }}
 header {{ display: flex; align-items: center; gap: 16px; min-height: 32px; }}
 .headline {{ flex: 1; min-width: 0; }}
 .hero {{ display: grid; gap: 10px; grid-template-columns: 1.12fr 1fr 1fr 1fr 0.8fr;
-  min-height: 172px; }}
+  min-height: 188px; }}
 .hero > section, .plot {{ min-width: 0; min-height: 0; }}
 .board {{ flex: 1; min-height: 0; display: grid; gap: 10px;
   grid-template-columns: 1.42fr 1fr 0.86fr; }}
@@ -70,12 +72,14 @@ header {{ display: flex; align-items: center; gap: 16px; min-height: 32px; }}
 .left .resistivity {{ flex: 3.1; }}
 .left .residual_xy {{ flex: 1.32; }}
 .middle .path_scattering_time {{ flex: 1.25; }}
-h2 {{ font-size: 13px; font-weight: 600; color: var(--soft); margin: 10px 0 4px; flex: none; }}
+h2 {{ font-size: 13px; font-weight: 600; color: var(--soft); margin: 9px 0 3px; flex: none; }}
 h2:first-child {{ margin-top: 0; }}
 .list {{ overflow-y: auto; flex: none; }}
-.list.cautions {{ flex: 0 2 auto; min-height: 40px; }}
-.list.streams {{ flex: 0 1 auto; min-height: 90px; }}
-.list.events {{ flex: 1 4 80px; min-height: 70px; }}
+.list.cautions {{ flex: 0 3 auto; min-height: 60px; }}
+.list.budget {{ flex: 0 0 auto; }}
+.list.streams {{ flex: 0 0.1 auto; min-height: 76px; }}
+.list.events {{ flex: 1 4 60px; min-height: 60px; }}
+.column > .sweeps {{ flex: none; padding: 1px 8px 5px; }}
 #silent {{ position: fixed; z-index: 10; inset: 0 0 auto 0; padding: 14px 20px; text-align: center;
   font: 600 18px var(--font); color: #fff; background: var(--alarm); }}
 body.silent main {{ opacity: 0.45; filter: grayscale(1); }}
@@ -85,7 +89,13 @@ body.silent main {{ opacity: 0.45; filter: grayscale(1); }}
   .board {{ display: flex; flex-direction: column; }}
   .plot {{ flex: none !important; height: 240px; }}
   .left .resistivity {{ height: 380px; }}
-  .list {{ max-height: none !important; }}
+  .list {{ max-height: none !important; min-height: 0 !important; overflow: visible; }}
+  .list.events {{ max-height: 420px !important; overflow-y: auto; }}
+}}
+@media (max-width: 639px) {{
+  main {{ padding: 8px 8px 12px; }}
+  header {{ flex-wrap: wrap; }}
+  .hero {{ grid-template-columns: 1fr; min-height: 0; }}
 }}
 """
 
@@ -112,24 +122,27 @@ PANELS = """
 .phase.live { color: var(--good); }
 .phase.crashed { color: var(--alarm); }
 .card { height: 100%; background: var(--card); border: 1px solid var(--line); border-radius: 8px;
-  padding: 10px 14px; display: flex; flex-direction: column; overflow: hidden; }
+  padding: 10px 14px; display: flex; flex-direction: column; overflow: hidden;
+  container-type: inline-size; }
 .name { font-size: 14px; color: var(--soft); }
 .name::first-letter { text-transform: uppercase; }
 .name.second { margin-top: auto; }
-.value { white-space: nowrap; line-height: 46px; height: 46px; }
-.digits { font-size: 40px; font-weight: 600; letter-spacing: -0.02em; }
-.digits.small { font-size: 32px; }
-.spread { font-size: 24px; color: var(--soft); }
-.unit { font-size: 17px; margin-left: 7px; }
+.value { white-space: nowrap; line-height: 46px; height: 46px;
+  font-size: min(40px, calc(100cqw / var(--ems, 5.4))); }
+.digits { font-weight: 600; letter-spacing: -0.02em; }
+.spread { font-size: 0.6em; color: var(--soft); }
+.unit { font-size: 0.43em; margin-left: 0.4em; }
 .old .digits, .old .unit { color: var(--soft); }
 .old .also { color: var(--warning); font-weight: 700; }
 .also { color: var(--soft); font-size: 14px; min-height: 19px; }
 .notyet { font-size: 24px; font-weight: 600; color: var(--soft); margin: 6px 0; }
-.left { font-size: 17px; font-weight: 600; }
+.left { font-size: 17px; font-weight: 600; line-height: 1.25; }
 .verdict { border-width: 2px; }
 .verdict .top { display: flex; align-items: center; gap: 12px; }
 .verdict .word { font-size: 32px; font-weight: 700; letter-spacing: -0.02em; line-height: 44px; }
 .verdict .why { font-size: 14px; margin-top: 2px; }
+.verdict .reason { position: relative; padding-left: 13px; line-height: 1.28; }
+.verdict .reason::before { content: "–"; position: absolute; left: 0; }
 .verdict svg { width: 46px; height: 46px; flex: none; fill: none;
   stroke: currentColor; stroke-width: 4; stroke-linecap: round; stroke-linejoin: round; }
 .verdict.stable { background: var(--good-tint); border-color: var(--good); }
@@ -140,6 +153,7 @@ PANELS = """
 .verdict.unknown svg { stroke-dasharray: 5 8; color: var(--soft); }
 .flag { margin-top: 6px; font-weight: 600; color: var(--warning); }
 .flag.loud { color: var(--alarm); }
+.flag.quiet { color: var(--soft); font-weight: 400; }
 .gauge { position: relative; height: 14px; margin: 5px 0 4px; border-radius: 3px;
   background: var(--quiet-tint); flex: none; }
 .gauge .zone { position: absolute; top: 0; bottom: 0; background: var(--target); opacity: 0.22; }
@@ -149,15 +163,22 @@ PANELS = """
 .gauge .bar.open-right { border-top-right-radius: 0; border-bottom-right-radius: 0; }
 .gauge .middle { position: absolute; left: calc(50% - 1px); width: 2px; top: 0; bottom: 0;
   background: var(--ink); }
-.distance { white-space: nowrap; display: flex; align-items: baseline; font-size: 14px; }
-.distance .now { font-weight: 600; margin-right: 4px; }
+.distance { white-space: nowrap; display: flex; flex-wrap: wrap; align-items: baseline;
+  column-gap: 8px; font-size: 13px; }
+.distance .now { font-weight: 600; }
 .distance .how { margin-left: auto; font-weight: 600; color: var(--number); }
 .distance.met .how { color: var(--good); }
-.interval { white-space: nowrap; }
+.interval span { white-space: nowrap; }
 .none { color: var(--soft); }
 .caution { background: var(--warning-tint); border-left: 4px solid var(--warning);
   border-radius: 4px; padding: 5px 9px; margin-bottom: 6px; }
 .caution .code { font-weight: 700; color: var(--warning); }
+.noted { color: var(--soft); border-left: 3px solid var(--line); padding: 0 0 0 8px;
+  margin: 4px 0; font-size: 12.5px; line-height: 1.3; overflow-wrap: anywhere; }
+.noted .code { font-weight: 600; }
+.sweeps { display: flex; flex-wrap: wrap; gap: 0 14px; }
+.sweep .arrow { font-weight: 600; }
+.sweep.now { color: var(--number); }
 .caution .text, .event .said, tr.aside td { overflow-wrap: anywhere; }
 table { width: 100%; border-collapse: collapse; }
 th { text-align: left; font-weight: 400; color: var(--soft); padding: 0 4px 2px 0; }
@@ -168,6 +189,12 @@ td:first-child { max-width: 0; width: 52%; overflow: hidden; text-overflow: elli
 td .stream { font-weight: 600; margin-right: 8px; }
 td .identity { color: var(--soft); font-size: 12px; font-weight: 400; }
 tr.aside td { max-width: none; }
+.budget td, .streams td { padding-top: 2px; padding-bottom: 1px; }
+.budget th { padding-bottom: 0; }
+.budget th:nth-child(n+2) { text-align: right; white-space: nowrap; padding-left: 6px; }
+.budget .figure { background: linear-gradient(to left, var(--quiet-tint) var(--share, 0%),
+  transparent var(--share, 0%)); }
+.budget tr.total td { font-weight: 600; }
 tr.aside td { font-size: 12px; padding-top: 0; white-space: normal; }
 tr.aside td, td.aside { color: var(--soft); }
 tr.good .shape { color: var(--good); }

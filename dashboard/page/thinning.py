@@ -14,34 +14,6 @@ from numpy.typing import NDArray
 
 Array = NDArray[np.float64]
 
-TURNED = 0.02
-"""Share of the span of fields so far by which the field must come back to begin a new sweep."""
-
-
-class SweepCounter:
-    """Numbers the sweeps of a ramp by its turning points; noise of the field turns nothing."""
-
-    def __init__(self) -> None:
-        self._number = 0
-        self._direction = 0
-        self._farthest = 0.0
-        self._low = float("inf")
-        self._high = float("-inf")
-
-    def add(self, field_T: float) -> int:
-        """The number of the sweep, from 0, to which the next field of the ramp belongs."""
-        self._low, self._high = min(self._low, field_T), max(self._high, field_T)
-        limit = TURNED * (self._high - self._low)
-        if not self._direction:
-            self._direction = 1 if field_T > self._low else -1 if field_T < self._high else 0
-            self._farthest = field_T
-        elif (field_T - self._farthest) * self._direction >= 0:
-            self._farthest = field_T
-        elif abs(field_T - self._farthest) > limit:
-            self._direction, self._farthest = -self._direction, field_T
-            self._number += 1
-        return self._number
-
 
 class Thinned:
     """Rows of ``columns`` numbers: x, y, further ys. At most ``2 * limit`` are kept.
