@@ -16,8 +16,8 @@ FIELDS = st.floats(-20, 20, allow_subnormal=False)
 
 def thinned(rows: list[tuple[float, ...]], limit: int) -> Thinned:
     kept, sweeps = Thinned(len(rows[0]), limit), Sweeps(0.05)
-    for row in rows:
-        kept.add(row, sweeps.add(row[0]))
+    for index, row in enumerate(rows):
+        kept.add(row, sweeps.add(float(index), row[0]))
     return kept
 
 

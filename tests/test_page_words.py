@@ -26,7 +26,7 @@ from dashboard.page.field_panel import ahead
 from dashboard.page.html import LONGEST, Html, element, visible
 from dashboard.page.number_panel import verdict_panel
 from dashboard.page.store import BarFacts, RunStore
-from dashboard.page.sweeps import SweepList, sweep_panel, threshold_T
+from dashboard.page.sweeps import sweep_panel, threshold_T
 
 RIG = parse(config())
 UNCERTAIN = CONFIG.replace(
@@ -113,34 +113,33 @@ def test_the_sweeps_are_those_of_the_estimator(
 ) -> None:
     store, said = estimated
     shown = store.bar("left").curves.sweeps
-    assert [sweep.number for sweep in shown] == sorted({one.sweep for one in said["left"]})
+    assert [sweep.number for sweep in shown] == [one.number for one in said["left"][-1].sweeps]
     assert RowMaker(store.rig).estimators.estimators["left"]._sweeps.threshold_T == threshold_T(store.rig)
 
 
 def test_sweeps_are_told_with_direction_and_ends() -> None:
-    kept, reference = SweepList(0.01), Sweeps(0.01)
-    assert "has not moved" in words(sweep_panel(kept.sweeps(), True))
-    fields = [*[-0.1] * 5, *ramp(0.9, 200, -0.1), *ramp(-0.1, 200, 0.9), *ramp(0.2, 60, -0.1)]
-    wobble = [field + 1e-3 * (-1) ** index for index, field in enumerate(fields)]
-    assert [kept.add(field) for field in wobble] == [reference.add(field) for field in wobble]
-    said = words(sweep_panel(kept.sweeps(), False))
+    kept = Sweeps(0.01)
+    assert "has not moved" in words(sweep_panel(kept.all(), True))
+    fields = [*[-0.1] * 20, *ramp(0.9, 200, -0.1), *ramp(-0.1, 200, 0.9), *ramp(0.2, 60, -0.1)]
+    for index, field in enumerate(fields):
+        kept.add(0.4 * index, field + 1e-4 * (-1) ** index)
+    said = words(sweep_panel(kept.all(), False))
     assert re.fullmatch(
         r"Sweeps ↑ up −0\.10\d to \+0\.(90|89)\d T ↓ down \+0\.(90|89)\d to −0\.10\d T "
         r"↑ up −0\.10\d to \+0\.(20|19)\d T",
         said,
     )
-    assert 'class="sweep now"' in sweep_panel(kept.sweeps(), True)
-    assert 'class="sweep now"' not in sweep_panel(kept.sweeps(), False)
+    assert 'class="sweep now"' in sweep_panel(kept.all(), True)
+    assert 'class="sweep now"' not in sweep_panel(kept.all(), False)
 
 
 def test_a_night_of_sweeps_shows_the_last_ones() -> None:
-    kept = SweepList(0.01)
-    for _ in range(400):
-        for field in (0.0, 0.5, 1.0, 0.5):
-            kept.add(field)
-    said = words(sweep_panel(kept.sweeps(), True))
-    assert said.startswith("Sweeps … of 800, the last")
-    assert said.count(" T") == 4 and len(kept.sweeps()) == 100
+    kept = Sweeps(0.01)
+    for index in range(4000):
+        kept.add(1.0 * index, abs(index % 40 - 20) / 20)
+    said = words(sweep_panel(kept.all(), True))
+    assert said.startswith("Sweeps … of 200, the last ↓ down +1.000 to +0.000 T ↑ up +0.000 to")
+    assert said.count(" T") == 4
 
 
 def test_without_a_forecast_the_page_says_what_it_waits_for() -> None:

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from acquire.tables import Cell, Row
 from analyse.estimate_table import ESTIMATES
-from dashboard.page.sweeps import Sweep, SweepList
+from analyse.sweeps import Sweep, Sweeps
 from dashboard.page.thinning import Array, Thinned
 from dashboard.quantities import QUANTITIES
 
@@ -78,7 +78,7 @@ class CurveKeeper:
     def __init__(self, turn_T: float = 0.01) -> None:
         self.version = 0
         self._newest: Row | None = None
-        self._sweeps = SweepList(turn_T)
+        self._sweeps = Sweeps(turn_T)
         self._xx, self._xy = Thinned(2, KEPT), Thinned(2, KEPT)
         self._paths = {column: Thinned(4, KEPT) for column in QUANTITIES}
         self._marks: dict[str, Mark] = {}
@@ -91,7 +91,7 @@ class CurveKeeper:
         field_T = _number(row, "field_T")
         if field_T is None:
             return
-        sweep = self._sweeps.add(field_T)
+        sweep = self._sweeps.add(_number(row, "time_s") or 0.0, field_T)
         for column, thinned in (("rho_xx_ohm", self._xx), ("rho_xy_ohm", self._xy)):
             value = _number(row, column)
             if value is not None:
@@ -117,7 +117,7 @@ class CurveKeeper:
                 self._xy.columns(),
                 MappingProxyType(paths),
                 tuple(self._marks.values()),
-                self._sweeps.sweeps(),
+                self._sweeps.all(),
             )
         return self._curves
 

@@ -1,63 +1,14 @@
-"""The sweeps of a ramp, as the estimator tells them apart: which way, from where to where."""
+"""The sweeps of a ramp in words: which way, from where to where."""
 
 from __future__ import annotations
 
-from collections import deque
-from dataclasses import dataclass
-
 from acquire.config import Rig
-from analyse.sweeps import Sweeps
+from analyse.sweeps import Sweep
 from dashboard.page.html import Html, div, span
 from dashboard.words import signed
 
-KEPT = 100
 SHOWN = 4
-_ARROWS = {1: "↑", -1: "↓", 0: "·"}
-_WORDS = {1: "up", -1: "down", 0: "standing"}
-
-
-@dataclass(frozen=True)
-class Sweep:
-    """One sweep. ``direction``: 1 up, -1 down, 0 while the field has not moved yet.
-
-    ``from_T`` is where it turned or began, ``to_T`` the farthest field that it has come to.
-    """
-
-    number: int
-    direction: int
-    from_T: float
-    to_T: float
-    points: int
-
-
-class SweepList:
-    """Brought up to date field point by field point; the last sweeps are kept."""
-
-    def __init__(self, threshold_T: float) -> None:
-        self._sweeps = Sweeps(threshold_T)
-        self._kept: deque[Sweep] = deque(maxlen=KEPT)
-        self._low = self._high = 0.0
-
-    def add(self, field_T: float) -> int:
-        """Take the field of the next field point; the number of its sweep, from 0."""
-        number, direction = self._sweeps.add(field_T), self._sweeps.direction
-        last = self._kept[-1] if self._kept else None
-        if last is None or number != last.number:
-            begin = field_T if last is None else last.to_T
-            self._low, self._high = min(begin, field_T), max(begin, field_T)
-            self._kept.append(Sweep(number, direction, begin, field_T, 1))
-            return number
-        self._low, self._high = min(self._low, field_T), max(self._high, field_T)
-        begin, end = last.from_T, field_T
-        if direction:
-            ends = (self._low, self._high)[::direction]
-            begin, end = (ends[0] if number == 0 else begin), ends[1]
-        self._kept[-1] = Sweep(number, direction, begin, end, last.points + 1)
-        return number
-
-    def sweeps(self) -> tuple[Sweep, ...]:
-        """The last sweeps, in order."""
-        return tuple(self._kept)
+_DIRECTIONS = {1: "↑ up", -1: "↓ down"}
 
 
 def threshold_T(rig: Rig) -> float:
@@ -79,7 +30,7 @@ def sweep_panel(sweeps: tuple[Sweep, ...], live: bool) -> Html:
         pieces.append(
             span(
                 "sweep now" if goes_on else "sweep",
-                span("arrow", f"{_ARROWS[sweep.direction]} {_WORDS[sweep.direction]}"),
+                span("arrow", _DIRECTIONS[sweep.direction]),
                 f" {signed(sweep.from_T, 3)} to {signed(sweep.to_T, 3)} T",
             )
         )
