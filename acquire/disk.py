@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+from contextlib import suppress
 from pathlib import Path
 
 
@@ -12,11 +13,16 @@ def write_whole(path: Path, data: bytes) -> None:
     Written to a hidden file beside it, synced, renamed. One writer at a time. Raises OSError.
     """
     new = path.with_name(f".{path.name}.new")
-    with open(new, "wb") as file:
-        file.write(data)
-        file.flush()
-        os.fsync(file.fileno())
-    os.replace(new, path)
+    try:
+        with open(new, "wb") as file:
+            file.write(data)
+            file.flush()
+            os.fsync(file.fileno())
+        os.replace(new, path)
+    except OSError:
+        with suppress(OSError):  # a full disk: what there is of it only takes room
+            new.unlink()
+        raise
     sync_folder(path.parent)
 
 

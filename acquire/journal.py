@@ -26,6 +26,8 @@ from acquire.tables import Row, Table
 
 __all__ = ["Journal", "Piece", "read_rows"]
 
+IN_USE = "in use"
+"""The reason of a JournalError where another process has the journal."""
 _FULL = {errno.ENOSPC: "disk full", errno.EDQUOT: "disk full: the quota is used up"}
 
 
@@ -114,6 +116,22 @@ class Journal(Closing):
             size = self._ends[stop - 1] - begin if stop > first else 0
         return Piece(first, self._read(begin, size), count)
 
+    def cut_back(self, count: int) -> None:
+        """Keep the first ``count`` rows; those after them are kept beside, in ``*.cut``.
+
+        Only while nobody else uses this journal. Raises JournalError.
+        """
+        with self._lock:
+            self._check_open()
+            keep = self._ends[count - 1] if count else self._head
+            try:
+                self._set_aside(self._read(keep, self._end() - keep))
+                os.ftruncate(self._fd, keep)
+            except OSError as error:
+                raise self._error("can't be cut back", error) from None
+            del self._ends[count:]
+            self._unsynced = True
+
     def sync(self) -> None:
         """Have everything written so far survive a power cut. Raises JournalError."""
         with self._sync_lock:
@@ -153,8 +171,14 @@ class Journal(Closing):
         """Cut away what is not whole. More than one torn line is kept beside, in ``*.cut``."""
         torn = self._read(self._end(), self.torn)
         if b"\n" in torn:
-            write_whole(self.path.with_name(self.path.name + ".cut"), torn)
+            self._set_aside(torn)
         os.ftruncate(self._fd, self._end())
+
+    def _set_aside(self, data: bytes) -> None:
+        """Add to what was cut out of this table."""
+        path = self.path.with_name(self.path.name + ".cut")
+        before = path.read_bytes() if path.exists() else b""
+        write_whole(path, before + data)
 
     def _claim(self) -> None:
         try:
@@ -162,9 +186,8 @@ class Journal(Closing):
         except OSError as error:
             if error.errno not in (errno.EWOULDBLOCK, errno.EACCES):
                 return  # a file system without locks
-            raise JournalError(
-                f"{self.path}: somebody else is writing it; end that process first."
-            ) from None
+            text = f"{self.path}: somebody else is writing it; end that process first."
+            raise JournalError(text, IN_USE) from None
 
     def _write(self, data: bytes) -> None:
         """All of ``data`` or nothing of it. ``_unsure`` stays set until the caller has counted it,

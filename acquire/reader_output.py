@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from contextlib import ExitStack, contextmanager
 
 from acquire.bus import Publisher
 from acquire.errors import RunError
@@ -27,18 +27,20 @@ def reader_output(
 ) -> Iterator[Publisher]:
     """The publisher of a reader's rows, with its journal open meanwhile.
 
-    Raises JournalError or BusError if another process has them; says what was cut away.
+    Raises JournalError or BusError if another process has them, RunError if the run has been
+    closed before its journal was ours; says what was cut away.
     """
-    with (
-        Journal(run.journal_path(table), table) as journal,
-        Publisher(
+    with ExitStack() as stack:
+        journal = stack.enter_context(Journal(run.journal_path(table), table))
+        if run.live() is None:
+            raise RunError(f"{run.path}: has been closed meanwhile; start a new run.")
+        if journal.torn:
+            complain(f"{journal.torn} bytes of a torn last line were cut away")
+        publisher = Publisher(
             run.run_id,
             table,
             journal,
             live.endpoints[table.stream],
             started_utc=run.started_utc,
-        ) as publisher,
-    ):
-        if journal.torn:
-            complain(f"{journal.torn} bytes of a torn last line were cut away")
-        yield publisher
+        )
+        yield stack.enter_context(publisher)

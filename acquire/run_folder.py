@@ -9,6 +9,7 @@ from __future__ import annotations
 import fcntl
 import json
 import os
+import shutil
 import time
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import asdict, dataclass
@@ -32,7 +33,7 @@ class LiveRun:
     """What ``live.json`` says: who watches this run, and where its processes meet.
 
     ``monotonic_start`` is ``time.monotonic()`` at the run's start; ``requests`` is the address
-    of the estimator's inbox.
+    of the estimator's inbox; ``boot`` names the start of the machine, empty where that is not known.
     """
 
     run: str
@@ -41,13 +42,20 @@ class LiveRun:
     started_utc: str
     endpoints: dict[str, Endpoint]
     requests: str
+    boot: str = ""
+
+    @property
+    def machine_restarted(self) -> bool:
+        """Whether the machine has been started anew since the run's start."""
+        before = self.boot and (now := boot_id()) and now != self.boot
+        return bool(before) or time.monotonic() < self.monotonic_start
 
     @property
     def alive(self) -> bool:
         """Whether the supervisor is still there; if not, the run has crashed."""
+        if self.machine_restarted:
+            return False
         run_age_s = time.monotonic() - self.monotonic_start
-        if run_age_s < 0:
-            return False  # the machine has been started anew since
         try:
             os.kill(self.pid, 0)
         except ProcessLookupError:
@@ -121,7 +129,8 @@ class RunFolder:
         if start is None:
             raise RunError(f"{self.path}: was not created here, so monotonic_start is needed.")
         pid = os.getpid() if pid is None else pid
-        live = LiveRun(self.run_id, pid, start, self.started_utc, dict(endpoints), requests)
+        about = self.run_id, pid, start, self.started_utc, dict(endpoints), requests
+        live = LiveRun(*about, boot_id())
         self._write("live.json", asdict(live))
         return live
 
@@ -184,6 +193,7 @@ def create_run(
     """
     monotonic_start, started = time.monotonic(), datetime.now(UTC)
     parent = Path(rig.run.folder) if folder is None else Path(folder)
+    path: Path | None = None
     try:
         path = _new_folder(parent, f"{started:%Y-%m-%d_%H%M%S}_{rig.run.title}")
         run = RunFolder(path, utc_text(started), rig, config_bytes, monotonic_start)
@@ -197,6 +207,8 @@ def create_run(
         package = descriptor(run.run_id, rig.run.title, run.started_utc, tables)
         write_whole(path / "datapackage.json", _json(package))
     except OSError as error:
+        if path is not None:
+            shutil.rmtree(path, ignore_errors=True)  # what is not whole is no run, and was made here
         raise _run_error(parent, "a run can't be made there", error) from None
     return run
 
@@ -217,6 +229,14 @@ def open_run(path: str | Path) -> RunFolder:
     except (ValueError, TypeError, KeyError) as error:
         raise RunError(f"{path}: its datapackage.json is not that of a run ({error!r}).") from None
     return RunFolder(path, started_utc, rig, config_bytes)
+
+
+def boot_id() -> str:
+    """A name for this start of the machine; empty where the system does not tell."""
+    try:
+        return Path("/proc/sys/kernel/random/boot_id").read_text().strip()
+    except OSError:
+        return ""
 
 
 def _process_age_s(pid: int) -> float:

@@ -56,6 +56,10 @@ class Output:
         self._repeating = True
         self.differing = 0
 
+    def left(self) -> int:
+        """How many of the written rows did not come out again, once all have been put."""
+        return sum(1 for _ in self._written) if self._repeating else 0
+
     def put(self, cells: Row) -> None:
         """Write a row, or check that it stands as it is."""
         if self._repeating:
@@ -201,6 +205,8 @@ def run_service(
         Publisher(run.run_id, EVENTS, event_journal, live.endpoints["events"]) as events,
         Inbox(live.requests) as inbox,
     ):
+        if run.live() is None:
+            raise RunError(f"{run.path}: has been closed meanwhile; start a new run.")
 
         def publish_estimate(cells: Row) -> None:
             numbers.publish(*cells)

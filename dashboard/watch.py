@@ -19,7 +19,9 @@ from acquire.readings import stream_of
 from acquire.run_folder import LiveRun, RunFolder, create_run
 from analyse.estimate_table import ESTIMATES, EVENTS
 from dashboard import roles
+from dashboard.bad_end import complete
 from dashboard.browser import open_page
+from dashboard.earlier_runs import EarlierRuns
 from dashboard.event_sender import EventSender
 from dashboard.ports import LOOPBACK, page_port
 from dashboard.progress import Progress
@@ -34,7 +36,7 @@ SHOW_S = 0.25
 # The end, in order, has 3 s in all, of which our own interpreter needs some at its end. So much
 # for all steps together, the least for the last of them, and at most so much for the others; on
 # a machine with nothing else to do they need 0.5 s.
-END_S, LAST_S, READERS_END_S, EVENTS_END_S, FINISH_S = 2.0, 0.3, 1.1, 0.1, 0.6
+END_S, LAST_S, READERS_END_S, EVENTS_END_S, FINISH_S, COMPLETE_S = 2.0, 0.3, 1.1, 0.1, 0.6, 0.3
 LABORATORY_S = 15.0  # how long the simulated instruments may take to be there
 HUNG_S = 60.0  # a reader says at least once a second that it has nothing, so it hangs by then
 
@@ -123,12 +125,14 @@ class _Watcher:
         self._ramp_end = None if ramp is None else RampEnd(ramp.path_T, ramp.duration_s)
         self._field_time_s = -1.0
         self._said_over = False
+        self._finished = False
         self._to_open = plan.browser
         self._news_at = dict.fromkeys(live.endpoints, time.monotonic())
         self._subscriber = Subscriber(run.run_id, live.endpoints, run_tables(plan.rig))
         self._health = self._subscriber.health()
         self._events = EventSender(live.requests, ask)
         self._supervisor = Supervisor(self._roles(port), self._process_news, self._hear)
+        self._earlier: EarlierRuns | None = None
 
     def go_on(self, wish: Event) -> None:
         """Start everything and look after it until something ends it."""
@@ -138,6 +142,7 @@ class _Watcher:
         if not wish.is_set():
             names = self._supervisor.names
             self._supervisor.start(name for name in names if name != roles.LABORATORY)
+            self._earlier = EarlierRuns(self._run.path.parent, "rampside watch", self._view.say)
         shown = 0.0
         while not (wish.is_set() or self._time_is_up() or self._ended_with_the_ramp()):
             self._listen()
@@ -163,27 +168,30 @@ class _Watcher:
         finally:
             self._supervisor.close()
             self._subscriber.close()
-            self._run.end_live()
+            if self._finished or complete(self._run, self._live, COMPLETE_S):
+                self._run.end_live()
+            else:
+                self._view.say(
+                    "The last estimates are missing: rampside replay "
+                    f"{self._run.path} makes them out of the readings and closes the run."
+                )
         self._catch_up()
 
     def _end_in_order(self) -> None:
         deadline = time.monotonic() + END_S
+        if self._earlier is not None:
+            self._earlier.close()
         readers = [roles.reader_role(reader) for reader in self._plan.rig.readers]
         self._supervisor.ask_to_end([roles.PAGE])  # it has nothing to lose, and takes its time
         killed = self._supervisor.stop(readers, READERS_END_S)
         unsent = self._events.close(EVENTS_END_S)
-        finished = self._finish_estimates(min(FINISH_S, deadline - LAST_S - time.monotonic()))
+        self._finished = self._finish_estimates(min(FINISH_S, deadline - LAST_S - time.monotonic()))
         others = [name for name in self._supervisor.names if name not in readers]
         killed += self._supervisor.stop(others, deadline - time.monotonic())
         if killed:
             self._view.say(f"Had to be killed, did not end in time: {', '.join(killed)}.")
         if unsent:
             self._view.say(f"{unsent} of the messages above are not in the run's events.")
-        if not finished:
-            self._view.say(
-                "The estimator could not finish, so the last estimates are missing; "
-                f"rampside replay {self._run.path} makes them out of the readings."
-            )
 
     def _catch_up(self) -> None:
         """Take the rows that were written after the last look, from the run's folder."""
@@ -200,6 +208,8 @@ class _Watcher:
         try:
             reply = ask(self._live.requests, message, within_s)
         except BusError:
+            return False
+        if not reply["ok"]:
             return False
         if reply.get("differing"):
             self._view.say(

@@ -16,7 +16,7 @@ from acquire.config import parse
 from acquire.errors import RunError
 from acquire.journal import Journal
 from acquire.readings import reading_table
-from acquire.run_folder import LiveRun, create_run, open_run
+from acquire.run_folder import LiveRun, boot_id, create_run, open_run
 from acquire.tables import SEQ, TIME, Column, Table
 
 # Odd on purpose: it must be kept byte for byte.
@@ -170,7 +170,7 @@ def test_a_live_run_tells_where_it_is(run):
     written = run.write_live(ENDPOINTS, "tcp://127.0.0.1:20010")
     assert written == LiveRun(
         run.run_id, os.getpid(), run.monotonic_start, run.started_utc, ENDPOINTS,
-        "tcp://127.0.0.1:20010",
+        "tcp://127.0.0.1:20010", boot_id(),
     )  # fmt: skip
     assert open_run(run.path).live() == written
     assert written.alive
@@ -185,7 +185,7 @@ def test_live_json_is_what_others_expect(run):
         "run": run.run_id, "pid": 77, "monotonic_start": 5.0, "started_utc": run.started_utc,
         "endpoints": {"events": {"publish": "tcp://127.0.0.1:20001",
                                  "answer": "tcp://127.0.0.1:20002"}},
-        "requests": "tcp://127.0.0.1:20010",
+        "requests": "tcp://127.0.0.1:20010", "boot": boot_id(),
     }  # fmt: skip
 
 

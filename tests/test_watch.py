@@ -192,21 +192,27 @@ def test_a_full_disk_is_told_everywhere_and_costs_nothing(
     assert "started again" not in watch.text
 
 
-def test_no_orphan_when_the_watch_itself_is_killed(
-    watch: Running, tmp_path: Path, wait_for: Callable[..., None]
+def test_no_orphan_when_the_watch_itself_is_killed_and_the_next_one_closes_its_run(
+    demo: Running, tmp_path: Path, wait_for: Callable[..., None]
 ) -> None:
-    children = watch.children()
-    watch.send(signal.SIGKILL)
-    watch.wait()
+    children = demo.children()
+    assert set(children) == {*WATCHING, "acquire.laboratory"}
+    demo.wait_for("readings | bar:", demo.text.count("readings | bar:") + 1)
+    demo.send(signal.SIGKILL)
+    demo.wait()
     wait_for(
         lambda: not any(_lives(child) for child in children.values()), "its processes end"
     )
-    assert (watch.run / "live.json").exists()
-    done = replay(watch.run, tmp_path / "again.csv")
-    assert done.returncode == 0
-    assert "came out again to the last bit" in done.stderr
-    logged = (watch.run / "estimates.csv").read_bytes()
-    assert (tmp_path / "again.csv").read_bytes().startswith(logged)
+    assert (demo.run / "live.json").exists()
+    words = ("--port", 0, "--no-browser", "--folder", tmp_path / "runs")
+    with Running("watch", tmp_path / "small.toml", *words) as watch:
+        watch.wait_for(f"earlier run: {demo.run.name} ended badly.")
+        assert watch.end()[0] == 0
+    run = open_run(demo.run)
+    (mark,) = [row for row in run.rows(EVENTS) if row[2] == "run"]
+    assert mark[4] == "ended_badly"
+    assert "closed by rampside watch" in str(mark[5])
+    assert_whole(demo.run, tmp_path)
 
 
 def test_a_process_that_cannot_be_asked_is_killed_in_time(watch: Running) -> None:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 
 from acquire.run_folder import open_run
+from dashboard.bad_end import close_if_ended_badly
 from dashboard.browser import open_page
 from dashboard.child import python
 from dashboard.interrupts import asked_to_end
@@ -19,6 +20,8 @@ END_S = 1.0
 def run(arguments: argparse.Namespace) -> int:
     """Show the run until Ctrl-C; exit status 0."""
     run_folder = open_run(arguments.run_folder)
+    if told := close_if_ended_badly(run_folder, "rampside page"):
+        print(told, flush=True)
     port = page_port(arguments.port)
     address = f"http://{LOOPBACK}:{port}"
 

@@ -20,6 +20,7 @@ from acquire.run_folder import RunFolder, create_run
 from acquire.tables import Row, Table
 from dashboard.child import python
 from dashboard.configuration import load_configuration
+from dashboard.earlier_runs import EarlierRuns
 from dashboard.interrupts import asked_to_end
 from dashboard.ports import LOOPBACK
 from dashboard.streams import reading_tables
@@ -40,7 +41,10 @@ def run(arguments: argparse.Namespace) -> int:
     with asked_to_end() as wish:
         live = run_folder.write_live({table.stream: endpoint}, "")
         end = float("inf") if arguments.seconds is None else live.monotonic_start + arguments.seconds
-        with Subscriber(run_folder.run_id, live.endpoints, {table.stream: table}) as subscriber:
+        with (
+            Subscriber(run_folder.run_id, live.endpoints, {table.stream: table}) as subscriber,
+            EarlierRuns(run_folder.path.parent, "rampside read", _say),
+        ):
             one = _One(run_folder, reader, table, subscriber)
             try:
                 one.start(endpoint)

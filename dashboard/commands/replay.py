@@ -10,6 +10,7 @@ from acquire.errors import UsageError
 from acquire.run_folder import open_run
 from acquire.table import MeasuredTable, read_table
 from analyse.estimate_table import ESTIMATES
+from dashboard.bad_end import close_if_ended_badly
 from dashboard.configuration import load_configuration
 from dashboard.progress_bar import counted
 from dashboard.replay import Replayed, count_readings, logged_readings, replay
@@ -32,6 +33,7 @@ def _of_run(arguments: argparse.Namespace) -> Replayed:
     if len(arguments.source) > 1:
         raise UsageError("Several tables need --config CONFIG; runs are replayed one at a time.")
     run = open_run(arguments.source[0])
+    _say(close_if_ended_badly(run, "rampside replay"))
     total = count_readings(run)
     replayed = replay(
         run.run_id,

@@ -62,6 +62,8 @@ def banner_panel(run: RunFacts) -> Html:
             "This run ended badly: the process that watched it is gone. What was recorded is here; "
             "rampside replay makes the estimates complete."
         )
+    if run.bad_end:
+        banners.append(f"This run ended badly. {run.bad_end}")
     return join(*(div("banner", text) for text in banners)) if banners else NOTHING
 
 
@@ -83,7 +85,7 @@ def _phase(run: RunFacts) -> str:
         return f"● live {clock(run.now_s)}"
     if run.phase == "opening":
         return "○ opening"
-    what = "ended" if run.phase == "ended" else "ended badly"
+    what = "ended" if run.phase == "ended" and not run.bad_end else "ended badly"
     return f"■ {what} after {clock(run.last_s)}"
 
 

@@ -13,6 +13,7 @@ from acquire.config import Rig
 from acquire.readings import Reading, stream_of
 from acquire.tables import Row
 from analyse.estimate_table import ESTIMATES, EVENTS
+from dashboard.bad_end import ENDED_BADLY
 from dashboard.page.budget_panel import systematic_by_bar
 from dashboard.page.curves import CurveKeeper, Curves
 from dashboard.page.field_now import FieldNow, FieldWatch
@@ -63,6 +64,7 @@ class RunFacts:
     events: tuple[Event, ...]
     failures: int
     failure: str
+    bad_end: str = ""  # how the run ended badly and was closed later; empty if it did not
 
 
 @dataclass
@@ -72,6 +74,7 @@ class _State:
     last_s: float = 0.0
     failures: int = 0
     failure: str = ""
+    bad_end: str = ""
     next_seq: dict[str, int] = field(default_factory=dict)
 
 
@@ -166,6 +169,7 @@ class RunStore:
                 tuple(reversed(self._events)),
                 state.failures,
                 state.failure,
+                state.bad_end,
             )
 
     def _now_s(self) -> float | None:
@@ -175,6 +179,8 @@ class RunStore:
         name = row[_EVENT["hall_bar"]]
         if name is None or name in self._summary.bars:
             self._summary.add_event(row)
+        if (row[_EVENT["kind"]], row[_EVENT["code"]]) == ("run", ENDED_BADLY):
+            self._state.bad_end = str(row[_EVENT["text"]] or "")
         texts = (str(row[_EVENT[column]] or "") for column in ("kind", "hall_bar", "code", "text"))
         self._events.append(Event(int(row[0] or 0), float(row[1] or 0.0), *texts))
 
