@@ -101,7 +101,7 @@ class Recorder:
         self,
         identity: str | None,
         settings: object,
-        answers: Answers = {},
+        answers: Answers | None = None,
         words: tuple[str, ...] = (),
     ) -> None:
         """Publish who the instrument is and how it is set, and note it in ``instruments.json``.
@@ -112,7 +112,7 @@ class Recorder:
         told = {"utc": utc_now_text(), "resource": self._section.resource, **known}
         self._entry = None
         cells = self._cells("settings", json.dumps(known))
-        self._add(cells, {**told, "answers": _noted(answers)}, words)
+        self._add(cells, {**told, "answers": _noted(answers or {})}, words)
         self._write_notes()
 
     def confirm(self, answers: Answers, at_once: bool = False) -> None:

@@ -47,6 +47,7 @@ class Channel:
         self._newest_s = -math.inf
         self._gate: SpikeGate[Sample] = SpikeGate()
         self._last: tuple[float, float] | None = None
+        self._until_s, self._to_skip = -math.inf, 0
 
     def push(self, time_s: float, x: float | None, y: float | None, status: str) -> None:
         """Take a reading; anything but status ok with a finite x counts as overload or lost."""
@@ -58,6 +59,8 @@ class Channel:
         self._fit_gate(time_s - self._newest_s)
         self._newest_s = time_s
         beyond = x is not None and abs(x) >= OVERLOAD_SENTINEL
+        if good and self._unsettled(time_s):
+            good = False
         if not good or backwards or beyond:
             kind = "overload" if beyond or status in ("overload", "range") else "lost"
             self._release(self._gate.pass_by(Sample(time_s, kind, self.track)))
@@ -67,9 +70,21 @@ class Channel:
         sample = Sample(time_s, "ok", self.track, value, self.signal.quadrature(x, y))
         self._release(self._gate.push(value, sample))
 
-    def settle(self) -> None:
-        """Let go of the readings that wait for their neighbours: what follows is not like them."""
-        self._release(self._gate.flush())
+    def change(self, signal: Signal, until_s: float, skipped: int = 0) -> None:
+        """From the next reading on the instrument is set otherwise, so ``signal`` holds.
+
+        What waits for its neighbours is wild. Readings before ``until_s``, and so many more, are
+        counted as lost.
+        """
+        self.signal = signal
+        self._until_s, self._to_skip = until_s, skipped
+        self._release(self._gate.restart())
+
+    def _unsettled(self, time_s: float) -> bool:
+        if time_s < self._until_s:
+            return True
+        self._to_skip -= 1
+        return self._to_skip >= 0
 
     def end(self) -> None:
         """No more readings come."""

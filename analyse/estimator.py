@@ -132,6 +132,13 @@ class Estimator:
         """
         self._pairing.set_filter(role, stages)
 
+    def change_signal(self, channel: str, signal: Signal, since_s: float) -> None:
+        """From the next reading of "longitudinal", "hall" or "current" on it is read by ``signal``
+        (another filter, phase or gain), as an instrument that was found to be set otherwise at
+        ``since_s``. Its readings are used again once they have settled.
+        """
+        self._pairing.change_signal(channel, signal, since_s)
+
     def end(self, channel: str | None = None) -> tuple[Estimate, ...]:
         """No more readings come (from one channel, or from all): what that completes."""
         channels = [channel] if channel else ["field", "current", "longitudinal", "hall"]

@@ -10,13 +10,13 @@ from __future__ import annotations
 import math
 from collections import deque
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
-from analyse.channel import Channel, Sample
+from analyse.channel import UNFILTERED_LONGEST, Channel, Sample
 from analyse.field_track import CLOSEST_S, FieldTrack
 from analyse.hall_bar import HallBar
 from analyse.lockin import LockinFilter
-from analyse.setup import Setup
+from analyse.setup import Setup, Signal
 from analyse.spikes import SpikeGate
 
 WILD_FIELDS = 5
@@ -88,17 +88,30 @@ class Pairing:
         return self._released()
 
     def set_filter(self, role: str, stages: LockinFilter | None) -> None:
-        """From the next reading of a role on, another filter stands before it.
+        """From the next reading of a role on, another filter stands before it."""
+        signal = replace(self._voltages[role].signal, filter=stages)
+        self.change_signal(role, signal, -math.inf)
 
-        The field behind it is followed from the role's last reading on, and its readings are used
-        once it has settled. Which field readings are here already does not matter.
+    def change_signal(self, channel: str, signal: Signal, since_s: float) -> None:
+        """From the next reading of a channel on, ``signal`` is how it is read: an instrument was
+        found to be set otherwise at ``since_s``.
+
+        The field behind the filter is followed from then on (from the last reading, if that is
+        later), and readings are used once it has settled; without a filter that is known some
+        readings are passed over. Which field readings are here already does not matter.
         """
-        channel = self._voltages[role]
-        track = FieldTrack(stages, self._gap_s, channel.passed_s)
+        one = self._current if channel == "current" else self._voltages[channel]
+        assert one is not None
+        skipped = UNFILTERED_LONGEST if signal.filter is None and since_s > -math.inf else 0
+        if channel == "current":
+            settle_s = 0.0 if signal.filter is None else signal.filter.settle_s(1e-3)
+            one.change(signal, since_s + settle_s, skipped)
+            return
+        track = FieldTrack(signal.filter, self._gap_s, max(one.passed_s, since_s))
         for time_s, field_T in self._knots:
             track.append(time_s, field_T)
-        channel.settle()
-        channel.track = track
+        one.change(signal, -math.inf, skipped)
+        one.track = track
         self._tracks.append(track)
 
     def end(self, channel: str) -> Iterator[Pair]:

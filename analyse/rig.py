@@ -2,18 +2,24 @@
 
 from __future__ import annotations
 
-import json
 from collections.abc import Iterator
 from dataclasses import dataclass
 
-from acquire.config.hall_bar import Filter, HallBarSection
+from acquire.config.hall_bar import HallBarSection
 from acquire.config.hall_bar import Signal as SignalSection
 from acquire.config.rig import Rig
 from acquire.readings import Reading
 from analyse.estimate import Estimate
 from analyse.estimator import Estimator
 from analyse.hall_bar import HallBar
-from analyse.lockin import LockinFilter
+from analyse.instrument_settings import (
+    SettingChanges,
+    SignalSettings,
+    numbers_in,
+    refers_to_settings,
+    settings_in,
+    stages_of,
+)
 from analyse.setup import Excitation, FieldSource, Ramp, Signal, Target, Window
 
 
@@ -27,7 +33,7 @@ class _Route:
     x_scale: float
     y: int | None = None
     y_scale: float = 1.0
-    filter: Filter | None = None
+    section: SignalSection | None = None
 
 
 class RigEstimator:
@@ -42,13 +48,18 @@ class RigEstimator:
         self._rig = rig
         self.estimators = {bar.name: _estimator(rig, bar) for bar in rig.hall_bars}
         self._routes = _routes(rig)
-        self._filters: dict[tuple[str, str], LockinFilter] = {}
-        self._waiting = {
-            (route.bar, route.channel)
+        self._settings = {
+            (route.bar, route.channel): SignalSettings(
+                route.section, _signal_of(self.estimators[route.bar], route.channel)
+            )
             for routes in self._routes.values()
             for route in routes
-            if route.filter is not None and _from_settings(route.filter)
+            if route.section is not None and refers_to_settings(route.section)
         }
+        self.changes = SettingChanges(
+            {name: [r.bar for r in routes if r.channel in ("longitudinal", "hall")]
+             for name, routes in self._routes.items()}
+        )
 
     @property
     def readers(self) -> tuple[str, ...]:
@@ -76,7 +87,8 @@ class RigEstimator:
     def _values(
         self, reading: Reading, route: _Route
     ) -> tuple[float, float | None, float | None, str]:
-        if (route.bar, route.channel) in self._waiting:
+        settings = self._settings.get((route.bar, route.channel))
+        if settings is not None and not settings.known:
             return reading.time_s, None, None, "no_answer"
         x = reading.values[route.x]
         y = reading.values[route.y] if route.y is not None else None
@@ -88,58 +100,28 @@ class RigEstimator:
         )
 
     def _use_settings(self, reading: Reading, routes: tuple[_Route, ...]) -> None:
-        known = _numbers_in(reading.detail)
+        known = settings_in(reading.detail)
+        self.changes.take(reading, known)
+        numbers = numbers_in(known)
         for route in routes:
-            if route.filter is None or not _from_settings(route.filter):
-                continue
-            stages = _stages(route.filter, known)
-            key = (route.bar, route.channel)
-            if stages is None:
-                self._waiting.add(key)
-                continue
-            self._waiting.discard(key)
-            if route.channel != "current" and self._filters.get(key) != stages:
-                self._filters[key] = stages
-                self.estimators[route.bar].set_filter(route.channel, stages)
+            settings = self._settings.get((route.bar, route.channel))
+            signal = settings.take(numbers, reading.time_s) if settings is not None else None
+            if signal is not None:
+                self.estimators[route.bar].change_signal(route.channel, *signal)
 
 
-def _numbers_in(detail: str) -> dict[str, float]:
-    """The settings in a settings row that have numeric values."""
-    try:
-        settings = json.loads(detail)["settings"]
-        items = [(name, entry["value"]) for name, entry in settings.items()]
-    except (ValueError, KeyError, TypeError, AttributeError):
-        return {}
-    return {
-        name: float(value)
-        for name, value in items
-        if isinstance(value, int | float) and not isinstance(value, bool)
-    }
-
-
-def _from_settings(section: Filter) -> bool:
-    return section.time_constant_setting is not None or section.poles_setting is not None
-
-
-def _stages(section: Filter, known: dict[str, float]) -> LockinFilter | None:
-    time_constant = section.time_constant_s
-    if section.time_constant_setting is not None:
-        time_constant = known.get(section.time_constant_setting)
-    poles: float | None = section.poles
-    if section.poles_setting is not None:
-        poles = known.get(section.poles_setting)
-    if time_constant is None or poles is None or poles not in range(1, 9):
-        return None
-    try:
-        return LockinFilter(time_constant, int(poles))
-    except ValueError:
-        return None
+def _signal_of(estimator: Estimator, channel: str) -> Signal:
+    if channel != "current":
+        return estimator.setup.longitudinal if channel == "longitudinal" else estimator.setup.hall
+    excitation = estimator.setup.excitation
+    assert excitation is not None and excitation.measured is not None
+    return excitation.measured
 
 
 def _signal(section: SignalSection, resistance: bool, timed: bool) -> Signal:
     stages = None
     if section.filter is not None and timed:
-        stages = _stages(section.filter, {})
+        stages = stages_of(section.filter, {})
     return Signal(
         stages, section.detection, section.phase_deg, section.gain, section.sign, resistance,
         section.relative_standard_uncertainty,
@@ -230,6 +212,6 @@ def _routes(rig: Rig) -> dict[str, tuple[_Route, ...]]:
         for channel, section in sections:
             y = (None, 1.0) if section.y is None else find(section.reader, section.y)
             routes.setdefault(section.reader, []).append(
-                _Route(bar.name, channel, *find(section.reader, section.x), *y, section.filter)
+                _Route(bar.name, channel, *find(section.reader, section.x), *y, section)
             )
     return {reader: tuple(found) for reader, found in routes.items()}

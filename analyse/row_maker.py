@@ -14,7 +14,7 @@ from analyse.estimate import Estimate
 from analyse.numbers import Number
 from analyse.rig import RigEstimator
 
-DETERMINED = ("verdict", "caution", "caution_over")
+DETERMINED = ("setting", "verdict", "caution", "caution_over")
 """Kinds of events that follow from the readings; the others come from people and processes."""
 
 
@@ -86,6 +86,9 @@ class RowMaker:
         self._count += 1
         self.latest[bar] = estimate
         yield Record("estimates", estimate_cells(bar, estimate), estimate)
+        for change in self._rig.changes.before(bar, estimate.time_s):
+            cells = (estimate.time_s, "setting", bar, change.name, change.text, seq, None)
+            yield Record("events", cells)
         for kind, code, text in self._changes(bar, estimate):
             yield Record("events", (estimate.time_s, kind, bar, code, text, seq, None))
 

@@ -91,6 +91,16 @@ class SpikeGate(Generic[Item]):
             self._held, self._first = self._first, None
         return self._let_go(wild=False)
 
+    def restart(self) -> list[tuple[Item, bool]]:
+        """What follows is not like what came before: what is held is wild, and the next readings
+        are judged by themselves."""
+        self._held, self._first = self._held + (self._first or []), []
+        judged = self._let_go(wild=True)
+        self._good = None
+        self._steps.clear()
+        self._departures.clear()
+        return judged
+
     def _begin(self) -> list[tuple[Item, bool]]:
         """Judge the first readings together; the median step does not mind a few wild ones."""
         first, self._first = self._first or [], None

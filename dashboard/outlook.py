@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import math
 import statistics
 from collections.abc import Iterable, Iterator, Mapping
@@ -59,7 +60,7 @@ def target_lines(rig: Rig, probes: Mapping[str, Probe]) -> Iterator[str]:
     period_s = max(reader.period_s for reader in rig.readers)
     rounds = min(MOST_ROUNDS, int(LONGEST_LOOK_S / period_s))
     try:
-        readings = list(sample(rig.readers, rounds, period_s))
+        readings = [*_settings(probes), *sample(rig.readers, rounds, period_s)]
     except InstrumentError as error:
         yield f"At which field the target will be reached can't be said: {error}."
         return
@@ -67,6 +68,13 @@ def target_lines(rig: Rig, probes: Mapping[str, Probe]) -> Iterator[str]:
     for bar in rig.hall_bars:
         stages = stages_of(bar.hall, probes.get(bar.hall.reader))
         yield f"{bar.name}: {_target_words(rig, bar, looks[bar.name], stages, period_s)}"
+
+
+def _settings(probes: Mapping[str, Probe]) -> Iterator[Reading]:
+    """What the instruments told of their settings, as rows before the readings."""
+    for name, probe in probes.items():
+        told = {key: {"raw": None, "value": value} for key, value in probe.settings.items()}
+        yield Reading(name, 0, 0.0, None, "settings", json.dumps({"settings": told}), ())
 
 
 def stages_of(signal: Signal, probe: Probe | None) -> LockinFilter | None:

@@ -27,7 +27,6 @@ from scripted_instrument import (
     ToNewest,
     delayed,
     half_then_close,
-    late,
     long_line,
     split,
     trickle,
@@ -127,8 +126,6 @@ class Fault:
     again: int = 1
 
 
-SET = threading.Event()
-SET.set()
 NEVER = threading.Event()
 
 READER: dict[str, Fault] = {
@@ -265,25 +262,28 @@ def test_reader_and_a_late_reply_that_a_gateway_hands_to_the_next_connection(
     one = Reading(scripted.resource, lambda: scripted.asked("X?"), timeout_ms=200)
     one.read_more()
     for moment in ("before the identity", "between identity and reading"):
-        known, before = len(one.rows), scripted.connections
+        known, count = len(one.rows), scripted.connections + 1
         again.clear()
         later.clear()
         stray = f"{scripted.asked('X?') + 1}.0\n".encode()
-        answers: list[Answer] = [(Hold(again), ToNewest(stray)), good]
-        scripted.answers["X?"] = lambda: answers.pop(0) if len(answers) > 1 else good()
+        scripted.answers["X?"] = [(Hold(again), ToNewest(stray)), good]
         if moment == "before the identity":
             scripted.answers["*IDN?"] = [(Hold(later), IDENTITY), IDENTITY]
-            one.until(lambda: scripted.connections > before)
+            one.until(_has_connected(scripted, count))
             again.set()
             one.until(lambda: one.count("no_answer", "bad_reply") > 0)
             later.set()
         else:
-            one.until(lambda: scripted.connections > before and one.reader.connected)
+            one.until(lambda done=_has_connected(scripted, count): done() and one.reader.connected)
             again.set()
         one.read_more(3)
         assert any(row[0] in ("no_answer", "bad_reply") for row in one.rows[known:])
     one.reader.end()
     assert one.wrong() == []
+
+
+def _has_connected(scripted: ScriptedInstrument, count: int) -> Callable[[], bool]:
+    return lambda: scripted.connections >= count
 
 
 def test_reader_with_a_proof_and_answers_that_stay_one_behind(

@@ -36,6 +36,11 @@ class Signal(Section):
     ``detection``: ``X`` uses ``x`` alone; ``XY`` turns the vector (x, y) by ``phase_deg`` and
     uses its first component; ``R`` takes ``x`` as a magnitude. What stands at the sample is the
     reading divided by ``gain`` and multiplied by ``sign``.
+
+    Names of the reader's settings: ``phase_setting`` is the instrument's reference phase in
+    degrees, which is taken off ``phase_deg``; with ``full_scale_setting`` the readings are shares
+    of the full scale that the setting tells, and are multiplied by it; after a change of
+    ``range_setting``, as of any of these, readings are used again when they have settled.
     """
 
     reader: Name
@@ -43,7 +48,10 @@ class Signal(Section):
     y: Name | None = None
     detection: Literal["X", "XY", "R"] = "X"
     phase_deg: float = 0.0
+    phase_setting: Name | None = None
     gain: Positive = 1.0
+    full_scale_setting: Name | None = None
+    range_setting: Name | None = None
     sign: Literal[1, -1] = 1
     filter: Filter | None = None
     relative_standard_uncertainty: NotNegative = 0.0
@@ -52,8 +60,9 @@ class Signal(Section):
     def _needs_y(self) -> Signal:
         if (self.detection == "XY") != (self.y is not None):
             raise ValueError('detection = "XY" and the key y go together')
-        if self.phase_deg and self.detection != "XY":
-            raise ValueError('phase_deg needs detection = "XY"')
+        for key in ("phase_deg", "phase_setting"):
+            if getattr(self, key) and self.detection != "XY":
+                raise ValueError(f'{key} needs detection = "XY"')
         return self
 
 

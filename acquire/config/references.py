@@ -8,6 +8,9 @@ from typing import Any
 
 from acquire.config.problems import Problem, nearest_name
 
+FILTER_SETTINGS = ("time_constant_setting", "poles_setting")
+SIGNAL_SETTINGS = ("phase_setting", "full_scale_setting", "range_setting")
+
 
 def check_references(raw: dict[str, Any]) -> list[Problem]:
     """Every reference that leads nowhere and every name given twice. Never raises."""
@@ -68,13 +71,15 @@ def _signal(
     if "y" in signal:
         problems += [p for p in _refer(place, signal, "y", values, units) if ".reader" not in p.path]
     known = settings.get(_text(signal, "reader"), [])
+    named = [(key, signal.get(key)) for key in SIGNAL_SETTINGS]
     stages = signal.get("filter")
     if isinstance(stages, dict):
-        for key in ("time_constant_setting", "poles_setting"):
-            if isinstance(stages.get(key), str) and stages[key] not in known:
-                rule = f"reader {signal.get('reader')!r} has no such setting"
-                nearest = nearest_name(stages[key], [str(name) for name in known])
-                problems.append(Problem(f"{place}.filter.{key}", rule, repr(stages[key]), nearest))
+        named += [(f"filter.{key}", stages.get(key)) for key in FILTER_SETTINGS]
+    for key, name in named:
+        if isinstance(name, str) and name not in known:
+            rule = f"reader {signal.get('reader')!r} has no such setting"
+            nearest = nearest_name(name, [str(one) for one in known])
+            problems.append(Problem(f"{place}.{key}", rule, repr(name), nearest))
     return problems
 
 
