@@ -27,7 +27,7 @@ import pyvisa
 from pyvisa.constants import BufferOperation, Parity, StatusCode, StopBits
 from pyvisa.resources import MessageBasedResource, SerialInstrument, TCPIPSocket
 
-from acquire.config.reader import ReaderSection, SerialLine
+from acquire.config.reader import Connection, SerialLine
 from acquire.errors import (
     BadReply,
     ConnectError,
@@ -58,13 +58,13 @@ _managers: Counter[str] = Counter()  # pyvisa has one manager a library: the las
 
 
 class Instrument:
-    """What a reader's section describes. After any error it is closed; open it again to go on.
+    """What a section describes. After any error it is closed; open it again to go on.
 
     ``last_reply`` has the bytes that the latest question brought, terminator included, also
     when they were no complete reply.
     """
 
-    def __init__(self, section: ReaderSection, now: Callable[[], float] = time.monotonic) -> None:
+    def __init__(self, section: Connection, now: Callable[[], float] = time.monotonic) -> None:
         self.section = section
         self.last_reply = b""
         self._now = now
@@ -105,18 +105,15 @@ class Instrument:
 
         Raises ReplyTimeout, BadReply or SessionLost, and is closed then.
         """
-        if self._resource is None:
-            raise SessionLost(f"{query!r} can't be asked: the session is not open")
-        self.last_reply = b""
-        try:
-            with self._translated(query):
-                self._expect_silence()
-                self._write(query)
-                self.last_reply = self._read(query)
-                return self._text(query, self.last_reply)
-        except BaseException:
-            self.close()
-            raise
+        with self._exchange(query):
+            self._write(query)
+            self.last_reply = self._read(query)
+            return self._text(query, self.last_reply)
+
+    def tell(self, command: str) -> None:
+        """Send one line that is not answered. Raises SessionLost or BadReply, and is closed then."""
+        with self._exchange(command):
+            self._write(command)
 
     def expect_silence(self, wait_s: float = 0.0) -> None:
         """Make sure that nothing comes unasked within that time.
@@ -282,6 +279,19 @@ class Instrument:
         return f"{told} but with {escaped(tail)!r}" if tail else told
 
     @contextmanager
+    def _exchange(self, line: str) -> Iterator[None]:
+        if self._resource is None:
+            raise SessionLost(f"{line!r} can't be sent: the session is not open")
+        self.last_reply = b""
+        try:
+            with self._translated(line):
+                self._expect_silence()
+                yield
+        except BaseException:
+            self.close()
+            raise
+
+    @contextmanager
     def _translated(self, query: str) -> Iterator[None]:
         try:
             yield
@@ -304,7 +314,7 @@ class Instrument:
             raise SessionLost(f"{query!r}: {_reason(error)}") from error
 
 
-def _open_resource(section: ReaderSection) -> Any:
+def _open_resource(section: Connection) -> Any:
     manager = pyvisa.ResourceManager(section.visa_library)
     resource = manager.open_resource(section.resource, open_timeout=OPEN_TIMEOUT_MS)
     _managers[section.visa_library] += 1

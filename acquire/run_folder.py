@@ -33,7 +33,8 @@ class LiveRun:
     """What ``live.json`` says: who watches this run, and where its processes meet.
 
     ``monotonic_start`` is ``time.monotonic()`` at the run's start; ``requests`` is the address
-    of the estimator's inbox; ``boot`` names the start of the machine, empty where that is not known.
+    of the estimator's inbox; ``boot`` names the start of the machine, empty where that is not known;
+    ``hold`` is the address of whoever decides about holding the field, empty where nobody does.
     """
 
     run: str
@@ -43,6 +44,7 @@ class LiveRun:
     endpoints: dict[str, Endpoint]
     requests: str
     boot: str = ""
+    hold: str = ""
 
     @property
     def machine_restarted(self) -> bool:
@@ -120,8 +122,9 @@ class RunFolder:
         requests: str,
         monotonic_start: float | None = None,
         pid: int | None = None,
+        hold: str = "",
     ) -> LiveRun:
-        """Say that the run goes on, and where. Without the last two: as this process knows them.
+        """Say that the run goes on, and where. Without start and pid: as this process knows them.
 
         Raises RunError if it can't be written.
         """
@@ -130,8 +133,10 @@ class RunFolder:
             raise RunError(f"{self.path}: was not created here, so monotonic_start is needed.")
         pid = os.getpid() if pid is None else pid
         about = self.run_id, pid, start, self.started_utc, dict(endpoints), requests
-        live = LiveRun(*about, boot_id())
-        self._write("live.json", asdict(live))
+        content = asdict(live := LiveRun(*about, boot_id(), hold))
+        if not hold:
+            del content["hold"]
+        self._write("live.json", content)
         return live
 
     def end_live(self) -> None:

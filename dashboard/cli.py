@@ -124,7 +124,8 @@ def _add_demo(commands: Commands) -> None:
 def _add_watch(commands: Commands) -> None:
     more = (
         "Starts a reader for each instrument, the estimator and the page, restarts what dies, "
-        "and ends all of them on Ctrl-C. Nothing is changed on any instrument."
+        "and ends all of them on Ctrl-C. Nothing is changed on any instrument, unless [hold] says "
+        "how the field is held and you arm it."
     )
     watch = _add(commands, "watch", "watch a ramp on your own instruments", more)
     watch.add_argument("config", metavar="CONFIG", type=Path, help="the rig, a TOML file")
@@ -136,6 +137,12 @@ def _add_watching(command: argparse.ArgumentParser) -> None:
     _add_folder(command)
     command.add_argument("--exit", action="store_true", help="end when the ramp is over")
     command.add_argument("--seconds", metavar="N", type=_seconds, help="end after N seconds at most")
+    command.add_argument("--bell", action="store_true", help="ring when the answer is good enough")
+    command.add_argument(
+        "--arm-hold",
+        action="store_true",
+        help="arm [hold] at the start, by the run's code: the field is held when it is stable",
+    )
 
 
 def _add_page_options(command: argparse.ArgumentParser) -> None:

@@ -51,6 +51,17 @@ class _Written:
         shown = fitting(printable(text), self._console.encoding)
         self._try(lambda: self._console.print(Text(shown), soft_wrap=True))
 
+    def alarm(self, text: str) -> None:
+        """Show lines that stay, in red, and ring."""
+        shown = fitting(printable(text), self._console.encoding)
+        self._try(lambda: self._console.print(Text(shown, "bold red"), soft_wrap=True))
+        self.ring()
+
+    def ring(self) -> None:
+        """Ring the terminal's bell, if there is a terminal."""
+        if self._console.is_terminal:
+            self._try(self._console.bell)
+
     def _try(self, write: Callable[[], object]) -> None:
         with self._lock:
             if self._gone:
@@ -124,6 +135,7 @@ def line(progress: Progress, moment: Moment) -> str:
         numbers = "  ".join(numbers_of(bar))
         parts.append(f"{name}: {numbers}  {_state(bar)}")
     parts += [f"{name}: {why}" for name, why in _troubles(progress)]
+    parts += [moment.alarm] if moment.alarm else []
     parts += [f"{name} {state}" for name, state in moment.states.items() if state != "ready"]
     return " | ".join(parts)
 
@@ -141,6 +153,8 @@ def picture(rig: Rig, progress: Progress, moment: Moment) -> RenderableType:
         parts += [_numbers(name, bar, progress.summary.confidence), *_in_the_way(bar)]
     parts += [Text(f"{name}: {why}", "red") for name, why in _troubles(progress)]
     parts.append(_processes(moment))
+    if moment.alarm:
+        parts.append(Text(moment.alarm, "bold white on red"))
     return Group(*parts)
 
 

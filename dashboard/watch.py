@@ -23,6 +23,7 @@ from dashboard.bad_end import complete
 from dashboard.browser import open_page
 from dashboard.earlier_runs import EarlierRuns
 from dashboard.event_sender import EventSender
+from dashboard.hold_watch import HoldWatch
 from dashboard.ports import LOOPBACK, page_port
 from dashboard.progress import Progress
 from dashboard.ramp_end import RampEnd
@@ -43,7 +44,8 @@ HUNG_S = 60.0  # a reader says at least once a second that it has nothing, so it
 
 @dataclass(frozen=True)
 class WatchPlan:
-    """What is to be watched, and how. ``laboratory``: start the simulated one of the rig too."""
+    """What is to be watched, and how. ``laboratory``: start the simulated one of the rig too;
+    ``arm_hold``: let holding the field be armed at the start; ``bell``: ring when it is stable."""
 
     rig: Rig
     config: bytes
@@ -53,22 +55,32 @@ class WatchPlan:
     exit_when_over: bool = False
     seconds: float | None = None
     laboratory: bool = False
+    arm_hold: bool = False
+    bell: bool = False
 
 
 @dataclass(frozen=True)
 class Moment:
-    """What the view shows beside the progress: time since the run's start, and the processes."""
+    """What the view shows beside the progress: time since the run's start, the processes, and the
+    sentence of an alarm that stands."""
 
     time_s: float
     states: Mapping[str, str]
     restarts: Mapping[str, int]
+    alarm: str = ""
 
 
 class View(AbstractContextManager["View"], Protocol):
-    """Where a run is shown. Neither method raises, also when nobody can see it any more."""
+    """Where a run is shown. No method raises, also when nobody can see it any more."""
 
     def say(self, text: str) -> None:
         """Show lines that stay."""
+
+    def alarm(self, text: str) -> None:
+        """Show lines that stay, in red, and ring."""
+
+    def ring(self) -> None:
+        """Ring the terminal's bell, if there is a terminal."""
 
     def show(self, progress: Progress, moment: Moment) -> None:
         """Show the present state in place of the one before."""
@@ -86,15 +98,18 @@ def watch(plan: WatchPlan, view: View, wish: Event) -> tuple[RunFolder, Summary]
         )
     if plan.exit_when_over and plan.rig.ramp is None:
         raise UsageError("--exit needs a [ramp] in the configuration, which says when it is over.")
+    if plan.arm_hold and plan.rig.hold is None:
+        raise UsageError("--arm-hold needs a [hold] in the configuration, which says what is sent.")
     port = page_port(plan.port)
     endpoints, requests = endpoints_of(plan.rig)
     run = create_run(plan.rig, plan.config, list(run_tables(plan.rig).values()), plan.folder)
-    live = run.write_live(endpoints, requests)
-    watcher = _Watcher(plan, run, live, port, view)
-    try:
-        watcher.go_on(wish)
-    finally:
-        watcher.end()
+    with HoldWatch(run, view, plan.bell) as hold:
+        live = run.write_live(endpoints, requests, hold=hold.address)
+        watcher = _Watcher(plan, run, live, port, view, hold)
+        try:
+            watcher.go_on(wish)
+        finally:
+            watcher.end()
     return run, watcher.progress.summary
 
 
@@ -116,9 +131,10 @@ class _Watcher:
     """One run under way: the processes, what they say, and when to stop."""
 
     def __init__(
-        self, plan: WatchPlan, run: RunFolder, live: LiveRun, port: int, view: View
+        self, plan: WatchPlan, run: RunFolder, live: LiveRun, port: int, view: View, hold: HoldWatch
     ) -> None:
         self._plan, self._run, self._live, self._view = plan, run, live, view
+        self._hold = hold
         self._address = f"http://{LOOPBACK}:{port}"
         self.progress = Progress(run.run_id, plan.rig)
         ramp = plan.rig.ramp
@@ -139,6 +155,7 @@ class _Watcher:
         self._view.say(f"Page: {self._address}\nRun:  {self._run.path}")
         if self._plan.laboratory:
             self._start_laboratory(wish)
+        self._hold.begin(self._events.send, self._plan.arm_hold, wish)
         if not wish.is_set():
             names = self._supervisor.names
             self._supervisor.start(name for name in names if name != roles.LABORATORY)
@@ -148,6 +165,8 @@ class _Watcher:
             self._listen()
             self._supervisor.poll()
             self._replace_hung_readers()
+            over = self._ramp_end is not None and self._ramp_end.over
+            self._hold.look(self.progress, over, self._states())
             if time.monotonic() - shown >= SHOW_S:
                 shown = time.monotonic()
                 self._view.show(self.progress, self._moment())
@@ -182,6 +201,7 @@ class _Watcher:
         if self._earlier is not None:
             self._earlier.close()
         readers = [roles.reader_role(reader) for reader in self._plan.rig.readers]
+        self._hold.end()
         self._supervisor.ask_to_end([roles.PAGE])  # it has nothing to lose, and takes its time
         killed = self._supervisor.stop(readers, READERS_END_S)
         unsent = self._events.close(EVENTS_END_S)
@@ -249,11 +269,11 @@ class _Watcher:
 
     def _note_field(self) -> None:
         time_s, field_T = self.progress.field_time_s, self.progress.field_T
-        if self._ramp_end is None or time_s is None or field_T is None:
-            return
-        if time_s > self._field_time_s:
+        if time_s is not None and field_T is not None and time_s > self._field_time_s:
             self._field_time_s = time_s
-            self._ramp_end.add(time_s, field_T)
+            self._hold.field(time_s, field_T)
+            if self._ramp_end is not None:
+                self._ramp_end.add(time_s, field_T)
 
     def _replace_hung_readers(self) -> None:
         here = [reader for reader in self._plan.rig.readers if reader.elsewhere is None]
@@ -279,15 +299,19 @@ class _Watcher:
         seconds = self._plan.seconds
         return seconds is not None and time.monotonic() - self._live.monotonic_start >= seconds
 
+    def _states(self) -> dict[str, str]:
+        return {name: self._supervisor.state(name) for name in self._supervisor.names}
+
     def _moment(self) -> Moment:
-        states = {name: self._supervisor.state(name) for name in self._supervisor.names}
         time_s = time.monotonic() - self._live.monotonic_start
-        return Moment(time_s, states, self._supervisor.restarts)
+        return Moment(time_s, self._states(), self._supervisor.restarts, self._hold.alarm)
 
     def _process_news(self, news: ProcessNews) -> None:
         if news.happening != "ready":
             self._view.say(f"{news.text}.")
             self._events.send("process", news.happening, news.in_full)
+            if news.happening != "back":
+                self._hold.unexpected(news.text)
         if news.role == roles.PAGE and news.happening in ("ready", "back"):
             self._show_page()
 

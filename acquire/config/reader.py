@@ -93,7 +93,20 @@ class SerialLine(Section):
     parity: Literal["none", "odd", "even"] = "none"
 
 
-class ReaderSection(Section):
+class Connection(Section):
+    """How an instrument is reached, how lines end, and the question that proves who is there."""
+
+    resource: str = ""
+    visa_library: str = "@py"
+    write_termination: str = ""
+    read_termination: str = ""
+    encoding: Literal["ascii", "latin-1", "utf-8"] = "ascii"
+    timeout_ms: Annotated[int, Field(ge=10, le=60_000)] = 1000
+    serial: SerialLine | None = None
+    identity: Identity = Identity()
+
+
+class ReaderSection(Connection):
     """One instrument, read by one process.
 
     ``queries`` are sent one after the other for each reading; the fields of their replies,
@@ -103,14 +116,6 @@ class ReaderSection(Section):
     """
 
     name: Name
-    resource: str = ""
-    visa_library: str = "@py"
-    write_termination: str = ""
-    read_termination: str = ""
-    encoding: Literal["ascii", "latin-1", "utf-8"] = "ascii"
-    timeout_ms: Annotated[int, Field(ge=10, le=60_000)] = 1000
-    serial: SerialLine | None = None
-    identity: Identity = Identity()
     queries: Several[Annotated[str, Field(min_length=1)]] = ()
     separator: Annotated[str, Field(min_length=1)] = ","
     fields: Annotated[int, Field(ge=1, le=64)] = 1

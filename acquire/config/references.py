@@ -6,6 +6,7 @@ from __future__ import annotations
 from collections import Counter
 from typing import Any
 
+from acquire.config.hold import check_hold
 from acquire.config.problems import Problem, nearest_name
 
 FILTER_SETTINGS = ("time_constant_setting", "poles_setting")
@@ -57,7 +58,7 @@ def check_references(raw: dict[str, Any]) -> list[Problem]:
             units = ("V",) if "shunt_ohm" in measured else ("A",)
             where = f"{place}.excitation.measured"
             problems += _signal(where, measured, values, settings, units)
-    return problems
+    return problems + check_hold(raw)
 
 
 def _signal(

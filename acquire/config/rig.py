@@ -8,6 +8,7 @@ from typing import Annotated
 from pydantic import Field, field_validator, model_validator
 
 from acquire.config.hall_bar import HallBarSection
+from acquire.config.hold import HoldSection
 from acquire.config.reader import ReaderSection
 from acquire.config.sections import Name, NotNegative, Positive, Section, Several, Share
 from acquire.config.table import TableSection
@@ -97,6 +98,7 @@ class Rig(Section):
     hall_bars: Several[HallBarSection]
     readers: Several[ReaderSection] = ()
     table: TableSection | None = None
+    hold: HoldSection | None = None
     laboratory: Scenario | None = None
 
     def reader(self, name: str) -> ReaderSection:

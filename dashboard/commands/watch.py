@@ -23,6 +23,8 @@ def run(arguments: argparse.Namespace) -> int:
             not arguments.no_browser,
             arguments.exit,
             arguments.seconds,
+            arm_hold=arguments.arm_hold,
+            bell=arguments.bell,
         )
     )
 

@@ -1,0 +1,287 @@
+"""Holding the field, as the watch does it: the keeper's decisions carried out, and told.
+
+The keeper (:mod:`acquire.hold.keeper`) decides; here it is told what happens in the run, what people
+ask for comes in through an inbox of its own, and the process of the command is started and heard.
+Also without [hold] it is said once when the answer is good enough.
+"""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable, Mapping
+from threading import Event
+from typing import Any, Protocol
+
+from acquire.bus import Inbox
+from acquire.closing import Closing
+from acquire.errors import RampsideError
+from acquire.hold.code import new_code
+from acquire.hold.command import NOT_SENT
+from acquire.hold.keeper import Answer, Keeper, Step
+from acquire.hold.words import CAUTIONS, GOOD_ENOUGH, what_is_expected, what_is_sent, what_stands
+from acquire.run_folder import RunFolder
+from dashboard.hold_process import HoldProcess, Said
+from dashboard.progress import Progress
+from dashboard.typed_line import typed_line
+
+LOOPBACK_ANY = "tcp://127.0.0.1:0"
+MOST_REQUESTS = 10  # a look
+TYPING_S = 300.0
+RING_EVERY_S, RING_FOR_S = 2.0, 30.0  # the terminal's bell, at an alarm
+
+HARMLESS = frozenset(
+    {"oscillations", "ramp_too_fast", "field_offset", "contacts_misaligned", "quick_readings_apart"}
+)
+"""Cautions that never touch the answer; any other disarms."""
+
+
+class View(Protocol):
+    """Where it is said (a part of :class:`dashboard.watch.View`)."""
+
+    def say(self, text: str) -> None: ...
+    def alarm(self, text: str) -> None: ...
+    def ring(self) -> None: ...
+
+
+Tell = Callable[[str, str, str], None]
+"""Kind, code and text of an event of the run."""
+
+
+class HoldWatch(Closing):
+    """One run's holding of the field. Belongs to one thread. Raises BusError without an address.
+
+    Parameters
+    ----------
+    tell : writes an event.
+    bell : ring also when the answer is good enough.
+    """
+
+    def __init__(self, run: RunFolder, view: View, bell: bool = False) -> None:
+        rig = run.rig
+        self._run, self._view, self._bell = run, view, bell
+        self._tell: Tell = lambda kind, code, text: None
+        self._code = new_code()
+        self._keeper: Keeper | None = None
+        self._inbox: Inbox | None = None
+        self._process: HoldProcess | None = None
+        self._good = False
+        self._trouble = ""
+        self._ringing: tuple[float, float] | None = None  # next ring, last one
+        if rig.hold is not None and rig.ramp is not None:
+            period_s = rig.reader(rig.field.reader).period_s
+            ramp = rig.ramp
+            self._keeper = Keeper(rig.hold, ramp.path_T, ramp.rate_T_per_min, period_s, self._code)
+            self._inbox = Inbox(LOOPBACK_ANY)
+
+    @property
+    def address(self) -> str:
+        """Where requests are taken; empty without [hold]."""
+        return "" if self._inbox is None else self._inbox.address
+
+    @property
+    def alarm(self) -> str:
+        """The sentence of an alarm; empty if there is none."""
+        if self._keeper is None or self._keeper.state != "alarm":
+            return ""
+        return self._keeper.told
+
+    def begin(self, tell: Tell, arm: bool, wish: Event) -> None:
+        """Say the code, and let it be armed in the terminal if that was asked for."""
+        self._tell = tell
+        if self._keeper is None:
+            return
+        if not arm:
+            self._view.say(f"Code: {self._code} (to hold the field, which is not armed)")
+            return
+        self._view.say(arming_text(self._run, self._code))
+        typed = typed_line(wish, TYPING_S)
+        if not typed:
+            self._view.say("Not armed: no code was typed. The watch goes on without.")
+        elif not (answer := self._keeper.arm(typed, self._now_s())).ok:
+            self._view.alarm(f"{answer.text} Not armed; the watch goes on without.")
+        self._carry_out()
+
+    def field(self, time_s: float, field_T: float) -> None:
+        """Take a usable field reading."""
+        if self._keeper is not None:
+            self._keeper.field(time_s, field_T, self._now_s())
+
+    def unexpected(self, what: str) -> None:
+        """A process of the run died, hung or did not come."""
+        if self._keeper is not None:
+            self._keeper.unexpected(what)
+            self._carry_out()
+
+    def look(self, progress: Progress, ramp_over: bool, states: Mapping[str, str]) -> None:
+        """Do what is to be done now; doesn't wait."""
+        if self._keeper is not None:
+            self._keeper.look(self._now_s())
+            self._note_cautions(progress, states)
+            if ramp_over:
+                self._keeper.ramp_over()
+        self._note_verdicts(progress, ramp_over)
+        self._answer_requests()
+        self._carry_out()
+        self._ring()
+
+    def end(self) -> None:
+        """The watch ends: nothing goes out any more; what is under way is told as it stands."""
+        if self._keeper is None:
+            return
+        if self._keeper.state in ("armed", "begun"):
+            self._keeper.unexpected("the watch ends")
+        elif self._keeper.state == "checking":
+            self._keeper.remark("hold_unproven", "The watch ends before the field was seen to stand.")
+        self._carry_out()
+        if self._process is not None:
+            self._process.close()
+            self._carry_out()
+
+    def close(self) -> None:
+        """Give back the address, and the process if it still lives."""
+        if self._process is not None:
+            self._process.close()
+            self._process = None
+        if self._inbox is not None:
+            self._inbox.close()
+            self._inbox = None
+
+    def _now_s(self) -> float:
+        return time.monotonic() - (self._run.monotonic_start or 0.0)
+
+    def _note_cautions(self, progress: Progress, states: Mapping[str, str]) -> None:
+        assert self._keeper is not None
+        down = [name for name, state in states.items() if state != "ready"]
+        self._trouble = f"{', '.join(down)} not ready" if down else ""
+        for name, bar in progress.summary.bars.items():
+            if codes := sorted(set(bar.cautions) - HARMLESS):
+                self._trouble = f"{name} has the caution {', '.join(codes)}"
+                self._keeper.unexpected(self._trouble)
+
+    def _note_verdicts(self, progress: Progress, ramp_over: bool) -> None:
+        bars = progress.summary.bars.values()
+        good = all(bar.verdict == "stable" for bar in bars)
+        if good and not self._good:
+            if self._keeper is not None:
+                self._keeper.good_enough(self._now_s())
+            if not ramp_over and (self._keeper is None or self._keeper.state == "off"):
+                self._view.say(GOOD_ENOUGH)
+                if self._bell:
+                    self._view.ring()
+        self._good = good
+
+    def _answer_requests(self) -> None:
+        for _ in range(MOST_REQUESTS if self._inbox is not None else 0):
+            assert self._inbox is not None
+            if (asked := self._inbox.receive(0.0)) is None:
+                return
+            message, reply = asked
+            answer = self._answer(message)
+            self._carry_out()  # what was decided is on its way before anybody hears of it
+            reply(answer)
+
+    def _answer(self, message: dict[str, Any]) -> dict[str, Any]:
+        keeper = self._keeper
+        assert keeper is not None
+        now_s, typed = self._now_s(), message.get("code")
+        match message.get("do") if message.get("kind") == "hold" else None:
+            case "arm":
+                answer = keeper.arm(typed, now_s, self._trouble)
+            case "hold_now":
+                answer = keeper.hold_now(typed, now_s)
+            case "disarm":
+                answer = keeper.disarm()
+            case "state":
+                answer = Answer(True, "")
+            case "may_send":
+                answer = Answer(self._may_send(message.get("pid"), now_s), "")
+            case _:
+                answer = Answer(False, "unknown request")
+        return {"ok": answer.ok, "text": answer.text, "state": keeper.state, "told": keeper.told,
+                "good": self._good}  # fmt: skip
+
+    def _may_send(self, pid: object, now_s: float) -> bool:
+        """Whether the process that we have started may send; nobody else ever may."""
+        assert self._keeper is not None
+        if self._process is None or pid != self._process.pid:
+            return False
+        self._carry_out()  # what it has told before it asked
+        return self._keeper.may_send(now_s)
+
+    def _carry_out(self) -> None:
+        """Start, hear or end the process of the command as the keeper decided, and tell it all."""
+        keeper = self._keeper
+        if keeper is None:
+            return
+        if keeper.state == "begun" and self._process is None:
+            self._start()
+        if self._process is not None:
+            self._hear_process()
+        for step in keeper.steps():
+            self._show(step)
+
+    def _start(self) -> None:
+        assert self._keeper is not None
+        try:
+            self._process = HoldProcess(self._run)
+        except (OSError, RampsideError) as error:
+            self._keeper.not_sent(f"its process could not be started ({error}).")
+
+    def _hear_process(self) -> None:
+        assert self._keeper is not None and self._process is not None
+        if self._keeper.state == "off":  # it had not been allowed to send anything, and never will
+            self._process.kill()
+        else:
+            for said in self._process.said():
+                self._hear(said)
+            if self._keeper.overdue(self._now_s()):
+                self._process.kill()
+        if self._keeper.state == "off" or self._process.over:
+            self._process.close()
+            self._process = None
+
+    def _hear(self, said: Said) -> None:
+        assert self._keeper is not None
+        if said.step == NOT_SENT:
+            self._keeper.not_sent(said.text)
+        elif said.step == "gone":
+            if said.claimed:
+                self._keeper.unknown(said.text)
+            else:
+                self._keeper.not_sent(f"{said.text}.")
+        else:
+            self._keeper.remark(f"hold_{said.step}", said.text)
+
+    def _show(self, step: Step) -> None:
+        self._tell("run", step.code, step.text)
+        if step.loud:
+            now = time.monotonic()
+            self._ringing = (now + RING_EVERY_S, now + RING_FOR_S)
+            self._view.alarm(step.text)
+        else:
+            self._view.say(step.text)
+
+    def _ring(self) -> None:
+        now = time.monotonic()
+        if self._ringing is not None and self.alarm and now >= self._ringing[0]:
+            self._view.ring()
+            last = self._ringing[1]
+            self._ringing = (now + RING_EVERY_S, last) if now < last else None
+
+
+def arming_text(run: RunFolder, code: str) -> str:
+    """What a person reads who is about to arm it in the terminal."""
+    hold = run.rig.hold
+    assert hold is not None
+    lines = [f"- {text}" for text in CAUTIONS]
+    return "\n".join(
+        [
+            "To be armed: on stable, the magnet supply is asked once to hold the field.",
+            f"Sent:     {what_is_sent(hold)}",
+            f"Expected: {what_is_expected(hold)}",
+            f"Held if:  {what_stands(hold)}",
+            *lines,
+            f"Code: {code}",
+            "Type this code and Enter to arm it for this run, or Enter alone to go on without.",
+        ]
+    )
