@@ -52,13 +52,16 @@ class HoldWatch(Closing):
 
     Parameters
     ----------
-    tell : writes an event.
     bell : ring also when the answer is good enough.
+    clock : seconds that never run backwards.
     """
 
-    def __init__(self, run: RunFolder, view: View, bell: bool = False) -> None:
+    def __init__(
+        self, run: RunFolder, view: View, bell: bool = False,
+        clock: Callable[[], float] = time.monotonic,
+    ) -> None:  # fmt: skip
         rig = run.rig
-        self._run, self._view, self._bell = run, view, bell
+        self._run, self._view, self._bell, self._now_s = run, view, bell, clock
         self._tell: Tell = lambda kind, code, text: None
         self._code = new_code()
         self._keeper: Keeper | None = None
@@ -79,6 +82,11 @@ class HoldWatch(Closing):
         return "" if self._inbox is None else self._inbox.address
 
     @property
+    def asking(self) -> bool:
+        """Whether the process of the command is there."""
+        return self._process is not None
+
+    @property
     def alarm(self) -> str:
         """The sentence of an alarm; empty if there is none."""
         if self._keeper is None or self._keeper.state != "alarm":
@@ -86,7 +94,10 @@ class HoldWatch(Closing):
         return self._keeper.told
 
     def begin(self, tell: Tell, arm: bool, wish: Event) -> None:
-        """Say the code, and let it be armed in the terminal if that was asked for."""
+        """Say the code, and let it be armed in the terminal if that was asked for.
+
+        ``tell`` writes an event of the run.
+        """
         self._tell = tell
         if self._keeper is None:
             return
@@ -145,9 +156,6 @@ class HoldWatch(Closing):
         if self._inbox is not None:
             self._inbox.close()
             self._inbox = None
-
-    def _now_s(self) -> float:
-        return time.monotonic() - (self._run.monotonic_start or 0.0)
 
     def _note_cautions(self, progress: Progress, states: Mapping[str, str]) -> None:
         assert self._keeper is not None
@@ -255,14 +263,14 @@ class HoldWatch(Closing):
     def _show(self, step: Step) -> None:
         self._tell("run", step.code, step.text)
         if step.loud:
-            now = time.monotonic()
+            now = self._now_s()
             self._ringing = (now + RING_EVERY_S, now + RING_FOR_S)
             self._view.alarm(step.text)
         else:
             self._view.say(step.text)
 
     def _ring(self) -> None:
-        now = time.monotonic()
+        now = self._now_s()
         if self._ringing is not None and self.alarm and now >= self._ringing[0]:
             self._view.ring()
             last = self._ringing[1]

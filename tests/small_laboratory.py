@@ -69,11 +69,26 @@ waits_for_question = true
 """
 
 
-def write_small_laboratory(path: Path) -> Path:
-    """The configuration, on ports that are free now."""
+_HOLD = b"""
+[hold]
+resource = "TCPIP::127.0.0.1::47101::SOCKET"
+write_termination = "\\n"
+read_termination = "\\n"
+timeout_ms = 300
+identity = { query = "*IDN?", pattern = "MAGNET SUPPLY" }
+command = "PAUSE"
+standing_T_per_min = 0.5
+standing_for_s = 0.8
+stands_within_s = 4.0
+"""
+
+
+def write_small_laboratory(path: Path, hold: bool = False) -> Path:
+    """The configuration, on ports that are free now; with ``hold`` its supply can be held."""
     lockins = [("lockin_xx", 47102, "longitudinal"), ("lockin_xy", 47103, "hall")]
     text = _RIG + "".join(
         _LOCKIN.format(name=name, port=port, measures=measures) for name, port, measures in lockins
     ).encode()
+    text += _HOLD if hold else b""
     path.write_bytes(with_ports(text, dict(zip((47101, 47102, 47103), free_ports(3)))))
     return path

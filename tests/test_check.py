@@ -9,7 +9,7 @@ from pathlib import Path
 import pytest
 from ramp_bench import RampBench
 from running import RAMPSIDE
-from scripted_instrument import unterminated
+from scripted_instrument import ScriptedInstrument, unterminated
 
 
 @pytest.fixture
@@ -93,3 +93,27 @@ def test_a_moving_field_tells_no_noise(bench: RampBench, tmp_path: Path) -> None
     done = check(bench.write_config(tmp_path / "rig.toml"))
     assert done.returncode == 0
     assert "the field moves, so the noise can't be told" in done.stdout
+
+
+HOLD = """
+[hold]
+resource = "{resource}"
+write_termination = "\\r\\n"
+read_termination = "\\n"
+identity = {{ query = "*IDN?", pattern = "MAGNET" }}
+command = "PAUSE"
+reply = "OK"
+stands_within_s = 10.0
+standing_T = 0.001
+"""
+
+
+def test_what_would_be_sent_is_shown_and_not_sent(bench: RampBench, tmp_path: Path) -> None:
+    with ScriptedInstrument({"*IDN?": "BENCH,MAGNET,1,1", "PAUSE": "OK"}) as supply:
+        hold = HOLD.format(resource=supply.resource)
+        done = check(bench.write_config(tmp_path / "rig.toml", hold))
+        assert done.returncode == 0, done.stdout + done.stderr
+        assert rf'asked for: "PAUSE\r\n" to {supply.resource}' in done.stdout
+        assert 'a reply that matches "OK" within 1000 ms' in done.stdout
+        assert "within 0.001 T of each other for 3 s, within 10 s" in done.stdout
+        assert supply.connections == 0

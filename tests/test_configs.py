@@ -48,6 +48,11 @@ def changed(*path: str | int, to: Any) -> dict[str, Any]:
     return raw
 
 
+def without(section: str) -> dict[str, Any]:
+    """The demo's configuration without one of its sections."""
+    return {key: value for key, value in RAW.items() if key != section}
+
+
 def model_in(annotation: Any) -> type[BaseModel] | None:
     """The section that a type holds, through optional values, tuples and annotations."""
     if isinstance(annotation, type) and issubclass(annotation, BaseModel):
@@ -200,6 +205,20 @@ def test_the_demo_is_answered_as_it_is_configured() -> None:
         (changed("laboratory", "misbehaviours",
                  to=[{"instrument": "magnet", "what": "off", "replies": 3}]),
          "laboratory.misbehaviours[0]", '"off" is not about replies'),
+        (changed("hold", "command", to="PAUSE\n"), "hold.command", "printable"),
+        (changed("hold", "command", to="P\x1bA"), "hold.command", "printable"),
+        (changed("hold", "command", to=""), "hold.command", "at least 1"),
+        (changed("hold", "command", to="PAUS\u00c9"), "hold", "can't be written as encoding"),
+        (changed("hold", "write_termination", to="S"), "hold", "what ends a line"),
+        (changed("hold", "reply", to="("), "hold.reply", "is not a regular expression"),
+        (changed("hold", "identity", to={}), "hold", "nobody else gets the command"),
+        (changed("hold", "standing_T", to=0.01), "hold", "either standing_T_per_min or"),
+        (changed("hold", "standing_T_per_min", to=1.0), "hold.standing_T_per_min", "below 0.6"),
+        (changed("hold", "standing_for_s", to=9.0), "hold", "longer than standing_for_s"),
+        (changed("hold", "standing_for_s", to=0.5), "hold.standing_for_s", "6 field readings"),
+        (changed("hold", "comand", to="A"), "hold.comand", "did you mean command?"),
+        (changed("hold", to={}), "hold.command", "missing"),
+        (without("ramp"), "hold", "needs a [ramp]"),
     ],
 )  # fmt: skip
 def test_a_mistake_is_told_with_its_place_its_rule_and_what_was_found(
@@ -208,6 +227,12 @@ def test_a_mistake_is_told_with_its_place_its_rule_and_what_was_found(
     problems = problems_of(raw)
     assert path in problems, problems
     assert words in problems[path]
+
+
+def test_a_serial_line_is_not_shared_between_a_reader_and_hold() -> None:
+    raw = changed("readers", 2, "resource", to="ASRL/dev/ttyUSB0::INSTR")
+    raw["hold"]["resource"] = "ASRL/dev/ttyUSB0::INSTR"
+    assert "one program at a time" in problems_of(raw)["hold.resource"]
 
 
 def test_all_mistakes_are_told_at_once() -> None:

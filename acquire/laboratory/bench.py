@@ -10,14 +10,16 @@ simulation. They are always heard and answered at once, whatever misbehaviour ac
 ``SIMULATE:STATE?``                what acts now, ``none`` if nothing does
 ``SIMULATE:TIME?``                 seconds since the laboratory's start
 ``SIMULATE:FIELD?``                the field at the sample, in tesla
+``SIMULATE:HEARD? PAUSE``          how often this line has come, carried out or not
 =================================  ===========================================================
 """
 
 from __future__ import annotations
 
 import zlib
+from collections import Counter
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -46,12 +48,14 @@ class Outcome:
 
 @dataclass(frozen=True)
 class Place:
-    """One instrument at its place: what it understands, how it misbehaves, how its lines end."""
+    """One instrument at its place: what it understands, how it misbehaves, how its lines end, and
+    how often each line came."""
 
     interpreter: Interpreter
     faults: Faults
     line_end: bytes
     port: int
+    heard: Counter[str] = field(default_factory=Counter)
 
 
 class Bench:
@@ -79,6 +83,7 @@ class Bench:
         place = self.places[name]
         if line.strip().upper().startswith(CONTROL):
             return self._sent(place, self._control(name, line.strip(), time_s))
+        place.heard[line.strip().upper()] += 1
         treatment = place.faults.treatment(time_s, asks(line))
         if not treatment.hears:
             return Outcome()
@@ -131,6 +136,8 @@ class Bench:
                     return f"{time_s:.6f}"
                 case "FIELD?":
                     return f"{float(self.sample_field_T(time_s)):+.9f}"
+                case "HEARD?":
+                    return str(self.places[name].heard[rest.strip().upper()])
             raise CommandError(-113, "Undefined header")
         except CommandError as error:
             return f"ERROR {error}"

@@ -5,7 +5,9 @@ from __future__ import annotations
 import argparse
 
 from acquire.config import Rig
+from acquire.config.hold import HoldSection
 from acquire.config.reader import ReaderSection
+from acquire.hold.words import what_is_expected, what_is_sent, what_stands
 from acquire.probe import Exchange, Probe, probe
 from acquire.reply import escaped
 from dashboard.configuration import load_configuration
@@ -25,10 +27,24 @@ def run(arguments: argparse.Namespace) -> int:
         if reader.elsewhere is None:
             probes[reader.name] = probe(reader)
             print("\n".join(probe_lines(probes[reader.name])))
+    if rig.hold is not None:
+        print("\n" + "\n".join(hold_lines(rig.hold)))
     print("\n" + "\n".join([*lag_lines(rig, probes), *target_lines(rig, probes)]))
     failed = [name for name, one in probes.items() if not one.good]
     print("\n" + _verdict(failed, rig))
     return 1 if failed else 0
+
+
+def hold_lines(hold: HoldSection) -> list[str]:
+    """How the field would be held; nothing is opened or sent for it."""
+    return [
+        f"hold: not tried. Sent once, when armed and stable, or when armed and asked for: "
+        f"{what_is_sent(hold)}",
+        f"  before it: {escaped(hold.identity.query)}, to be answered by something that has "
+        f'"{escaped(hold.identity.pattern)}" in it',
+        f"  expected: {what_is_expected(hold)}",
+        f"  held if: {what_stands(hold)}",
+    ]
 
 
 def probe_lines(one: Probe) -> list[str]:
