@@ -19,22 +19,31 @@ DEADLINE_S = 40.0
 
 
 class Running:
-    """The command, every line that it prints, and the processes that it has started."""
+    """The command, every line that it prints, and the processes that it has started.
 
-    def __init__(self, *words: object) -> None:
+    ``typing``: its input is a pipe, for :meth:`type`.
+    """
+
+    def __init__(self, *words: object, typing: bool = False) -> None:
         self.lines: list[str] = []
         self._said = threading.Condition()
         self._process = subprocess.Popen(
             [str(RAMPSIDE), *map(str, words)],
             stdout=subprocess.PIPE,
             stderr=subprocess.STDOUT,
-            stdin=subprocess.DEVNULL,
+            stdin=subprocess.PIPE if typing else subprocess.DEVNULL,
             text=True,
             start_new_session=True,
             env={**os.environ, "COLUMNS": "200"},
         )
         self._thread = threading.Thread(target=self._listen, daemon=True)
         self._thread.start()
+
+    def type(self, line: str) -> None:
+        """Type a line and Enter."""
+        assert self._process.stdin is not None
+        self._process.stdin.write(f"{line}\n")
+        self._process.stdin.close()
 
     @property
     def text(self) -> str:
@@ -123,6 +132,8 @@ class Running:
         self._thread.join(DEADLINE_S)
         assert self._process.stdout is not None
         self._process.stdout.close()
+        if self._process.stdin is not None:
+            self._process.stdin.close()
         if error is not None:
             print(self.text)
 
