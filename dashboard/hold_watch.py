@@ -10,7 +10,7 @@ from __future__ import annotations
 import time
 from collections.abc import Callable, Mapping
 from threading import Event
-from typing import Any, Protocol
+from typing import Any
 
 from acquire.bus import Inbox
 from acquire.closing import Closing
@@ -23,6 +23,7 @@ from acquire.run_folder import RunFolder
 from dashboard.hold_process import HoldProcess, Said
 from dashboard.progress import Progress
 from dashboard.typed_line import typed_line
+from dashboard.view import View
 
 LOOPBACK_ANY = "tcp://127.0.0.1:0"
 MOST_REQUESTS = 10  # a look
@@ -33,15 +34,6 @@ HARMLESS = frozenset(
     {"oscillations", "ramp_too_fast", "field_offset", "contacts_misaligned", "quick_readings_apart"}
 )
 """Cautions that never touch the answer; any other disarms."""
-
-
-class View(Protocol):
-    """Where it is said (a part of :class:`dashboard.watch.View`)."""
-
-    def say(self, text: str) -> None: ...
-    def alarm(self, text: str) -> None: ...
-    def ring(self) -> None: ...
-
 
 Tell = Callable[[str, str, str], None]
 """Kind, code and text of an event of the run."""

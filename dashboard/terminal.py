@@ -19,7 +19,7 @@ from rich.text import Text
 from acquire.config import Rig
 from dashboard.progress import Progress
 from dashboard.summary import BarSummary
-from dashboard.watch import Moment, View
+from dashboard.view import Moment, View
 from dashboard.words import NAMES, duration, field, fitting, left_to_target, number, numbers_of
 
 LINE_EVERY_S, NEWS_EVERY_S = 5.0, 1.0

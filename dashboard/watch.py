@@ -4,12 +4,9 @@ from __future__ import annotations
 
 import time
 import uuid
-from collections.abc import Mapping
-from contextlib import AbstractContextManager
 from dataclasses import dataclass
 from pathlib import Path
 from threading import Event
-from typing import Protocol
 
 from acquire.bus import Endpoint, Subscriber, ask, free_endpoints
 from acquire.bus.addresses import check_loopback
@@ -30,6 +27,7 @@ from dashboard.ramp_end import RampEnd
 from dashboard.streams import run_tables
 from dashboard.summary import Summary
 from dashboard.supervisor import ProcessNews, Role, Supervisor
+from dashboard.view import Moment, View
 from dashboard.words import told
 
 LOOK_S = 0.1  # the longest wait between two looks at signals and processes
@@ -57,33 +55,6 @@ class WatchPlan:
     laboratory: bool = False
     arm_hold: bool = False
     bell: bool = False
-
-
-@dataclass(frozen=True)
-class Moment:
-    """What the view shows beside the progress: time since the run's start, the processes, and the
-    sentence of an alarm that stands."""
-
-    time_s: float
-    states: Mapping[str, str]
-    restarts: Mapping[str, int]
-    alarm: str = ""
-
-
-class View(AbstractContextManager["View"], Protocol):
-    """Where a run is shown. No method raises, also when nobody can see it any more."""
-
-    def say(self, text: str) -> None:
-        """Show lines that stay."""
-
-    def alarm(self, text: str) -> None:
-        """Show lines that stay, in red, and ring."""
-
-    def ring(self) -> None:
-        """Ring the terminal's bell, if there is a terminal."""
-
-    def show(self, progress: Progress, moment: Moment) -> None:
-        """Show the present state in place of the one before."""
 
 
 def watch(plan: WatchPlan, view: View, wish: Event) -> tuple[RunFolder, Summary]:
@@ -264,6 +235,7 @@ class _Watcher:
             why = self.progress.unrecorded[stream]
             text = f"{stream}: cannot record, so nothing is published ({why})"
             self._events.send("process", "cannot_record", text)
+            self._hold.unexpected(text)
         for stream in over:
             self._events.send("process", "recorded_again", f"{stream}: is recorded again")
 

@@ -14,7 +14,7 @@ from acquire.readings import stream_of
 from acquire.tables import Cell
 from dashboard.progress import Progress
 from dashboard.terminal import LineView, LiveView, line, open_view, printable
-from dashboard.watch import Moment
+from dashboard.view import Moment
 
 CONFIG = b"""
 [run]

@@ -128,8 +128,9 @@ def _shared(hold: dict[str, Any], raw: dict[str, Any]) -> list[Problem]:
 
 def _number(section: object, key: str, default: float | None = None) -> float | None:
     value = section.get(key, default) if isinstance(section, dict) else None
-    is_number = isinstance(value, int | float) and not isinstance(value, bool)
-    return float(value) if is_number and 0 < value < 1e300 else None
+    if not isinstance(value, int | float) or isinstance(value, bool):
+        return None
+    return float(value) if 0 < value < 1e300 else None
 
 
 def _tables(node: object) -> list[dict[str, Any]]:
