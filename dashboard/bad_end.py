@@ -23,6 +23,7 @@ from pathlib import Path
 from acquire.child_process import Child
 from acquire.clock import utc_now_text
 from acquire.errors import JournalError, RampsideError, RunError
+from acquire.hold.record import left_open
 from acquire.journal import IN_USE, Journal, read_rows
 from acquire.readings import Reading
 from acquire.run_folder import LiveRun, RunFolder, open_run
@@ -150,6 +151,7 @@ class _Closing:
             (ENDED_BADLY, self._what_happened(added)),
             *(("torn_line", text) for text in torn),
             *self._power_cut(),
+            *self._hold(),
             *_taken_back(service, outputs, estimates, events),
         ]
         for code, text in told:
@@ -178,6 +180,10 @@ class _Closing:
                 "The machine was started anew meanwhile: if the power was cut, the last second "
                 "of readings before that may be missing."
             )
+
+    def _hold(self) -> Iterator[tuple[str, str]]:
+        if told := left_open(self.run.path):
+            yield "hold_left_open", told
 
 
 def _taken_back(

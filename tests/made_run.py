@@ -154,13 +154,14 @@ class MadeRun:
     """A run whose rows this process writes and publishes itself.
 
     ``live``: with publishers and a ``live.json``, as while it is watched; else only on disk.
+    ``more``: further sections of its configuration.
     """
 
     def __init__(
         self, folder: Path, *, bars: tuple[str, ...] = ("bar3",), live: bool = True,
-        sample: str = "R0417",
+        sample: str = "R0417", more: str = "",
     ) -> None:  # fmt: skip
-        written = config(bars, sample)
+        written = config(bars, sample) + more.encode()
         rig = parse(written)
         self.tables = run_tables(rig)
         self.run: RunFolder = create_run(rig, written, list(self.tables.values()), folder)

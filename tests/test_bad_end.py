@@ -18,6 +18,7 @@ from two_bars import CONFIG, rig, rows
 from acquire.bus import free_address, free_endpoints
 from acquire.disk import write_whole
 from acquire.errors import RunError
+from acquire.hold import record
 from acquire.journal import Journal
 from acquire.reader_output import reader_output
 from acquire.readings import reading_table, stream_of
@@ -195,6 +196,18 @@ def test_a_power_cut_is_told(crashed: Crashed, whole: dict[str, list[Row]]) -> N
     assert "the last second of readings before that may be missing" in told
     crashed.assert_closed_once(whole)
     assert crashed.codes() == ["ended_badly", "power_cut"]
+
+
+@pytest.mark.parametrize(("sent", "words"), [(False, "is not known whether"), (True, "had been")])
+def test_a_command_to_the_magnet_supply_is_told(
+    crashed: Crashed, whole: dict[str, list[Row]], sent: bool, words: str
+) -> None:
+    record.claim(crashed.run.path, {})
+    if sent:
+        record.conclude(crashed.run.path, {})
+    assert words in close_if_ended_badly(crashed.run, BY)
+    crashed.assert_closed_once(whole)
+    assert crashed.codes() == ["ended_badly", "hold_left_open"]
 
 
 def test_estimates_whose_readings_a_power_cut_has_taken_are_taken_back(

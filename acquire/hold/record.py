@@ -59,6 +59,18 @@ def was_concluded(folder: Path) -> bool:
     return (folder / SENT).exists()
 
 
+def left_open(folder: Path) -> str:
+    """What whoever comes to a run that ended badly has to know of the magnet; empty: nothing."""
+    if not was_claimed(folder):
+        return ""
+    if not was_concluded(folder):
+        return (
+            "The magnet supply was about to be asked to hold the field, and it is not known whether "
+            "it was; it is not asked again. Look at the magnet."
+        )
+    return "The magnet supply had been asked to hold the field. Look at the magnet."
+
+
 def _not_recorded(path: Path, error: OSError) -> RunError:
     return RunError(f"{path}: can't be written ({error.strerror}), so nothing was sent.")
 

@@ -18,6 +18,7 @@ from bokeh.server.util import bind_sockets
 from acquire.child_process import Child, child_parser
 from acquire.errors import BusError, RampsideError
 from acquire.run_folder import RunFolder, open_run
+from dashboard.hold_link import HoldLink
 from dashboard.page.door import MOST_PAGES, Door, close_sessions, serve
 from dashboard.page.feed import Feed
 from dashboard.page.session import Session
@@ -51,7 +52,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
 async def _show(run: RunFolder, sockets: list[socket.socket], door: Door, child: Child) -> None:
     store = RunStore(run.run_id, run.rig)
     feed = Feed(run, store)
-    server = serve(lambda document: Session(store).open(document), sockets, door)
+    link = HoldLink(run)
+    server = serve(lambda document: Session(store, link).open(document), sockets, door)
     server.start()
     feed.start()
     print(f"ready http://{LOOPBACK}:{door.port}/", flush=True)
@@ -62,6 +64,7 @@ async def _show(run: RunFolder, sockets: list[socket.socket], door: Door, child:
         await close_sessions(server)
         server.stop(wait=False)
         feed.close()
+        link.close()
 
 
 def _listen(port: int) -> tuple[list[socket.socket], int]:

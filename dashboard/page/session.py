@@ -11,11 +11,13 @@ import traceback
 from bokeh.document import Document
 from bokeh.models import Div, InlineStyleSheet, RadioButtonGroup, Range1d
 
+from dashboard.hold_link import HoldLink
 from dashboard.page import list_panel, number_panel, style
 from dashboard.page.axes import Follower
 from dashboard.page.budget_panel import budget, budget_panel
 from dashboard.page.caution_panel import caution_panel
 from dashboard.page.field_panel import field_panel
+from dashboard.page.hold_panel import HoldPanel
 from dashboard.page.path_plots import PathPlots
 from dashboard.page.resistivity_plots import ResistivityPlots
 from dashboard.page.store import BarFacts, RunStore
@@ -31,15 +33,19 @@ PANELS = (
 
 
 class Session:
-    """The models of one page. ``open`` adds them to a document and keeps them up to date."""
+    """The models of one page. ``open`` adds them to a document and keeps them up to date.
 
-    def __init__(self, store: RunStore) -> None:
+    ``link``: to whoever decides about holding the field.
+    """
+
+    def __init__(self, store: RunStore, link: HoldLink | None = None) -> None:
         self._store = store
         self._bar = store.bars[0]
         self._shown: tuple[str, int] | None = None
         self._beats = 0
         sheet = InlineStyleSheet(css=style.PANELS)
         self._panels = {name: _panel(name, sheet) for name in PANELS}
+        self._hold = HoldPanel(store.rig, link, sheet)
         self._beat = Div(name="beat", text="0", visible=False, disable_math=True)
         self._chooser = RadioButtonGroup(
             name="chooser",
@@ -56,7 +62,7 @@ class Session:
 
     def open(self, document: Document) -> None:
         """Put the page into a document."""
-        models = [*self._panels.values(), self._beat, self._chooser]
+        models = [*self._panels.values(), *self._hold.roots, self._beat, self._chooser]
         with document.models.freeze():  # else each root looks through all models again
             for model in (*models, *self._resistivities.figures, *self._paths.figures):
                 document.add_root(model)
@@ -98,6 +104,7 @@ class Session:
         panels["budget"].text = budget_panel(budget(bar.curves, self._store.systematic[bar.name]))
         panels["events"].text = list_panel.event_panel(run, len(self._store.bars) > 1)
         panels["streams"].text = list_panel.stream_panel(run)
+        self._hold.update(run.now_s is not None, self._store.all_stable(), run.field)
         self._show_curves(bar)
 
     def _show_curves(self, bar: BarFacts) -> None:

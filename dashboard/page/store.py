@@ -156,6 +156,11 @@ class RunStore:
             curves = self._curves[name].curves()
             return BarFacts(name, curves, bar.stable_at, dict(bar.cautions))
 
+    def all_stable(self) -> bool:
+        """Whether every Hall bar is stable now."""
+        with self._lock:
+            return all(bar.stable_at is not None for bar in self._summary.bars.values())
+
     def run(self) -> RunFacts:
         """How the run stands now."""
         with self._lock:

@@ -29,6 +29,7 @@ TEMPLATE = f"""
 <main>
   {_place("banner")}
   <header>{_place("head", "headline")}{_place("chooser")}</header>
+  {_place("hold")}{_place("hold_box")}
   <div class="hero">
     {_place("verdict")}{"".join(_place(name, "number") for name in _NUMBERS)}{_place("field")}
   </div>
@@ -79,6 +80,10 @@ h2:first-child {{ margin-top: 0; }}
 .list.budget {{ flex: 0 0 auto; }}
 .list.streams {{ flex: 0 0.1 auto; min-height: 76px; }}
 .list.events {{ flex: 1 4 60px; min-height: 60px; }}
+section.hold {{ min-height: 0; }}
+section.hold_box {{ position: fixed; z-index: 8; right: 14px; top: 92px; width: 560px;
+  max-width: 96vw; max-height: 86vh; overflow-y: auto; background: var(--card); border-radius: 8px;
+  box-shadow: 0 6px 30px #0004; padding: 0 16px; }}
 .column > .sweeps {{ flex: none; padding: 1px 8px 5px; }}
 #silent {{ position: fixed; z-index: 10; inset: 0 0 auto 0; padding: 14px 20px; text-align: center;
   font: 600 18px var(--font); color: #fff; background: var(--alarm); }}
@@ -206,6 +211,19 @@ tr.warning:not(.aside) td { font-weight: 700; }
 .event .kind { color: var(--soft); min-width: 50px; }
 .event.of-caution .kind { color: var(--warning); font-weight: 600; }
 .event.of-verdict .kind { color: var(--number); font-weight: 600; }
+.hold { display: flex; align-items: center; gap: 14px; padding: 5px 12px; min-height: 34px;
+  border: 1px solid var(--line); border-radius: 8px; background: var(--card); }
+.hold .word { font-weight: 600; white-space: nowrap; font-size: 15px; }
+.hold .told { overflow-wrap: anywhere; }
+.hold.armed { border-color: var(--warning); background: var(--warning-tint); }
+.hold.begun, .hold.checking { border-color: var(--number); background: var(--quiet-tint); }
+.hold.held, .hold.pause { border-color: var(--good); background: var(--good-tint); }
+.hold.pause .word { font-size: 18px; color: var(--good); }
+.hold.alarm { border-color: var(--alarm); background: var(--alarm); color: #fff; font-size: 17px; }
+.hold.alarm .word { font-size: 20px; }
+.cautionary p { margin: 8px 0 4px; overflow-wrap: anywhere; }
+.cautionary ul { margin: 0; padding-left: 18px; }
+.answer { font-weight: 600; padding: 4px 0 10px; }
 .event .bar { color: var(--soft); margin-right: 5px; }
 """
 
