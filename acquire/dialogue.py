@@ -13,6 +13,7 @@ import time
 from collections.abc import Callable
 from typing import Any, Protocol
 
+from acquire.config.block import Block
 from acquire.config.reader import Proof, ReaderSection, Setting
 from acquire.errors import BadReply, ConnectError
 from acquire.reply import Reply, escaped, fits, parse_replies, read_setting, split_fields
@@ -24,8 +25,11 @@ Known = dict[str, dict[str, float | int | str | None]]
 class Asked(Protocol):
     """The part of :class:`acquire.instrument.Instrument` that is used here."""
 
+    reply_after_s: float
+
     def open(self, known_identity: str | None = None) -> str: ...
     def ask(self, query: str) -> str: ...
+    def ask_block(self, query: str, block: Block) -> bytes: ...
     def expect_silence(self, wait_s: float = 0.0) -> None: ...
     def close(self) -> None: ...
 
@@ -95,6 +99,19 @@ class Dialogue:
         if not reply.in_order:
             self.close()
         return reply
+
+    def block(self, block: Block) -> tuple[bytes, float, float]:
+        """Empty the buffer: what it held, and when this was asked and began to be answered.
+
+        Raises InstrumentError.
+        """
+        asked_s = self._now()
+        (query,) = self._section.queries
+        data = self._wait(self._instrument.ask_block, query, block)
+        answered_s = asked_s + self._instrument.reply_after_s
+        if self._section.proof is not None:
+            self._prove(self._section.proof)
+        return data, asked_s, answered_s
 
     def _prove(self, proof: Proof) -> None:
         """Ask what has one answer only: it is not that to another question."""

@@ -9,7 +9,7 @@ Three rules stand here, each bought with wrong numbers or a hanging program else
   the bytes drip.
 
 Whatever goes wrong below comes out as one of the errors of :mod:`acquire.errors`. Not for several
-threads. Tried on TCP sockets and serial lines; USB and GPIB (``_read_message``) on a stand-in.
+threads. Tried on TCP sockets and serial lines; USB and GPIB on a stand-in.
 """
 
 from __future__ import annotations
@@ -27,6 +27,8 @@ import pyvisa
 from pyvisa.constants import BufferOperation, Parity, StatusCode, StopBits
 from pyvisa.resources import MessageBasedResource, SerialInstrument, TCPIPSocket
 
+from acquire.byte_stream import LONGEST_REPLY, ByteStream, Kind
+from acquire.config.block import Block
 from acquire.config.reader import Connection, SerialLine
 from acquire.errors import (
     BadReply,
@@ -37,41 +39,40 @@ from acquire.errors import (
     SessionLost,
 )
 from acquire.identity import identity_problem
+from acquire.ieee_block import LONGEST_BLOCK
 from acquire.reply import escaped
 from acquire.socket_line import (
     acknowledge_at_once,
     connection_problem,
-    is_readable,
     is_writable,
     socket_below,
-    waiting_bytes,
 )
 
 OPEN_TIMEOUT_MS = 2000  # a second try at reaching the host comes after 1 s on TCP
-LONGEST_REPLY = 16_384  # bytes; far above 64 numbers, far below what hurts
 LONGEST_QUESTION = 4096  # bytes; pyvisa-py would wait for ever between two pieces of a longer one
 _SLICE_MS = 100  # how finely a wait on a line that can't be watched is cut
-_POLL_S = 0.001
-_GULP = 64  # bytes read at once there; many more would take pyvisa-py longer than a slice
 
 _managers: Counter[str] = Counter()  # pyvisa has one manager a library: the last user closes it
 
 
 class Instrument:
-    """What a section describes. After any error it is closed; open it again to go on.
-
-    ``last_reply`` has the bytes that the latest question brought, terminator included, also
-    when they were no complete reply.
-    """
+    """What a section describes. After any error it is closed; open it again to go on."""
 
     def __init__(self, section: Connection, now: Callable[[], float] = time.monotonic) -> None:
         self.section = section
-        self.last_reply = b""
+        self.reply_after_s = 0.0
+        self._asked_s = 0.0
         self._now = now
+        self._stream = ByteStream(section, None, "message", None, self._now, _is_timeout)
         self._resource: Any = None
         self._socket: socket.socket | None = None
-        self._end = section.read_termination.encode("latin-1", "replace")
         self._timeout_s = section.timeout_ms / 1000
+
+    @property
+    def last_reply(self) -> bytes:
+        """The bytes that the latest question brought, terminator included, also when they were no
+        complete reply; of a block, its beginning."""
+        return self._stream.came
 
     @property
     def is_open(self) -> bool:
@@ -85,7 +86,7 @@ class Instrument:
         pattern, or if it is not ``known_identity``, where one is given.
         """
         self.close()
-        self.last_reply = b""
+        self._stream.forget()
         self._connect()
         try:
             identity = self.ask(self.section.identity.query)
@@ -107,8 +108,22 @@ class Instrument:
         """
         with self._exchange(query):
             self._write(query)
-            self.last_reply = self._read(query)
-            return self._text(query, self.last_reply)
+            return self._line(query).decode(self.section.encoding)
+
+    def ask_block(self, query: str, block: Block) -> bytes:
+        """Send one question and return what the block holds that answers it: bytes as they are,
+        or the text of a line. ``reply_after_s`` is then how long after the question it began.
+
+        Raises as :meth:`ask`.
+        """
+        with self._exchange(query):
+            self._write(query)
+            if block.format == "text":
+                data = self._line(query, LONGEST_BLOCK)
+            else:
+                data = self._stream.block(query, block.terminated)
+            self.reply_after_s = max((self._stream.began_s or 0.0) - self._asked_s, 0.0)
+            return data
 
     def tell(self, command: str) -> None:
         """Send one line that is not answered. Raises SessionLost or BadReply, and is closed then."""
@@ -127,7 +142,7 @@ class Instrument:
             raise SessionLost("the session is not open")
         try:
             with self._translated("(nothing)"):
-                self._expect_silence(wait_s)
+                self._stream.expect_silence(wait_s)
         except BaseException:
             self.close()
             raise
@@ -172,7 +187,7 @@ class Instrument:
         if not isinstance(resource, MessageBasedResource):
             raise TypeError("this kind of resource can't be asked questions")
         self._socket = socket_below(resource)
-        watched = self._socket is not None or not _is_stream(resource)
+        watched = _kind(resource, self._socket) in ("socket", "message")
         resource.timeout = self.section.timeout_ms if watched else _SLICE_MS
         resource.read_termination = self.section.read_termination
         if isinstance(resource, SerialInstrument):
@@ -181,20 +196,10 @@ class Instrument:
             resource.flush(BufferOperation.discard_read_buffer)
         if self._socket is not None:
             self._socket.settimeout(self._timeout_s)  # a full line would block a write for ever
-
-    def _expect_silence(self, wait_s: float = 0.0) -> None:
-        """Bytes that wait before a question is asked answer an earlier one."""
-        if self._socket is not None:
-            acknowledge_at_once(self._socket)
-            waiting = len(waiting_bytes(self._socket)) if is_readable(self._socket, wait_s) else 0
-        elif isinstance(self._resource, SerialInstrument):
-            waiting = self._serial_waiting(self._now() + wait_s)
-        else:
-            return
-        if waiting:
-            self.last_reply = self._resource.read_bytes(min(waiting, _GULP), break_on_termchar=True)
-            stray = escaped(self.last_reply)
-            raise BadReply(f"{stray!r} came without a question; does something else use the line?")
+        self._stream = ByteStream(
+            self.section, resource, _kind(resource, self._socket), self._socket,
+            lambda: self._now(), _is_timeout,
+        )  # fmt: skip
 
     def _write(self, query: str) -> None:
         data = (query + self.section.write_termination).encode(self.section.encoding)
@@ -202,90 +207,29 @@ class Instrument:
             raise InstrumentError(f"{escaped(query)!r} is too long for a question")
         if self._socket is not None and not is_writable(self._socket, self._timeout_s):
             raise SessionLost(f"{query!r} can't be sent: the line is blocked")
+        self._asked_s = self._now()
         self._resource.write_raw(data)
         if self._socket is not None:
             acknowledge_at_once(self._socket)
 
-    def _read(self, query: str) -> bytes:
-        if not _is_stream(self._resource):
-            return self._read_message()
-        deadline = self._now() + self._timeout_s
-        while True:
-            self.last_reply += self._read_some(deadline)
-            if self.last_reply.endswith(self._end[-1:]):
-                return self.last_reply
-            if len(self.last_reply) > LONGEST_REPLY:
-                raise BadReply(f"{query!r}: the reply does not end within {LONGEST_REPLY} bytes")
-            if self._now() >= deadline:
-                raise ReplyTimeout(self._silence(query))
-
-    def _read_some(self, deadline: float) -> bytes:
-        """What is there, up to a terminator; nothing if nothing comes in time or in a slice."""
-        if isinstance(self._resource, SerialInstrument):
-            return self._read_serial(deadline)
-        if self._socket is None:
-            return self._read_byte()
-        if not is_readable(self._socket, max(deadline - self._now(), 0.0)):
-            return b""
-        line, end, _ = waiting_bytes(self._socket).partition(self._end[-1:])
-        # What is behind the end must stay in the socket, where the next question will see it;
-        # asked for more, the library keeps the rest to itself and hands it out as an answer.
-        return bytes(self._resource.read_bytes(len(line + end)))
-
-    def _read_serial(self, deadline: float) -> bytes:
-        """Waits by itself: pyvisa-py counts by the wall clock, which may be set back."""
-        size = min(self._serial_waiting(deadline), _GULP)
-        return bytes(self._resource.read_bytes(size, break_on_termchar=True)) if size else b""
-
-    def _serial_waiting(self, deadline: float) -> int:
-        """How many bytes wait, as soon as there are any or it is too late."""
-        waiting = int(self._resource.bytes_in_buffer)
-        while not waiting and self._now() < deadline:
-            time.sleep(_POLL_S)
-            waiting = int(self._resource.bytes_in_buffer)
-        return waiting
-
-    def _read_byte(self) -> bytes:
-        """One byte, for asking for more would lose what came before a timeout."""
-        try:
-            return bytes(self._resource.read_bytes(1))
-        except pyvisa.VisaIOError as error:
-            if error.error_code == StatusCode.error_timeout:
-                return b""
-            raise
-
-    def _read_message(self) -> bytes:
-        """A reply over a bus that marks its end by itself (USB, GPIB, VXI-11)."""
-        data = bytes(self._resource.read_bytes(LONGEST_REPLY + 1, break_on_termchar=True))
-        if len(data) > LONGEST_REPLY:
-            raise BadReply(f"the reply does not end within {LONGEST_REPLY} bytes")
-        return data
-
-    def _text(self, query: str, data: bytes) -> str:
-        if not data.endswith(self._end):
-            raise BadReply(f"{query!r}: the reply {escaped(data)!r} {self._other_end()}")
-        return data[: len(data) - len(self._end)].decode(self.section.encoding)
-
-    def _silence(self, query: str) -> str:
-        within = f"within {self.section.timeout_ms} ms"
-        if not self.last_reply:
-            return f"{query!r}: no reply {within}"
-        return f"{query!r}: only {escaped(self.last_reply)!r} came {within}; it {self._other_end()}"
-
-    def _other_end(self) -> str:
-        """How a reply ends that does not end as configured, for whoever mends the configuration."""
-        told = f"does not end with read_termination = {self.section.read_termination!r}"
-        tail = self.last_reply[len(self.last_reply.rstrip(b"\r\n\0;")) :]
-        return f"{told} but with {escaped(tail)!r}" if tail else told
+    def _line(self, query: str, longest: int = LONGEST_REPLY) -> bytes:
+        """A reply up to its terminator, without it."""
+        data = self._stream.line(query, longest)
+        self._stream.came = data[:LONGEST_REPLY]
+        end = self.section.read_termination.encode("latin-1", "replace")
+        if not data.endswith(end):
+            other = self._stream.other_end()
+            raise BadReply(f"{query!r}: the reply {escaped(data)!r} {other}")
+        return data[: len(data) - len(end)]
 
     @contextmanager
     def _exchange(self, line: str) -> Iterator[None]:
         if self._resource is None:
             raise SessionLost(f"{line!r} can't be sent: the session is not open")
-        self.last_reply = b""
+        self._stream.forget()
         try:
             with self._translated(line):
-                self._expect_silence()
+                self._stream.expect_silence(0.0)
                 yield
         except BaseException:
             self.close()
@@ -298,8 +242,8 @@ class Instrument:
         except InstrumentError:
             raise
         except pyvisa.VisaIOError as error:
-            if error.error_code == StatusCode.error_timeout:
-                raise ReplyTimeout(self._silence(query)) from error
+            if _is_timeout(error):
+                raise ReplyTimeout(self._stream.silence(query)) from error
             raise SessionLost(f"{query!r}: {_reason(error)}") from error
         except UnicodeEncodeError as error:
             raise InstrumentError(f"{query!r} can't be sent as {self.section.encoding}") from error
@@ -328,9 +272,19 @@ def _set_serial(resource: SerialInstrument, line: SerialLine) -> None:
     resource.parity = Parity[line.parity]
 
 
-def _is_stream(resource: Any) -> bool:
-    """Whether only the terminator tells where a reply ends."""
-    return isinstance(resource, TCPIPSocket | SerialInstrument)
+def _kind(resource: Any, line: socket.socket | None) -> Kind:
+    """How a session tells where a reply ends."""
+    if line is not None:
+        return "socket"
+    if isinstance(resource, SerialInstrument):
+        return "serial"
+    return "unwatched" if isinstance(resource, TCPIPSocket) else "message"
+
+
+def _is_timeout(error: Exception) -> bool:
+    return (
+        isinstance(error, pyvisa.VisaIOError) and error.error_code == StatusCode.error_timeout
+    )
 
 
 def _reason(error: Exception) -> str:

@@ -8,18 +8,30 @@ from __future__ import annotations
 import time
 from collections.abc import Callable
 from dataclasses import dataclass, replace
+from typing import TypeVar
 
+from acquire.block_data import samples_in
+from acquire.config.block import Block
 from acquire.config.reader import ReaderSection, Setting
-from acquire.errors import ConnectError, InstrumentError
+from acquire.errors import BadReply, ConnectError, InstrumentError
 from acquire.instrument import Instrument
-from acquire.reply import Reply, parse_replies, read_setting, split_fields
+from acquire.reply import (
+    Reply,
+    escaped,
+    parse_fields,
+    parse_replies,
+    read_setting,
+    split_fields,
+)
+
+T = TypeVar("T")
 
 
 @dataclass(frozen=True)
 class Exchange:
     """One question and what came of it.
 
-    ``what`` is ``identity``, ``reading`` or ``setting NAME``. ``raw`` has the bytes that came,
+    ``what`` is ``identity``, ``reading``, ``proof`` or ``setting NAME``. ``raw`` has the bytes that came,
     terminator included, also when they were no good (show them by
     :func:`acquire.reply.escaped`). ``meaning`` is what they were read as, ``error`` what was
     wrong; both are texts for a person.
@@ -106,11 +118,14 @@ class _Probing:
             self._add("identity", asked, began, identity)
 
     def _ask(self, what: str, query: str) -> str | None:
+        return self._exchange(what, query, lambda: self._instrument.ask(query))
+
+    def _exchange(self, what: str, query: str, ask: Callable[[], T]) -> T | None:
         if not self._instrument.is_open:
             self._open()
         began = self._now()
         try:
-            reply = self._instrument.ask(query)
+            reply = ask()
         except InstrumentError as error:
             self._add(what, query, began, error=str(error))
             return None
@@ -118,6 +133,38 @@ class _Probing:
         return reply
 
     def _read(self) -> Reply | None:
+        block = self._section.block
+        reading = self._read_once() if block is None else self._read_block(block)
+        proof = self._section.proof
+        if proof is not None:
+            answer = self._ask("proof", proof.query)
+            if answer is not None and answer.strip() != proof.reply:
+                self._set(-1, error=f"{escaped(answer)!r} is not {proof.reply!r}")
+            elif answer is not None:
+                self._set(-1, meaning="as it must be")
+        return reading
+
+    def _read_block(self, block: Block) -> Reply | None:
+        """Empty the buffer; its last sample."""
+        (query,) = self._section.queries
+        data = self._exchange("reading", query, lambda: self._instrument.ask_block(query, block))
+        if data is None:
+            return None
+        try:
+            samples = samples_in(self._section, block, data)
+        except BadReply as error:
+            self._set(-1, error=str(error))
+            return None
+        if not samples:
+            self._set(-1, meaning="no samples")
+            return None
+        reading = parse_fields(self._section, samples[-1])
+        values = self._values(reading, 0, self._section.fields)
+        self._set(-1, meaning=f"{len(samples)} samples; the last: {values}")
+        self._judge(reading)
+        return reading
+
+    def _read_once(self) -> Reply | None:
         first = len(self._done)
         replies = [self._ask("reading", query) for query in self._section.queries]
         good = [reply for reply in replies if reply is not None]

@@ -20,6 +20,7 @@ from collections.abc import Callable, Sequence
 from contextlib import suppress
 from typing import Any
 
+from acquire.blocks import Blocks, Taken
 from acquire.child_process import Child, child_parser
 from acquire.clock import RunClock
 from acquire.config.reader import ReaderSection, Setting
@@ -87,6 +88,7 @@ class Reader:
         self.attempts = 0  # failures since the last good reading
         self.connected = False
         self._dialogue = Dialogue(section, instrument, known_identity, wait, now_s)
+        self._blocks = Blocks(section, self._dialogue) if section.block is not None else None
         self._recorder = Recorder(section, publish, now_s, note, complain)
         self._complain = complain
         self._now = now_s
@@ -128,23 +130,31 @@ class Reader:
     def _read(self) -> None:
         began = self._now()
         try:
-            reply = self._dialogue.reading()
-            took = (began, self._now())
-            if reply.in_order:
-                self._took.append(took[1] - began)
+            rows = self._once() if self._blocks is None else self._blocks.read()
+            self._took.append(self._now() - began)
+            if self.connected:
                 self._dialogue.expect_silence(self._silence_s())
         except InstrumentError as error:
             self._fail(error, began)
             return
-        if reply.in_order:
+        if self.connected:
             self.attempts = 0
-        else:
-            self._disconnect(reply.detail)
-        self._recorder.row(reply.status, reply.detail, reply.values, took)
+        for one in rows:
+            self._recorder.row(one.status, one.detail, one.values, one.took, one.time_s)
         if self.connected:
             self._refresh_settings()
         if self.connected:
             self._due = self._next_slot()
+
+    def _once(self) -> list[Taken]:
+        """One reading; out of turn, it costs the session."""
+        began = self._now()
+        reply = self._dialogue.reading()
+        ended = self._now()
+        if not reply.in_order:
+            self._disconnect(reply.detail)
+        middle = (began + ended) / 2
+        return [Taken(middle, reply.status, reply.detail, reply.values, (began, ended))]
 
     def _silence_s(self) -> float:
         """How long nothing more may come after an answer before it is believed."""
@@ -213,6 +223,8 @@ class Reader:
     def _begin(self, changed: bool) -> None:
         now = self._now()
         self.connected, self._stranger = True, False
+        if self._blocks is not None:
+            self._blocks.restart()
         self._settings_at = now + self.section.settings_period_s
         self._slot = math.floor(now / self.section.period_s)
         self._due = self._next_slot()

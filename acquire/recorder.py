@@ -93,9 +93,11 @@ class Recorder:
         detail: str = "",
         values: Sequence[float | None] = (),
         took: tuple[float, float] | None = None,
+        time_s: float | None = None,
     ) -> None:
-        """Publish a row that stands for the middle of ``took`` (from, to), or for now."""
-        self._add(self._cells(status, detail, values, took))
+        """Publish a row that stands for ``time_s``, for the middle of ``took`` (from, to), or, if
+        neither is given, for now."""
+        self._add(self._cells(status, detail, values, took, time_s))
 
     def settings(
         self,
@@ -147,8 +149,9 @@ class Recorder:
         detail: str = "",
         values: Sequence[float | None] = (),
         took: tuple[float, float] | None = None,
+        time_s: float | None = None,
     ) -> Row:
-        time_s, took_s = self._now(), None
+        time_s, took_s = self._now() if time_s is None else time_s, None
         if took is not None:
             time_s, took_s = (took[0] + took[1]) / 2, took[1] - took[0]
         return (time_s, took_s, status, detail, *(values or self._nothing))

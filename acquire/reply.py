@@ -61,6 +61,11 @@ def parse_replies(section: ReaderSection, replies: Sequence[str]) -> Reply:
     fields = [field for reply in replies for field in split_fields(section, reply)]
     if len(fields) != section.fields:
         return _miscounted(section, replies, len(fields))
+    return parse_fields(section, fields)
+
+
+def parse_fields(section: ReaderSection, fields: Sequence[str | float]) -> Reply:
+    """Read one reading out of its fields, texts or numbers, as many as there must be."""
     found: list[tuple[str, str]] = []
     values: list[float | None] = []
     in_order = True
@@ -128,7 +133,11 @@ def escaped(data: bytes | str, longest: int = _SHOWN) -> str:
     return shown if left <= 0 else f"{shown}... ({left} more)"
 
 
-def _read_value(value: Value, text: str) -> tuple[float | None, tuple[str, str] | None]:
+def _read_value(value: Value, text: str | float) -> tuple[float | None, tuple[str, str] | None]:
+    if isinstance(text, float):
+        if math.isfinite(text):
+            return text, _out_of_bounds(value, text)
+        text = str(text)
     if text in value.overload_texts:
         raise _Unreadable(f"{value.name}: the instrument says {text!r}", "overload", True)
     if _INFINITE.fullmatch(text):
@@ -154,10 +163,12 @@ def _out_of_bounds(value: Value, number: float) -> tuple[str, str] | None:
     return None
 
 
-def _status_word(section: ReaderSection, fields: list[str]) -> list[tuple[str, str]]:
+def _status_word(
+    section: ReaderSection, fields: Sequence[str | float]
+) -> list[tuple[str, str]]:
     if section.overload is None:
         return []
-    text = fields[section.overload.position - 1]
+    text = str(fields[section.overload.position - 1])
     word = read_number(text)
     if word is None or word < 0 or word != int(word) or word >= 2**64:
         raise _Unreadable(f"{escaped(text)!r} is no status word")

@@ -6,7 +6,9 @@ import time
 from collections.abc import Callable, Iterable, Iterator
 from contextlib import ExitStack
 
+from acquire.blocks import Blocks
 from acquire.config.reader import ReaderSection
+from acquire.dialogue import Dialogue
 from acquire.instrument import Instrument
 from acquire.readings import Reading
 from acquire.reply import parse_replies
@@ -21,31 +23,46 @@ def sample(
 ) -> Iterator[Reading]:
     """Readings of each reader in turn, ``rounds`` times, a round every ``period_s`` seconds.
 
-    Raises InstrumentError at the first exchange that fails.
+    A reader that hands over blocks gives all samples of each. Raises InstrumentError at the first
+    exchange that fails.
     """
     with ExitStack() as stack:
-        instruments = [Instrument(reader) for reader in readers]
-        for instrument in instruments:
-            stack.callback(instrument.close)
-            instrument.open()
+        takers = [_taker(stack, section, now_s) for section in readers]
         start = now_s()
         for number in range(rounds):
             sleep(max(start + number * period_s - now_s(), 0.0))
-            for instrument in instruments:
-                yield _reading(instrument, number, now_s)
+            for take in takers:
+                yield from take(number)
 
 
-def _reading(instrument: Instrument, seq: int, now_s: Callable[[], float]) -> Reading:
+def _taker(
+    stack: ExitStack, section: ReaderSection, now_s: Callable[[], float]
+) -> Callable[[int], Iterator[Reading]]:
+    """Opens an instrument; gives its readings for each round."""
+    instrument = Instrument(section)
+    stack.callback(instrument.close)
+    if section.block is None:
+        instrument.open()
+        return lambda number: iter([_reading(section, instrument, number, now_s)])
+    dialogue = Dialogue(section, instrument, now_s=now_s)
+    dialogue.connect()
+    blocks = Blocks(section, dialogue)
+    return lambda number: _samples(section.name, blocks)
+
+
+def _samples(reader: str, blocks: Blocks) -> Iterator[Reading]:
+    for one in blocks.read():
+        yield Reading(reader, 0, one.time_s, None, one.status, one.detail, one.values)
+
+
+def _reading(
+    section: ReaderSection, instrument: Instrument, seq: int, now_s: Callable[[], float]
+) -> Reading:
     began = now_s()
-    replies = [instrument.ask(query) for query in instrument.section.queries]
+    replies = [instrument.ask(query) for query in section.queries]
     ended = now_s()
-    reply = parse_replies(instrument.section, replies)
+    reply = parse_replies(section, replies)
+    middle, took_s = (began + ended) / 2, ended - began
     return Reading(
-        instrument.section.name,
-        seq,
-        (began + ended) / 2,
-        ended - began,
-        reply.status,
-        reply.detail,
-        reply.values,
+        section.name, seq, middle, took_s, reply.status, reply.detail, reply.values
     )

@@ -497,6 +497,30 @@ ELSEWHERE: dict[tuple[str, str], str] = {
     ("another instrument", "reader"): (
         "test_reader::test_another_instrument_is_said_once_and_never_used"
     ),
+    ("block cut in the middle", "reader"): "test_blocks::test_a_block_that_is_not_whole_is_none",
+    ("block in pieces", "reader"): "test_blocks::test_a_block_comes_in_any_pieces",
+    ("block that comes twice", "reader"): (
+        "test_blocks::test_a_block_that_comes_twice_is_used_once_and_nothing_is_lost"
+    ),
+    ("buffer overrun", "reader"): (
+        "test_blocks::test_a_buffer_that_ran_over_is_marked_and_shifts_nothing"
+    ),
+    ("NaN, sentinel or status bit in a block", "reader"): (
+        "test_blocks::test_what_is_wrong_in_a_block_is_marked_and_the_reader_goes_on"
+    ),
+    ("changed setting", "estimator"): (
+        "test_instrument_settings::test_a_time_constant_that_changes_is_used_from_its_reading_on"
+    ),
+    ("glitch at a change of range", "estimator"): (
+        "test_instrument_settings::test_readings_beside_a_change_of_range_are_not_used"
+    ),
+    ("unknown code of a setting", "estimator"): (
+        "test_instrument_settings::"
+        "test_while_a_code_is_not_known_nothing_is_used_and_that_is_said"
+    ),
+    ("all of a reader's life", "serial line"): (
+        "test_instrument::test_a_reader_on_a_serial_line_from_end_to_end"
+    ),
     ("late reply on a serial line", "reader"): (
         "test_instrument::test_what_comes_late_on_a_serial_line_is_thrown_away_on_opening"
     ),

@@ -4,6 +4,7 @@ matrix that one instrument can show."""
 from __future__ import annotations
 
 import os
+import struct
 import termios
 import threading
 import time
@@ -37,6 +38,7 @@ from acquire.errors import (
     SessionLost,
 )
 from acquire.instrument import LONGEST_REPLY, Instrument
+from acquire.reader import Reader
 from acquire.socket_line import is_writable, socket_below
 from acquire.stop import Stop, Stopped
 
@@ -562,6 +564,62 @@ def test_a_serial_line_that_is_pulled_out_is_lost() -> None:
     assert not instrument.is_open
     with pytest.raises(ConnectError):
         instrument.open()
+
+
+def test_a_reader_on_a_serial_line_from_end_to_end(
+    serial: SerialInstrument, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Readings, settings and blocks; a late answer and one that comes twice are none of its own."""
+    monkeypatch.setattr("acquire.reader.SHORTEST_PAUSE_S", 0.02)
+    data = b"".join(struct.pack(">2f", 0.5, 1.5) for _ in range(40))
+    serial.answers |= {"T?": b"9\n", "BUFFER?": b"#3%d" % len(data) + data + b"\n"}
+    rows: list[tuple[object, ...]] = []
+
+    def publish(*cells: object) -> int:
+        rows.append(cells)
+        return len(rows) - 1
+
+    def run(until: Callable[[], bool], **keys: object) -> None:
+        rows.clear()
+        one = section(serial.resource, timeout_ms=400, period_s=0.02, **keys)
+        instrument = Instrument(one)
+        reader = Reader(one, instrument, publish, time.monotonic)
+        deadline, pause = time.monotonic() + 30, threading.Event()
+        while not until():
+            assert time.monotonic() < deadline, rows
+            pause.wait(min(max(reader.step() - time.monotonic(), 0.0), 0.01))
+        reader.end()
+
+    def good() -> int:
+        return sum(row[2] == "ok" for row in rows)
+
+    settings = [{"name": "time_constant", "query": "T?", "codes": {"9": 0.3}}]
+    run(lambda: good() >= 3, settings=settings)
+    assert rows[0][2] == "settings"
+    assert {row[4] for row in rows if row[2] == "ok"} == {1.5}
+
+    steps = [
+        (lambda: good() >= 3, b"", b""),  # no answer now
+        (lambda: any(row[2] == "no_answer" for row in rows), b"8.0\n", b"1.5\n1.5\n"),  # but later
+        (lambda: any(row[2] == "bad_reply" for row in rows), b"", b"2.5\n"),
+    ]
+
+    def spoiled() -> bool:
+        if steps and steps[0][0]():
+            _, sent, serial.answers["X?"] = steps.pop(0)
+            serial.send(sent)
+        return any(row[4] == 2.5 for row in rows)
+
+    run(spoiled)
+    assert {row[4] for row in rows if row[2] == "ok"} == {1.5, 2.5}
+
+    block = {"format": "float32", "sample_period_s": 0.0005}
+    values = [{"name": "x", "position": 1}, {"name": "y", "position": 2}]
+    run(
+        lambda: len(rows) > 3, queries=["BUFFER?"], fields=2, values=values, block=block
+    )
+    assert all(row[4:] == (0.5, 1.5) for row in rows if row[2] == "ok")
+    assert {row[2] for row in rows} <= {"ok", "bad_reply", "settings", "end"}
 
 
 def test_other_libraries_have_no_socket_to_look_at() -> None:

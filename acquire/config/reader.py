@@ -6,6 +6,7 @@ from typing import Annotated, Literal
 
 from pydantic import Field, field_validator, model_validator
 
+from acquire.config.block import Block
 from acquire.config.sections import Name, NotNegative, Positive, Section, Several
 
 Unit = Literal["V", "A", "T", "Ohm", "K", "Hz", "s", "1"]
@@ -111,6 +112,7 @@ class ReaderSection(Connection):
 
     ``queries`` are sent one after the other for each reading; the fields of their replies,
     split at ``separator``, are counted through. ``fields`` is how many there must be.
+    With ``block`` the one query empties a buffer of many samples, each of ``fields`` numbers.
     With ``elsewhere`` (publish and answer address) the reader runs on its own, started by
     ``rampside read``, and its stream is only listened to.
     """
@@ -123,6 +125,7 @@ class ReaderSection(Connection):
     values: Several[Value]
     overload: OverloadBits | None = None
     proof: Proof | None = None
+    block: Block | None = None
     settings: Several[Setting] = ()
     settings_period_s: NotNegative = 0.0
     elsewhere: Elsewhere | None = None
@@ -142,9 +145,19 @@ class ReaderSection(Connection):
         last = max(value.position for value in self.values)
         if self.overload is not None:
             last = max(last, self.overload.position)
+        if self.block is not None:
+            last = max(last, self.block.counter_position or 0)
+            self._check_block(self.block)
         if last > self.fields:
             raise ValueError(f"position {last} is beyond the reply's fields = {self.fields}")
         return self
+
+    def _check_block(self, block: Block) -> None:
+        if len(self.queries) > 1:
+            raise ValueError("block: one query empties the buffer; take the others away")
+        name = block.sample_period_setting or block.sample_rate_setting
+        if name is not None and name not in [setting.name for setting in self.settings]:
+            raise ValueError(f"block: {name!r} is none of the reader's settings")
 
 
 class Elsewhere(Section):

@@ -3,7 +3,8 @@
 A lock-in: ``X?``, ``Y?``, ``R?``, or ``XY?`` in one reply, or ``XYS?`` with the status word too;
 ``STATUS?`` (bit 4: at full scale); ``TIMECONSTANT?``, ``SLOPE?``, ``SENSITIVITY?`` as codes or as
 numbers, as the scenario says; ``PHASE?``. The last four without ``?`` and with a code (the phase:
-degrees) behind them set it.
+degrees) behind them set it. With a buffer: ``BUFFER?`` for all samples since it was emptied last, as
+text or as a definite-length block, ``SAMPLEPERIOD?`` (s).
 
 A magnet supply: ``FIELD?``, ``TARGET?``, ``RATE?`` (T/min), ``STATE?`` (0 waiting, 1 ramping, 2 at
 target, 3 held); ``PAUSE`` holds the field, ``RESUME`` goes on.
@@ -14,6 +15,7 @@ from __future__ import annotations
 import math
 from importlib.metadata import PackageNotFoundError, version
 
+from acquire.laboratory.buffer import SimulatedBuffer
 from acquire.laboratory.commands import Command, Interpreter, Moment, number, place
 from acquire.laboratory.lockin import Shown, SimulatedLockin
 from acquire.laboratory.magnet import SimulatedMagnet
@@ -36,10 +38,10 @@ def identity(model: str, name: str) -> str:
 
 def lockin_interpreter(lockin: SimulatedLockin) -> Interpreter:
     """Everything that a lock-in understands."""
-    return Interpreter(
-        identity("LOCK-IN", lockin.section.name),
-        {**_outputs(lockin), **_told_settings(lockin), **_set_settings(lockin)},
-    )
+    commands = {**_outputs(lockin), **_told_settings(lockin), **_set_settings(lockin)}
+    if lockin.section.buffer is not None:
+        commands = _buffered(commands, SimulatedBuffer(lockin.section.buffer, lockin))
+    return Interpreter(identity("LOCK-IN", lockin.section.name), commands)
 
 
 def magnet_interpreter(magnet: SimulatedMagnet) -> Interpreter:
@@ -60,6 +62,23 @@ def magnet_interpreter(magnet: SimulatedMagnet) -> Interpreter:
             "RESUME": lambda moment, text: magnet.go_on(moment.time_s),
         },
     )
+
+
+def _buffered(commands: dict[str, Command], buffer: SimulatedBuffer) -> dict[str, Command]:
+    """The commands, each after the buffer has taken its samples up to then; and its own."""
+    own: dict[str, Command] = {
+        "BUFFER?": lambda moment, text: buffer.emptied(),
+        "SAMPLEPERIOD?": lambda moment, text: buffer.period_text,
+    }
+
+    def after_samples(command: Command) -> Command:
+        def run(moment: Moment, text: str) -> str | None:
+            buffer.advance(moment.time_s)
+            return command(moment, text)
+
+        return run
+
+    return {name: after_samples(command) for name, command in {**commands, **own}.items()}
 
 
 def _outputs(lockin: SimulatedLockin) -> dict[str, Command]:

@@ -67,6 +67,21 @@ class Magnet(Section):
         return path
 
 
+class Buffer(Section):
+    """A lock-in's buffer: a sample (X, Y, status word, and its number if there is a ``counter``)
+    every ``sample_period_s``, by a clock that is off by the share ``clock_error``. ``when_full``:
+    whether the oldest samples are dropped then, or no more are taken until it has been emptied.
+    """
+
+    sample_period_s: Positive
+    capacity: Annotated[int, Field(ge=1, le=100_000)] = 10_000
+    when_full: Literal["drops_oldest", "stops"] = "drops_oldest"
+    format: Literal["text", "float32", "float64"] = "float32"
+    byte_order: Literal["little", "big"] = "big"
+    counter: bool = False
+    clock_error: Annotated[float, Field(gt=-0.1, lt=0.1)] = 0.0
+
+
 class Lockin(Section):
     """A lock-in on one pair of contacts: white noise and signal through equal RC stages.
 
@@ -85,6 +100,7 @@ class Lockin(Section):
     poles: Annotated[int, Field(ge=1, le=8)] = 4
     noise_V_per_rtHz: NotNegative = 1e-9
     phase_deg: float = 0.0
+    buffer: Buffer | None = None
     sensitivity_V: Positive = 1.0
     sensitivities_V: Several[Positive] = (
         1e-7, 3e-7, 1e-6, 3e-6, 1e-5, 3e-5, 1e-4, 3e-4, 1e-3, 3e-3, 0.01, 0.03, 0.1, 0.3, 1.0,
