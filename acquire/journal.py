@@ -21,6 +21,7 @@ from acquire.cells import RowCodec
 from acquire.closing import Closing
 from acquire.disk import sync_folder, write_whole
 from acquire.errors import JournalError
+from acquire.journal_place import put_back, stands_at
 from acquire.journal_reader import check_header, read_rows, whole_lines
 from acquire.tables import Row, Table
 
@@ -133,9 +134,15 @@ class Journal(Closing):
             self._unsynced = True
 
     def sync(self) -> None:
-        """Have everything written so far survive a power cut. Raises JournalError."""
+        """Have everything written so far survive a power cut, in the place where it belongs.
+
+        Raises JournalError, also once when the file had been taken away and was put back.
+        """
         with self._sync_lock:
-            if self._fd < 0 or not self._unsynced:
+            if self._fd < 0:
+                return
+            self._keep_place()
+            if not self._unsynced:
                 return
             self._unsynced = False
             try:
@@ -153,6 +160,22 @@ class Journal(Closing):
                 fd, self._fd = self._fd, -1
                 if fd >= 0:
                     os.close(fd)
+
+    def _keep_place(self) -> None:
+        if stands_at(self._fd, self.path):
+            return
+        with self._lock:
+            try:
+                new, what = put_back(self._fd, self.path, self._end())
+                try:
+                    with suppress(OSError):  # a file system without locks
+                        fcntl.flock(new, fcntl.LOCK_EX | fcntl.LOCK_NB)
+                    os.dup2(new, self._fd, inheritable=False)
+                finally:
+                    os.close(new)
+            except OSError as error:
+                raise self._error("was taken away and can't be put back", error) from None
+        raise JournalError(f"{self.path}: {what} while it was written, and has been put back.")
 
     def _reopen(self) -> None:
         self._claim()

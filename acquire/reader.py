@@ -16,7 +16,7 @@ import sys
 import time
 import zlib
 from collections import deque
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from contextlib import suppress
 from typing import Any
 
@@ -33,6 +33,7 @@ from acquire.recorder import RETRY_S, Recorder
 from acquire.run_folder import RunFolder, open_run
 from acquire.settings import changes, not_understood
 from acquire.stop import Stop, Stopped
+from acquire.unnoted import unnoted_settings
 
 SHORTEST_PAUSE_S, LONGEST_PAUSE_S = 0.5, 10.0
 SILENT_ROW_S = 1.0  # a reader without an instrument says so at least so often
@@ -69,6 +70,7 @@ class Reader:
     ----------
     known_identity, wait : see :class:`acquire.dialogue.Dialogue`.
     publish, now_s, note, complain : see :class:`acquire.recorder.Recorder`.
+    unnoted : what a predecessor has published and not noted.
     """
 
     def __init__(
@@ -82,6 +84,7 @@ class Reader:
         note: Callable[[dict[str, Any]], None] = lambda entry: None,
         complain: Callable[[str], None] = lambda text: None,
         wait: Callable[..., Any] = lambda call, *args: call(*args),
+        unnoted: Iterable[dict[str, Any]] = (),
     ) -> None:
         self.section = section
         self.missed = 0  # readings that were due while something else took its time
@@ -90,6 +93,7 @@ class Reader:
         self._dialogue = Dialogue(section, instrument, known_identity, wait, now_s)
         self._blocks = Blocks(section, self._dialogue) if section.block is not None else None
         self._recorder = Recorder(section, publish, now_s, note, complain)
+        self._recorder.note_later(unnoted)
         self._complain = complain
         self._now = now_s
         self._due = self._try_at = self._silent_at = now_s()
@@ -277,7 +281,8 @@ def _read_for_run(run: RunFolder, name: str, child: Child) -> None:
     section = _section(run, name)
     live = live_run_for(run, name)
     clock = RunClock(live.monotonic_start)
-    told = [entry for entry in run.instruments() if entry.get("reader") == name]
+    unnoted = unnoted_settings(run, section)
+    told = [entry for entry in run.instruments() if entry.get("reader") == name] + unnoted
     with reader_output(run, live, reading_table(name, section), child.complain) as publisher:
         instrument = Instrument(section)
         reader = Reader(
@@ -289,6 +294,7 @@ def _read_for_run(run: RunFolder, name: str, child: Child) -> None:
             note=run.note_instrument,
             complain=child.complain,
             wait=child.stop.wait,
+            unnoted=unnoted,
         )
         try:
             run_reader(reader, child.stop, clock.now_s, child.wanted)

@@ -12,7 +12,7 @@ from __future__ import annotations
 import json
 import math
 from collections import deque
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -116,6 +116,10 @@ class Recorder:
         cells = self._cells("settings", json.dumps(known))
         self._add(cells, {**told, "answers": _noted(answers or {})}, words)
         self._write_notes()
+
+    def note_later(self, entries: Iterable[dict[str, Any]]) -> None:
+        """Note what a predecessor has published and not noted."""
+        self._unnoted.extend(entries)
 
     def confirm(self, answers: Answers, at_once: bool = False) -> None:
         """Note that settings were answered as before, when and how often; in the entry that is

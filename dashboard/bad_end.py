@@ -25,9 +25,10 @@ from acquire.clock import utc_now_text
 from acquire.errors import JournalError, RampsideError, RunError
 from acquire.hold.record import left_open
 from acquire.journal import IN_USE, Journal, read_rows
-from acquire.readings import Reading
+from acquire.readings import Reading, stream_of
 from acquire.run_folder import LiveRun, RunFolder, open_run
 from acquire.tables import Row
+from acquire.unnoted import unnoted_settings
 from analyse.estimate_table import ESTIMATES, EVENTS
 from analyse.row_maker import DETERMINED, RowMaker
 from analyse.service import KIND, Output, Service
@@ -113,6 +114,10 @@ class _Closing:
             told = torn
             if {ESTIMATES.stream, EVENTS.stream} <= journals.keys():
                 told = self._complete(journals[ESTIMATES.stream], journals[EVENTS.stream], torn)
+            for reader in self.run.rig.readers:
+                if stream_of(reader.name) in journals:
+                    for entry in unnoted_settings(self.run, reader):
+                        self.run.note_instrument(entry)
             for journal in journals.values():
                 journal.sync()
             self.run.end_live()

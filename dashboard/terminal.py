@@ -5,9 +5,12 @@ Nothing here may stop a run: once the terminal is gone, nothing is written to it
 
 from __future__ import annotations
 
+import os
+import sys
 import threading
 import time
 from collections.abc import Callable
+from contextlib import suppress
 from types import TracebackType
 from typing import Self
 
@@ -68,8 +71,19 @@ class _Written:
                 return
             try:
                 write()
-            except (OSError, ValueError):  # closed terminal, broken pipe, closed file
+            except (OSError, ValueError, SystemExit):
+                # A closed terminal, a closed file, a broken pipe; of the last, rich makes an exit.
                 self._gone = True
+                if self._console.file is sys.stdout:
+                    forget_stdout()
+
+
+def forget_stdout() -> None:
+    """Nobody reads us any more: what is still to be written must not fail at the end."""
+    with suppress(OSError, ValueError):
+        nowhere = os.open(os.devnull, os.O_WRONLY)
+        os.dup2(nowhere, sys.stdout.fileno())
+        os.close(nowhere)
 
 
 class LineView(_Written):

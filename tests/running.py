@@ -46,6 +46,11 @@ class Running:
         self._process.stdin.close()
 
     @property
+    def pid(self) -> int:
+        """The number of the command's process."""
+        return self._process.pid
+
+    @property
     def text(self) -> str:
         """All that it has printed."""
         with self._said:

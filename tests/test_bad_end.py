@@ -123,6 +123,9 @@ def test_it_is_as_an_undisturbed_run_but_for_its_marks(
     assert f"added {added} estimates" in str(mark[4])
     last_s = max(reading.time_s for readings in rows().values() for reading in readings)
     assert mark[0] == last_s
+    noted = [(entry["reader"], entry["seq"]) for entry in crashed.run.instruments()]
+    settings = [(n, r.seq) for n in READERS for r in rows()[n] if r.status == "settings"]
+    assert noted == settings, "what its readers had not come to note"
     assert close_if_ended_badly(crashed.run, BY) == ""
     crashed.assert_closed_once(whole)
 

@@ -240,6 +240,50 @@ def test_a_failed_sync_is_told_and_tried_again(path, monkeypatch):
         assert len(synced) == 1
 
 
+def test_a_file_that_is_removed_while_it_is_written_is_put_back(path):
+    with Journal(path, TABLE) as journal:
+        journal.append((1, "before", 1))
+        path.unlink()
+        journal.append((2, "while it has no name", 2))
+        with pytest.raises(JournalError, match="was removed while it was written"):
+            journal.sync()
+        journal.sync()
+        journal.append((3, "after", 3))
+        with pytest.raises(JournalError, match="somebody else is writing"):
+            Journal(path, TABLE)
+        assert journal.piece(0).lines.count(b"\n") == 3
+    texts = [row[2] for row in read_rows(path, TABLE)]
+    assert texts == ["before", "while it has no name", "after"]
+    assert [file.name for file in path.parent.iterdir()] == [path.name]
+
+
+def test_a_file_that_is_replaced_while_it_is_written_is_put_back_and_the_other_kept(path):
+    with Journal(path, TABLE) as journal:
+        for number in range(2):
+            journal.append((number, "ours", 1))
+            saved = path.with_name("saved")
+            saved.write_text(f"from a spreadsheet {number}")
+            saved.replace(path)
+            with pytest.raises(JournalError, match="was replaced by another file .now a.csv.other"):
+                journal.sync()
+    assert len(list(read_rows(path, TABLE))) == 2
+    kept = [path.with_name(f"{path.name}.other{end}").read_text() for end in ("", "-2")]
+    assert kept == ["from a spreadsheet 0", "from a spreadsheet 1"]
+
+
+def test_a_folder_that_is_taken_away_is_told_until_it_is_back(path):
+    elsewhere = path.parent.with_name("elsewhere")
+    journal = Journal(path, TABLE)
+    journal.append((1, "ours", 1))
+    path.parent.rename(elsewhere)
+    for _ in range(2):
+        with pytest.raises(JournalError, match="can't be put back .No such file"):
+            journal.sync()
+    elsewhere.rename(path.parent)
+    journal.close()
+    assert [row[2] for row in read_rows(path, TABLE)] == ["ours"]
+
+
 def test_rows_of_a_killed_predecessor_are_synced(path, monkeypatch):
     write(path)
     synced = []

@@ -641,6 +641,7 @@ def test_a_process_that_was_killed_goes_on_with_the_next_number(
     first.wait()
     with open(live.run.journal_path(live.table), "ab") as file:
         file.write(b"7,torn")
+    (live.run.path / "instruments.json").write_text("[]")  # killed before it was noted
     known = len(live.rows())
     second = live.start("lockin")
     wait_for(lambda: len(live.rows()) >= known + 3)
@@ -653,7 +654,12 @@ def test_a_process_that_was_killed_goes_on_with_the_next_number(
     assert rows[known][3] == "settings"
     times = [row[1] for row in rows]
     assert times == sorted(times)  # type: ignore[type-var]
-    assert len(live.run.instruments()) == 2
+    noted = live.run.instruments()
+    assert [(entry["seq"], entry["identity"]) for entry in noted] == [
+        (0, IDENTITY), (known, IDENTITY),
+    ]  # fmt: skip
+    assert noted[0]["time_s"] == rows[0][1]
+    assert live.run.started_utc < noted[0]["utc"] < noted[1]["utc"]
 
 
 def test_after_a_restart_another_instrument_is_not_accepted(

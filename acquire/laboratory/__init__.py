@@ -1,6 +1,6 @@
 """A simulated laboratory: instruments on TCP sockets before a Hall bar in a ramping magnet.
 
-    python -m acquire.laboratory CONFIG [--parent PID]
+    python -m acquire.laboratory CONFIG [--truth FILE] [--parent PID]
 
 Its physics is written apart from ``analyse``, so that a formula wrong in one of the two shows.
 
@@ -13,6 +13,7 @@ lockin, magnet  the instruments' insides: numbers in, numbers out
 bench           all of them together, each with the commands that it understands
 commands        lines of text to replies, in the manner of IEEE 488.2
 faults          misbehaviour on request
+truth           what the instruments truly answered, on record
 wire            one connection: bytes to lines, and replies that can be late
 server          the sockets
 ==============  ==============================================================================

@@ -1,6 +1,6 @@
 """The process of the simulated laboratory.
 
-    python -m acquire.laboratory CONFIG [--parent PID]
+    python -m acquire.laboratory CONFIG [--truth FILE] [--parent PID]
 
 Writes one line when all instruments listen: ``ready`` and, as JSON, the port of each. Ends in
 order (exit status 0) on SIGTERM, or when its parent has died; 1: a port can't be had; 2: the
@@ -14,14 +14,17 @@ import faulthandler
 import json
 import os
 import sys
+import time
 from collections.abc import Sequence
-from contextlib import suppress
+from contextlib import ExitStack, suppress
+from pathlib import Path
 
 from acquire.config import ConfigError, Problem, load
 from acquire.errors import RampsideError
 from acquire.laboratory.bench import Bench
 from acquire.laboratory.scenario import Scenario
 from acquire.laboratory.server import LaboratoryServer
+from acquire.laboratory.truth import TruthLog
 from acquire.stop import Stop
 
 
@@ -32,11 +35,18 @@ def main(arguments: Sequence[str] | None = None) -> int:
     )
     parser.add_argument("config")
     parser.add_argument("--parent", type=int, metavar="PID", help="end when this process has died")
+    parser.add_argument("--truth", type=Path, metavar="FILE", help="add each reply to this file")
     options = parser.parse_args(arguments)
+    began = time.monotonic()
     stop = Stop()
     stop.install()
     try:
-        with LaboratoryServer(Bench(_scenario(options.config))) as server:
+        with ExitStack() as stack:
+            scenario = _scenario(options.config)
+            bench = Bench(scenario)
+            if options.truth is not None:
+                bench = Bench(scenario, stack.enter_context(TruthLog(options.truth, began)).add)
+            server = stack.enter_context(LaboratoryServer(bench, lambda: time.monotonic() - began))
             with suppress(OSError):  # nobody listens any more
                 print(f"ready {json.dumps(server.ports)}", flush=True)
             while not stop.requested and options.parent in (None, os.getppid()):

@@ -26,7 +26,7 @@ from numpy.typing import NDArray
 from pydantic import ValidationError
 
 from acquire.laboratory.commands import CommandError, Interpreter, Moment, asks
-from acquire.laboratory.faults import Faults, Piece
+from acquire.laboratory.faults import Faults, Piece, Treatment
 from acquire.laboratory.hall_bar import HallBar
 from acquire.laboratory.instruments import lockin_interpreter, magnet_interpreter
 from acquire.laboratory.lockin import SimulatedLockin
@@ -60,10 +60,16 @@ class Place:
 
 class Bench:
     """The laboratory without its sockets. Times are in seconds since its start and never run
-    backwards."""
+    backwards. ``note`` hears of each reply: instrument, question, reply, time, what becomes of it.
+    """
 
-    def __init__(self, scenario: Scenario) -> None:
+    def __init__(
+        self,
+        scenario: Scenario,
+        note: Callable[[str, str, str, float, Treatment], None] = lambda *reply: None,
+    ) -> None:
         self.scenario = scenario
+        self._note = note
         self.hall_bar = HallBar(scenario.sample)
         self.magnet = SimulatedMagnet(scenario.magnet, scenario.seed)
         self.lockins = {
@@ -89,6 +95,8 @@ class Bench:
             return Outcome()
         moment = Moment(time_s, treatment.overload)
         reply = place.interpreter.answer(line, moment, treatment.obeys)
+        if reply is not None:
+            self._note(name, line, reply, time_s, treatment)
         if treatment.cut:
             return Outcome(cut=True)
         if reply is None:
