@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator
 from dataclasses import dataclass
 from itertools import pairwise
@@ -42,6 +43,7 @@ class Blocks:
         self._dialogue = dialogue
         self._clock: SampleClock | None = None
         self._last: bytes = b""
+        self._since_s = -math.inf
         self._fresh = False  # whether no block has come since the clock began
         self._count: int | None = None  # the number of the last sample, where they have numbers
 
@@ -62,7 +64,9 @@ class Blocks:
     def _rows(
         self, data: bytes, samples: list[Sample], asked_s: float, answered_s: float
     ) -> list[Taken]:
-        since_s = asked_s - self._block.latency_s  # nothing that comes later is from before
+        # Nothing that comes later is from before this:
+        self._since_s = max(asked_s - self._block.latency_s, self._since_s)
+        since_s = self._since_s if math.isfinite(self._since_s) else answered_s
         again, self._last = data == self._last and _varies(samples), data
         period_s = self._period_s()
         if period_s is None:
@@ -81,6 +85,7 @@ class Blocks:
                 left = [place - skipped for place in places]
                 times = self._clock.times(left[-1] + 1 if left else 0, asked_s, answered_s)
                 self._fresh = False
+                self._since_s = max([self._since_s, *times[-1:]])
                 return list(self._placed(samples, left, times))
             except OutOfStep as error:
                 why = f"{error}: some were lost, or came twice, or the sample period is another"
@@ -90,6 +95,9 @@ class Blocks:
     def _begin(
         self, period_s: float, samples: list[Sample], asked_s: float, answered_s: float
     ) -> None:
+        if asked_s == -math.inf:  # it waited for us: when it was sent is not known
+            self._clock = None
+            return
         self._clock = SampleClock(period_s, self._block.latency_s)
         self._clock.start(asked_s, answered_s)
         self._fresh = True

@@ -60,10 +60,17 @@ class ByteStream:
         """A new question is asked."""
         self.came, self.began_s = b"", None
 
+    def is_waiting(self) -> bool:
+        """Whether bytes are there already, as far as that can be seen."""
+        if self._line is not None:
+            return is_readable(self._line, 0.0)
+        return self._kind == "serial" and self._resource.bytes_in_buffer > 0
+
     def expect_silence(self, wait_s: float) -> None:
         """Raises BadReply if bytes are there or come within that time: nothing was asked."""
         if self._line is not None:
-            acknowledge_at_once(self._line)
+            if wait_s:
+                acknowledge_at_once(self._line)
             waiting = len(waiting_bytes(self._line)) if is_readable(self._line, wait_s) else 0
         elif self._kind == "serial":
             waiting = self._serial_waiting(self._now() + wait_s)

@@ -9,6 +9,7 @@ have other numbers of fields than before; something comes unasked soon after the
 
 from __future__ import annotations
 
+import math
 import time
 from collections.abc import Callable
 from typing import Any, Protocol
@@ -30,6 +31,8 @@ class Asked(Protocol):
     def open(self, known_identity: str | None = None) -> str: ...
     def ask(self, query: str) -> str: ...
     def ask_block(self, query: str, block: Block) -> bytes: ...
+    def next_block(self, block: Block) -> bytes: ...
+    def tell(self, command: str) -> None: ...
     def expect_silence(self, wait_s: float = 0.0) -> None: ...
     def close(self) -> None: ...
 
@@ -84,6 +87,9 @@ class Dialogue:
             self._answered(name, found, when[name])
         self.identity, self.settings = identity, settings
         self._counts = None
+        if self._section.block is not None and self._section.block.unasked:
+            for query in self._section.queries:
+                self._wait(self._instrument.tell, query)
         return changed
 
     def reading(self) -> Reply:
@@ -101,11 +107,17 @@ class Dialogue:
         return reply
 
     def block(self, block: Block) -> tuple[bytes, float, float]:
-        """Empty the buffer: what it held, and when this was asked and began to be answered.
+        """Empty the buffer, or wait for the next block that comes unasked: what it held, after
+        when it was whole and no later than when. The former is -inf if it was there already.
 
         Raises InstrumentError.
         """
         asked_s = self._now()
+        if block.unasked:
+            data = self._wait(self._instrument.next_block, block)
+            waited_s = self._instrument.reply_after_s
+            came_s = asked_s + waited_s
+            return data, came_s - block.jitter_s if waited_s else -math.inf, came_s
         (query,) = self._section.queries
         data = self._wait(self._instrument.ask_block, query, block)
         answered_s = asked_s + self._instrument.reply_after_s

@@ -118,12 +118,24 @@ class Instrument:
         """
         with self._exchange(query):
             self._write(query)
-            if block.format == "text":
-                data = self._line(query, LONGEST_BLOCK)
-            else:
-                data = self._stream.block(query, block.terminated)
+            data = self._block(query, block)
             self.reply_after_s = max((self._stream.began_s or 0.0) - self._asked_s, 0.0)
             return data
+
+    def next_block(self, block: Block) -> bytes:
+        """What the next block holds that comes unasked. ``reply_after_s`` is then for how long it
+        was waited for; 0 if it was there already. Raises as :meth:`ask`."""
+        with self._exchange("(the next block)", silent=False):
+            began_s, waiting = self._now(), self._stream.is_waiting()
+            data = self._block("(the next block)", block)
+            waited_s = (self._stream.began_s or 0.0) - began_s
+            self.reply_after_s = 0.0 if waiting else max(waited_s, 1e-9)
+            return data
+
+    def _block(self, query: str, block: Block) -> bytes:
+        if block.format == "text":
+            return self._line(query, LONGEST_BLOCK)
+        return self._stream.block(query, block.terminated)
 
     def tell(self, command: str) -> None:
         """Send one line that is not answered. Raises SessionLost or BadReply, and is closed then."""
@@ -223,13 +235,14 @@ class Instrument:
         return data[: len(data) - len(end)]
 
     @contextmanager
-    def _exchange(self, line: str) -> Iterator[None]:
+    def _exchange(self, line: str, silent: bool = True) -> Iterator[None]:
         if self._resource is None:
             raise SessionLost(f"{line!r} can't be sent: the session is not open")
         self._stream.forget()
         try:
             with self._translated(line):
-                self._stream.expect_silence(0.0)
+                if silent:
+                    self._stream.expect_silence(0.0)
                 yield
         except BaseException:
             self.close()

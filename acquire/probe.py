@@ -145,9 +145,9 @@ class _Probing:
         return reading
 
     def _read_block(self, block: Block) -> Reply | None:
-        """Empty the buffer; its last sample."""
-        (query,) = self._section.queries
-        data = self._exchange("reading", query, lambda: self._instrument.ask_block(query, block))
+        """Empty the buffer, or wait for the next block that comes; its last sample."""
+        query = "".join(self._section.queries)
+        data = self._exchange("reading", query, lambda: self._block_of(query, block))
         if data is None:
             return None
         try:
@@ -163,6 +163,15 @@ class _Probing:
         self._set(-1, meaning=f"{len(samples)} samples; the last: {values}")
         self._judge(reading)
         return reading
+
+    def _block_of(self, query: str, block: Block) -> bytes:
+        if not block.unasked:
+            return self._instrument.ask_block(query, block)
+        if query:
+            self._instrument.tell(query)
+        data = self._instrument.next_block(block)
+        self._instrument.close()  # which ends the stream, so that something can be asked again
+        return data
 
     def _read_once(self) -> Reply | None:
         first = len(self._done)

@@ -60,8 +60,8 @@ class Reader:
     second (or once a period, if that is longer) that there is no answer.
 
     A reading is published once the line has stayed silent after it for as long as the slowest of
-    the last readings took, but at most half of the time that is left to the next one: had it been
-    the answer to an earlier question, its own would still have come.
+    the last readings took, but at most a quarter of the time that is left to the next one: had it
+    been the answer to an earlier question, its own would still have come.
 
     What can't be recorded waits (see :mod:`acquire.recorder`). When too much does, the session is
     closed and nothing is asked until there is room; then identity and settings are asked anew.
@@ -92,6 +92,7 @@ class Reader:
         self.connected = False
         self._dialogue = Dialogue(section, instrument, known_identity, wait, now_s)
         self._blocks = Blocks(section, self._dialogue) if section.block is not None else None
+        self._streamed = section.block is not None and section.block.unasked
         self._recorder = Recorder(section, publish, now_s, note, complain)
         self._recorder.note_later(unnoted)
         self._complain = complain
@@ -136,7 +137,7 @@ class Reader:
         try:
             rows = self._once() if self._blocks is None else self._blocks.read()
             self._took.append(self._now() - began)
-            if self.connected:
+            if self.connected and not self._streamed:
                 self._dialogue.expect_silence(self._silence_s())
         except InstrumentError as error:
             self._fail(error, began)
@@ -148,7 +149,7 @@ class Reader:
         if self.connected:
             self._refresh_settings()
         if self.connected:
-            self._due = self._next_slot()
+            self._due = self._now() if self._streamed else self._next_slot()
 
     def _once(self) -> list[Taken]:
         """One reading; out of turn, it costs the session."""
@@ -164,7 +165,7 @@ class Reader:
         """How long nothing more may come after an answer before it is believed."""
         period_s = self.section.period_s
         left_s = period_s - self._now() % period_s
-        return min(max(SHORTEST_SILENCE_S, *self._took), left_s / 2)
+        return min(max(SHORTEST_SILENCE_S, *self._took), left_s / 4)
 
     def _next_slot(self) -> float:
         slot = max(math.floor(self._now() / self.section.period_s), self._slot) + 1
@@ -231,7 +232,7 @@ class Reader:
             self._blocks.restart()
         self._settings_at = now + self.section.settings_period_s
         self._slot = math.floor(now / self.section.period_s)
-        self._due = self._next_slot()
+        self._due = now if self._streamed else self._next_slot()
         if changed or not self._told:
             self._tell()
         else:

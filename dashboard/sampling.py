@@ -47,11 +47,15 @@ def _taker(
     dialogue = Dialogue(section, instrument, now_s=now_s)
     dialogue.connect()
     blocks = Blocks(section, dialogue)
-    return lambda number: _samples(section.name, blocks)
+    return lambda number: _samples(section.name, blocks, instrument)
 
 
-def _samples(reader: str, blocks: Blocks) -> Iterator[Reading]:
-    for one in blocks.read():
+def _samples(reader: str, blocks: Blocks, instrument: Instrument) -> Iterator[Reading]:
+    """What the buffer has; of blocks that come by themselves, all up to one that is waited for."""
+    rows = blocks.read()
+    while not instrument.reply_after_s:
+        rows += blocks.read()
+    for one in rows:
         yield Reading(reader, 0, one.time_s, None, one.status, one.detail, one.values)
 
 

@@ -203,6 +203,7 @@ class Lab:
             ],
         }  # fmt: skip
         self.bench = Bench(Scenario.model_validate(scenario))
+        self.period_s = PERIOD_S * (1 + float(str(buffer.get("clock_error", 0.0))))
         self.now, self.took_s = 10.0, 0.004
         self.reply_after_s = 0.0
         self.rows: list[tuple[Any, ...]] = []
@@ -270,7 +271,7 @@ class Lab:
     def missing(self) -> int:
         """Samples that lie between the first and the last good one and did not come."""
         good = self.good()
-        return round((good[-1][1] - good[0][1]) / PERIOD_S) + 1 - len(good)
+        return round((good[-1][1] - good[0][1]) / self.period_s) + 1 - len(good)
 
 
 TOLERANCE_S = PERIOD_S + 0.004
@@ -295,6 +296,7 @@ def test_a_clock_that_is_off_is_followed(clock_error: float) -> None:
     lab = Lab(clock_error=clock_error)
     lab.run(lab.reader(), 30.0)
     assert lab.marked() == []
+    assert lab.missing() == 0
     assert max(map(abs, lab.errors())) < TOLERANCE_S
     assert abs(30.0 * clock_error) > 2 * TOLERANCE_S
 
@@ -386,6 +388,77 @@ def test_what_is_wrong_in_a_block_is_marked_and_the_reader_goes_on(spoil: Any) -
     assert lab.marked()
     assert lab.rows[-1][2] == "ok"
     assert max(map(abs, lab.errors())) < TOLERANCE_S
+
+
+class Stream(Lab):
+    """Blocks that come by themselves every 0.1 s, after up to ``jitter_s`` on the way."""
+
+    def __init__(self, **buffer: object) -> None:
+        super().__init__(**buffer)
+        self.sent_s, self.jitter_s, self.rng = math.inf, 0.03, random.Random(2)
+        self.on_its_way: list[tuple[float, bytes]] = []
+
+    def tell(self, command: str) -> None:
+        assert command == "BUFFER?"
+        self.sent_s = self.now
+
+    def next_block(self, block: object) -> bytes:
+        """What was sent while nobody listened waits."""
+        asked = self.now
+        while not self.on_its_way or self.sent_s < asked:
+            self.sent_s += 0.1
+            (piece,) = self.bench.hear("xy", "BUFFER?", self.sent_s).pieces
+            data = piece.data.removesuffix(b"\n")
+            came = max(
+                self.sent_s + self.jitter_s * self.rng.random(), *(t for t, _ in self.on_its_way), 0.0
+            )
+            self.on_its_way.append((came, data[2 + int(data[1:2]) :]))
+        came, data = self.on_its_way.pop(0)
+        self.reply_after_s = max(came - asked, 0.0)
+        self.now = max(asked, came) + 0.001
+        return self.spoil.pop(0)(data) if self.spoil else data
+
+
+STREAMED = {"unasked": True, "jitter_s": 0.04}
+LATE_S = PERIOD_S + 0.04
+
+
+def test_blocks_that_come_unasked_are_rows_at_their_times() -> None:
+    lab = Stream(clock_error=1e-3)
+    lab.run(lab.reader(block=STREAMED), 30.0)
+    assert lab.marked() == []
+    assert len(lab.good()) > 2900
+    assert lab.missing() == 0
+    assert max(map(abs, lab.errors())) < LATE_S
+
+
+def test_unasked_blocks_that_waited_for_a_slow_reader_keep_their_times() -> None:
+    lab = Stream()
+    reader = lab.reader(block=STREAMED)
+    lab.run(reader, 3.0)
+    lab.now += 2.0
+    lab.run(reader, 3.0)
+    assert lab.marked() == []
+    assert lab.missing() == 0
+    assert max(map(abs, lab.errors())) < LATE_S
+
+
+def test_unasked_blocks_that_are_lost_or_come_twice_shift_nothing() -> None:
+    lab = Stream()
+    reader = lab.reader(block=STREAMED)
+    lab.run(reader, 1.0)
+    lab.spoil = [lambda data: data, lambda data: data[: len(data) // 48 * 24]]
+    lab.run(reader, 3.0)
+    assert len(lab.marked()) == 1
+    assert lab.rows[-1][2] == "ok"
+    assert max(map(abs, lab.errors())) < LATE_S
+
+
+def test_nothing_can_be_asked_of_an_instrument_that_streams() -> None:
+    for keys in ({"settings_period_s": 1.0}, {"proof": {"query": "*OPC?", "reply": "1"}}):
+        with pytest.raises(ValueError, match="nothing can be asked"):
+            section(block=STREAMED, **keys)
+    assert section(block=STREAMED, queries=[]).queries == ()
 
 
 def test_the_sample_period_may_be_a_setting_that_changes() -> None:
@@ -610,6 +683,28 @@ def test_a_long_text_is_a_block_too_and_one_without_end_is_cut_off(
     scripted.answers["BUFFER?"] = (*(Send(b"7" * 65_536) for _ in range(80)), "")
     with pytest.raises(BadReply, match=f"does not end within {LONGEST_BLOCK}"):
         instrument.ask_block("BUFFER?", block)
+
+
+def test_blocks_that_come_unasked_on_a_socket(scripted: ScriptedInstrument) -> None:
+    """And check shows one, then asks the settings on a new connection."""
+    data = np.array([[1e-3, 2e-3, 0.0]] * 25, ">f4").tobytes()
+    scripted.answers["GO"] = tuple(Send(packed(data) + b"\n") for _ in range(3))
+    scripted.answers["T?"] = "0.3"
+    one = section(
+        scripted.resource,
+        block=STREAMED,
+        queries=["GO"],
+        settings=[{"name": "T", "query": "T?"}],
+    )
+    instrument = Instrument(one)
+    instrument.open()
+    instrument.tell("GO")
+    assert [instrument.next_block(one.block) for _ in range(3)] == [data] * 3
+    instrument.close()
+    found = probe(one)
+    assert found.good
+    assert [item.what for item in found.exchanges] == ["identity", "reading", "setting T"]
+    assert "25 samples" in (found.exchanges[1].meaning or "")
 
 
 def test_check_shows_what_a_block_holds(scripted: ScriptedInstrument) -> None:

@@ -21,6 +21,9 @@ class Block(Section):
     The instrument takes a sample every ``sample_period_s``, or by a setting of its own: a period
     in seconds or a rate in hertz. With ``counter_position`` each sample has its number, which goes
     up by one. The newest sample is as old as ``latency_s`` when the query comes, at least.
+
+    With ``unasked`` the blocks come by themselves once the query, if there is one, was sent; each
+    is on its way for ``latency_s``, and for up to ``jitter_s`` longer.
     """
 
     format: Format
@@ -31,6 +34,8 @@ class Block(Section):
     counter_position: Annotated[int, Field(ge=1, le=64)] | None = None
     latency_s: NotNegative = 0.0
     terminated: bool = True
+    unasked: bool = False
+    jitter_s: Positive = 0.05
 
     @model_validator(mode="after")
     def _one_period(self) -> Block:

@@ -135,11 +135,10 @@ class ReaderSection(Connection):
         if not self.values:
             raise ValueError("values: a reader needs at least one value")
         if self.elsewhere is None:
-            missing = [
-                key
-                for key in ("resource", "write_termination", "read_termination", "queries")
-                if not getattr(self, key)
-            ]
+            needed = ["resource", "write_termination", "read_termination", "queries"]
+            if self.block is not None and self.block.unasked:
+                needed.remove("queries")
+            missing = [key for key in needed if not getattr(self, key)]
             if missing:
                 raise ValueError(f"missing: {', '.join(missing)}")
         last = max(value.position for value in self.values)
@@ -155,6 +154,11 @@ class ReaderSection(Connection):
     def _check_block(self, block: Block) -> None:
         if len(self.queries) > 1:
             raise ValueError("block: one query empties the buffer; take the others away")
+        if block.unasked and (self.settings_period_s or self.proof is not None):
+            raise ValueError(
+                "block.unasked: nothing can be asked while blocks come by themselves; take "
+                "settings_period_s and proof away"
+            )
         name = block.sample_period_setting or block.sample_rate_setting
         if name is not None and name not in [setting.name for setting in self.settings]:
             raise ValueError(f"block: {name!r} is none of the reader's settings")
