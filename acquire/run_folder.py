@@ -201,6 +201,7 @@ def create_run(
     path: Path | None = None
     try:
         path = _new_folder(parent, f"{started:%Y-%m-%d_%H%M%S}_{rig.run.title}")
+        sync_folder(path.parent)
         run = RunFolder(path, utc_text(started), rig, config_bytes, monotonic_start)
         (path / "readings").mkdir()
         write_whole(path / "config.toml", config_bytes)
@@ -266,7 +267,6 @@ def _new_folder(parent: Path, name: str) -> Path:
         except FileExistsError:
             number += 1
             continue
-        sync_folder(parent)
         return path
 
 

@@ -12,7 +12,6 @@ from acquire.bus import Endpoint, Subscriber, ask, free_endpoints
 from acquire.bus.addresses import check_loopback
 from acquire.config import Rig
 from acquire.errors import BusError, UsageError
-from acquire.readings import stream_of
 from acquire.run_folder import LiveRun, RunFolder, create_run
 from analyse.estimate_table import ESTIMATES, EVENTS
 from dashboard import roles
@@ -20,6 +19,7 @@ from dashboard.bad_end import complete
 from dashboard.browser import open_page
 from dashboard.earlier_runs import EarlierRuns
 from dashboard.event_sender import EventSender
+from dashboard.hangs import Hangs
 from dashboard.hold_watch import HoldWatch
 from dashboard.ports import LOOPBACK, page_port
 from dashboard.progress import Progress
@@ -37,7 +37,6 @@ SHOW_S = 0.25
 # a machine with nothing else to do they need 0.5 s.
 END_S, LAST_S, READERS_END_S, EVENTS_END_S, FINISH_S, COMPLETE_S = 2.0, 0.3, 1.1, 0.1, 0.6, 0.3
 LABORATORY_S = 15.0  # how long the simulated instruments may take to be there
-HUNG_S = 60.0  # a reader says at least once a second that it has nothing, so it hangs by then
 
 
 @dataclass(frozen=True)
@@ -114,7 +113,7 @@ class _Watcher:
         self._said_over = False
         self._finished = False
         self._to_open = plan.browser
-        self._news_at = dict.fromkeys(live.endpoints, time.monotonic())
+        self._hangs = Hangs(plan.rig, time.monotonic())
         self._subscriber = Subscriber(run.run_id, live.endpoints, run_tables(plan.rig))
         self._health = self._subscriber.health()
         self._events = EventSender(live.requests, ask)
@@ -135,7 +134,8 @@ class _Watcher:
         while not (wish.is_set() or self._time_is_up() or self._ended_with_the_ramp()):
             self._listen()
             self._supervisor.poll()
-            self._replace_hung_readers()
+            for role, why in self._hangs.look(self._health, time.monotonic()):
+                self._supervisor.replace(role, why)
             over = self._ramp_end is not None and self._ramp_end.over
             self._hold.look(self.progress, over, self._states())
             if time.monotonic() - shown >= SHOW_S:
@@ -223,7 +223,7 @@ class _Watcher:
     def _listen(self) -> None:
         for stream, row in self._subscriber.receive(LOOK_S):
             self.progress.take(stream, row)
-            self._news_at[stream] = time.monotonic()
+            self._hangs.news(stream, time.monotonic())
             self._note_field()
         self._health = self._subscriber.health()
         self._note_recording()
@@ -246,15 +246,6 @@ class _Watcher:
             self._hold.field(time_s, field_T)
             if self._ramp_end is not None:
                 self._ramp_end.add(time_s, field_T)
-
-    def _replace_hung_readers(self) -> None:
-        here = [reader for reader in self._plan.rig.readers if reader.elsewhere is None]
-        for reader in here:  # a relay has nothing to say while its reader elsewhere is silent
-            stream, allowed_s = stream_of(reader.name), HUNG_S + 2 * reader.period_s
-            if time.monotonic() - self._news_at[stream] > allowed_s:
-                self._news_at[stream] = time.monotonic()
-                why = f"published nothing for {allowed_s:g} s"
-                self._supervisor.replace(roles.reader_role(reader), why)
 
     def _ended_with_the_ramp(self) -> bool:
         if self._ramp_end is None or not self._ramp_end.over:

@@ -267,6 +267,19 @@ def test_a_folder_that_can_not_be_written_is_told_and_still_replayed(
     assert crashed.run.live() is not None
 
 
+def test_a_run_of_one_reader_alone_is_closed_too(tmp_path: Path, gone: int) -> None:
+    table = READERS["magnet"]
+    run = create_run(rig(), CONFIG, [table], tmp_path)
+    run.write_live(free_endpoints([table.stream]), "", pid=gone)
+    with open(run.journal_path(table), "ab") as file:
+        file.write(b"0,1.0,to")
+    told = close_if_ended_badly(run, "rampside read")
+    assert "readings/magnet.csv: 8 bytes of a torn last line were cut away." in told
+    assert run.live() is None
+    assert not run.journal_path(EVENTS).exists()
+    assert list(run.rows(table)) == []
+
+
 def test_a_reader_that_comes_too_late_adds_nothing(crashed: Crashed) -> None:
     close_if_ended_badly(crashed.run, BY)
     table = READERS["magnet"]

@@ -1,3 +1,4 @@
+import errno
 import json
 import os
 import re
@@ -287,3 +288,36 @@ def test_a_place_where_no_run_can_be_made_is_told(tmp_path):
     (tmp_path / "file").write_text("")
     with pytest.raises(RunError, match="a run can't be made there"):
         create_run(RIG, CONFIG, TABLES, tmp_path / "file")
+
+
+def full(fd):
+    raise OSError(errno.ENOSPC, "No space left on device")
+
+
+def test_a_full_disk_makes_no_half_run(tmp_path, monkeypatch):
+    monkeypatch.setattr(os, "fsync", full)
+    with pytest.raises(RunError, match="a run can't be made there .No space left on device"):
+        create_run(RIG, CONFIG, TABLES, tmp_path / "runs")
+    assert list((tmp_path / "runs").iterdir()) == []
+
+
+def test_a_full_disk_costs_neither_the_notes_nor_their_file(run, monkeypatch):
+    run.note_instrument({"reader": "magnet", "seq": 0})
+    with monkeypatch.context() as patch:
+        patch.setattr(os, "fsync", full)
+        with pytest.raises(RunError, match="instruments.json: can't be written .No space left"):
+            run.note_instrument({"reader": "magnet", "seq": 1})
+    assert [entry["seq"] for entry in run.instruments()] == [0]
+    assert not list(run.path.glob(".*")), "what was written of the new one takes no room"
+    run.note_instrument({"reader": "magnet", "seq": 1})
+    assert [entry["seq"] for entry in run.instruments()] == [0, 1]
+
+
+def test_a_start_of_the_machine_since_then_is_known_by_its_name(run):
+    """The number of the supervisor may be that of a daemon by now, as old as the machine's start."""
+    live = run.write_live(ENDPOINTS, "", time.monotonic(), os.getpid())
+    assert live.alive
+    again = replace(live, boot="another")
+    assert again.machine_restarted
+    assert not again.alive
+    assert replace(live, boot="").alive, "written before it was named"
