@@ -154,6 +154,18 @@ def _add_page_options(command: argparse.ArgumentParser) -> None:
         help="port of the page (default %(default)s; 0: any free one)",
     )
     command.add_argument("--no-browser", action="store_true", help="open no browser")
+    command.add_argument(
+        "--page-address",
+        metavar="A",
+        default="127.0.0.1",
+        help="where the page listens (default %(default)s, this computer alone; others need a secret)",
+    )
+    command.add_argument(
+        "--page-secret",
+        metavar="FILE",
+        type=Path,
+        help="ask for the secret in this file; made if it is missing",
+    )
 
 
 def _add_folder(command: argparse.ArgumentParser) -> None:

@@ -10,6 +10,7 @@ from acquire.config.reader import ReaderSection
 from acquire.readings import stream_of
 from acquire.run_folder import RunFolder
 from dashboard.child import python
+from dashboard.page_address import PageAddress
 from dashboard.ports import listens
 from dashboard.supervisor import Role
 
@@ -24,7 +25,9 @@ def reader_role(reader: ReaderSection) -> str:
     return f"reader {reader.name}" if reader.elsewhere is None else f"relay of {reader.name}"
 
 
-def roles_of(run: RunFolder, page_port: int, last_heard: LastHeard) -> list[Role]:
+def roles_of(
+    run: RunFolder, page_port: int, last_heard: LastHeard, place: PageAddress
+) -> list[Role]:
     """Readers, or relays where they run elsewhere, estimator and page of a run."""
     roles = [
         Role(
@@ -44,8 +47,8 @@ def roles_of(run: RunFolder, page_port: int, last_heard: LastHeard) -> list[Role
     roles.append(
         Role(
             PAGE,
-            python("dashboard.page", run.path, "--port", page_port),
-            lambda since: listens(page_port),
+            python("dashboard.page", run.path, "--port", page_port, *place.arguments()),
+            lambda since: listens(page_port, place.address),
         )
     )
     return roles

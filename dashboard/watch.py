@@ -21,7 +21,8 @@ from dashboard.earlier_runs import EarlierRuns
 from dashboard.event_sender import EventSender
 from dashboard.hangs import Hangs
 from dashboard.hold_watch import HoldWatch
-from dashboard.ports import LOOPBACK, page_port
+from dashboard.page_address import HERE, PageAddress
+from dashboard.ports import page_port
 from dashboard.progress import Progress
 from dashboard.ramp_end import RampEnd
 from dashboard.streams import run_tables
@@ -48,6 +49,7 @@ class WatchPlan:
     config: bytes
     folder: Path | None = None
     port: int = 0
+    page: PageAddress = HERE
     browser: bool = False
     exit_when_over: bool = False
     seconds: float | None = None
@@ -70,7 +72,7 @@ def watch(plan: WatchPlan, view: View, wish: Event) -> tuple[RunFolder, Summary]
         raise UsageError("--exit needs a [ramp] in the configuration, which says when it is over.")
     if plan.arm_hold and plan.rig.hold is None:
         raise UsageError("--arm-hold needs a [hold] in the configuration, which says what is sent.")
-    port = page_port(plan.port)
+    port = page_port(plan.port, plan.page.address)
     endpoints, requests = endpoints_of(plan.rig)
     run = create_run(plan.rig, plan.config, list(run_tables(plan.rig).values()), plan.folder)
     with HoldWatch(run, view, plan.bell) as hold:
@@ -105,7 +107,7 @@ class _Watcher:
     ) -> None:
         self._plan, self._run, self._live, self._view = plan, run, live, view
         self._hold = hold
-        self._address = f"http://{LOOPBACK}:{port}"
+        self._address, self._address_told = plan.page.url(port), plan.page.told(port)
         self.progress = Progress(run.run_id, plan.rig)
         ramp = plan.rig.ramp
         self._ramp_end = None if ramp is None else RampEnd(ramp.path_T, ramp.duration_s)
@@ -122,7 +124,7 @@ class _Watcher:
 
     def go_on(self, wish: Event) -> None:
         """Start everything and look after it until something ends it."""
-        self._view.say(f"Page: {self._address}\nRun:  {self._run.path}")
+        self._view.say(f"Page: {self._address_told}\nRun:  {self._run.path}")
         if self._plan.laboratory:
             self._start_laboratory(wish)
         self._hold.begin(self._events.send, self._plan.arm_hold, wish)
@@ -210,7 +212,7 @@ class _Watcher:
         return True
 
     def _roles(self, port: int) -> list[Role]:
-        found = roles.roles_of(self._run, port, self._last_heard)
+        found = roles.roles_of(self._run, port, self._last_heard, self._plan.page)
         if self._plan.laboratory:
             config = self._run.path / "config.toml"
             ports = roles.laboratory_ports(self._plan.rig)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 import threading
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
@@ -11,7 +12,7 @@ from typing import Any
 
 import pytest
 from made_run import MadeRun, PageProcess, estimates, ramp
-from playwright.sync_api import Browser, ConsoleMessage, Page, Request, expect
+from playwright.sync_api import Browser, ConsoleMessage, Dialog, Page, Request, expect
 
 SOON_MS = 15_000
 SCRIPT = "<script>window.harmed=1</script><img src=x onerror='window.harmed=1'>"
@@ -27,9 +28,11 @@ class Watched:
         self.page = page
         self.complaints: list[str] = []
         self.foreign: list[str] = []
+        self.dialogs: list[str] = []
         page.on("console", self._console)
         page.on("pageerror", lambda error: self.complaints.append(str(error)))
         page.on("request", self._request)
+        page.on("dialog", self._dialog)
 
     def section(self, name: str) -> Any:
         """A part of the page, by its class."""
@@ -60,16 +63,25 @@ class Watched:
         return found
 
     def zoom(self, plot: str, low: float, high: float) -> None:
-        """Zoom a plot's field axis as a person does with a tool."""
+        """Zoom a plot's field axis as a person does with a tool, and let the server hear of it."""
         self.page.evaluate(
             """([name, low, high]) => Bokeh.documents[0].get_model_by_name(name)
             .x_range.setv({start: low, end: high})""",
             [plot, low, high],
         )
+        beat = "Number(Bokeh.documents[0].get_model_by_name('beat').text)"
+        self.page.wait_for_function(
+            "last => Number(Bokeh.documents[0].get_model_by_name('beat').text) >= last + 3",
+            arg=self.page.evaluate(beat),
+        )
 
     def _console(self, message: ConsoleMessage) -> None:
         if message.type in ("error", "warning"):
             self.complaints.append(message.text)
+
+    def _dialog(self, dialog: Dialog) -> None:
+        self.dialogs.append(dialog.message)
+        dialog.dismiss()
 
     def _request(self, request: Request) -> None:
         if not request.url.startswith(("http://127.0.0.1:", "data:", "blob:")):
@@ -142,6 +154,7 @@ def test_numbers_appear_and_narrow_as_rows_arrive_and_a_reload_shows_the_whole_r
             expect(density).to_contain_text("too wide")
             expect(seen.section("events")).to_contain_text("scatter more than they should")
             expect(seen.section("field")).to_contain_text("about")
+            wait_for(lambda: seen.points("path_mobility") > 0, "the mobility's path")
             wide = seen.axis("path_mobility", "y_range")
 
             made.estimate(*rows[60:])
@@ -150,9 +163,9 @@ def test_numbers_appear_and_narrow_as_rows_arrive_and_a_reload_shows_the_whole_r
             expect(seen.section("verdict")).to_contain_text("good enough since +")
             expect(density).to_contain_text("✓ met")
             expect(seen.section("field")).to_contain_text("target met")
+            wait_for(lambda: seen.points("resistivity") == 300, "all points")
             narrow = seen.axis("path_mobility", "y_range")
             assert narrow[1] - narrow[0] < wide[1] - wide[0]
-            assert seen.points("resistivity") == 300
 
             seen.page.reload()
             expect(seen.section("verdict")).to_contain_text("300 field points")
@@ -196,22 +209,59 @@ def test_a_stream_that_stops_looks_stopped_and_comes_back(
 
 
 def test_what_instruments_and_people_say_is_shown_as_text(browser: Browser, tmp_path: Path) -> None:
-    with MadeRun(tmp_path, sample=SCRIPT) as made:
+    turned = f"\u202e{SCRIPT}\u2066\x1b[31m"
+    with MadeRun(tmp_path, sample=turned) as made:
         made.estimate(*estimates(ramp(1.0, 20)))
-        made.identify("magnet", SCRIPT)
+        made.identify("magnet", turned)
         made.reading("magnet", None, "bad_reply", SCRIPT)
-        made.event("note", "note", f"$$x$$ {SCRIPT}", None)
+        made.event("note", "note", f"$$x$$ {turned}", None)
+        made.event("note", "note", "long" * 15_000, None)
         made.event("caution", "oscillations", SCRIPT)
         made.event(SCRIPT, SCRIPT, SCRIPT)
         with served(made.path) as process, opened(browser, process.address()) as seen:
             for place in ("streams", "events", "headline"):
                 expect(seen.section(place)).to_contain_text(SCRIPT)
-            expect(seen.section("events")).to_contain_text("$$x$$")
-            assert seen.page.evaluate("window.harmed ?? 0") == 0
-            assert seen.page.evaluate(
-                "[...document.querySelectorAll('*')].every(e => !e.shadowRoot"
-                " || !e.shadowRoot.querySelector('script, img'))"
-            )
+            expect(seen.section("headline")).to_contain_text("\\u202e<script>")
+            expect(seen.section("events")).to_contain_text("$$x$$ \\u202e<script>")
+            expect(seen.section("events")).to_contain_text("… (60000 characters)")
+            assert_harmless(seen)
+            for plot in seen.page.locator("section.plot").all():  # hovering raises what hangs on it
+                plot.hover()
+            assert_harmless(seen)
+
+
+def test_what_a_folder_and_a_configuration_are_called_is_shown_as_text(
+    browser: Browser, tmp_path: Path
+) -> None:
+    """A run that came from elsewhere: a megabyte of markup as its sample, a name to fit."""
+    long = SCRIPT + "\u202e" + SCRIPT * (2**20 // len(SCRIPT))
+    with MadeRun(tmp_path, live=False, sample=long) as made:
+        made.estimate(*estimates(ramp(1.0, 20)))
+    name = b"</title><script>window.harmed=1<script><img src=x onerror=window.harmed=1>\xff"
+    path = Path(os.fsdecode(os.fsencode(tmp_path) + b"/" + name.replace(b"/", b"")))
+    made.path.rename(path)
+    with served(path) as process, opened(browser, process.address()) as seen:
+        expect(seen.section("headline")).to_contain_text("<img src=x onerror=window.harmed=1>\\udcff")
+        expect(seen.section("headline")).to_contain_text("characters)")
+        assert "<img src=x onerror=window.harmed=1>" in seen.page.title()
+        assert_harmless(seen)
+        assert len(seen.page.content()) < 300_000
+
+
+def assert_harmless(seen: Watched) -> None:
+    """Nothing that somebody said has become a part of the page, or a window over it."""
+    assert seen.dialogs == []
+    assert seen.page.evaluate("window.harmed ?? 0") == 0
+    assert seen.page.evaluate(
+        """(() => {
+            const within = (root) => [...root.querySelectorAll('*')].flatMap(
+                e => e.shadowRoot ? [e, ...within(e.shadowRoot)] : [e]);
+            return within(document).filter(
+                e => e.matches('img, iframe, object, embed, a[href^="javascript"]')
+                || (e.matches('script') && !e.nonce && !e.src)
+                || [...e.attributes].some(a => a.name.startsWith('on'))).map(e => e.outerHTML);
+        })()"""
+    ) == []
 
 
 def test_a_long_run_that_has_ended_is_shown_from_disk_in_few_points(

@@ -45,7 +45,7 @@ def get(port: int, path: str = "/", **headers: str) -> tuple[int, dict[str, str]
         given = {name.replace("_", "-"): value for name, value in headers.items()}
         line.request("GET", path, headers=given)
         reply = line.getresponse()
-        return reply.status, dict(reply.headers), reply.read().decode()
+        return reply.status, dict(reply.headers), reply.read().decode(errors="replace")
     finally:
         line.close()
 
@@ -127,8 +127,37 @@ def test_the_browser_is_told_to_ask_nobody_else(port: int) -> None:
     policy = headers["Content-Security-Policy"]
     assert "default-src 'none'" in policy
     assert f"connect-src 'self' ws://127.0.0.1:{port};" in policy
-    assert "frame-ancestors 'none'" in policy
+    assert "frame-ancestors 'none'" in policy and "form-action 'self'" in policy
+    scripts = re.search(r"script-src ([^;]*);", policy)
+    assert scripts is not None and "unsafe" not in scripts[1]
+    nonce = re.search(r"'nonce-([\w-]{20,})'", scripts[1])
+    assert nonce is not None and nonce[1] not in get(port)[1]["Content-Security-Policy"]
+    assert set(re.findall(r"<script[^>]*nonce=\"([\w-]+)\"", text)) == {nonce[1]}
+    assert text.count("<script") == text.count(f'<script nonce="{nonce[1]}"')
     assert not re.search(r"(?:src|href)=\"(?:https?:)?//", text)
+
+
+@pytest.mark.parametrize(
+    "path", ["/", "/static/js/bokeh.min.js", "/favicon.ico", "/x", "/static/no-such-file", "/ws"]
+)
+def test_every_answer_keeps_the_browser_from_more_than_it_is_meant_to_do(
+    port: int, path: str
+) -> None:
+    headers = get(port, path)[1]
+    assert headers["X-Content-Type-Options"] == "nosniff"
+    assert headers["X-Frame-Options"] == "DENY"
+    assert headers["Referrer-Policy"] == "same-origin"
+    assert headers["Cross-Origin-Resource-Policy"] == "same-origin"
+    assert "default-src 'none'" in headers["Content-Security-Policy"]
+    assert "ornado" not in headers["Server"]
+    if not path.startswith("/static/"):
+        assert headers["Cache-Control"] == "no-store"
+
+
+def test_another_site_may_not_ask_even_for_what_is_public(port: int) -> None:
+    assert get(port, "/", Origin="http://evil.example")[0] == 403
+    assert get(port, "/static/js/bokeh.min.js", Origin="null")[0] == 403
+    assert get(port, "/login")[0] == 404  # there is no secret here
 
 
 def test_only_the_loopback_address_is_listened_to(page: PageProcess, port: int) -> None:
@@ -150,6 +179,12 @@ def test_the_door_decides_without_a_server() -> None:
     assert door.refusal("/", "LOCALHOST:5410", None, 2) is None
     assert door.refusal("/static/x", "127.0.0.1:5410", None, 3) is None
     assert door.refusal("/", "127.0.0.1:5411", None, 0) is not None
+    assert door.refusal("/ws", "127.0.0.1:5410", "http://127.0.0.1:5410", 5) is None
+    assert door.refusal("/ws", "127.0.0.1:5410", "http://127.0.0.1:5410", 6) is not None
+    named = Door(80, names=("rig.example", "[::1]"))
+    assert named.origins == {f"http://{host}" for host in named.hosts}
+    assert set(named.hosts) == {"rig.example:80", "rig.example", "[::1]:80", "[::1]"}
+    assert named.refusal("/", "127.0.0.1", None, 0) is not None
 
 
 def test_what_can_not_be_served_is_told_in_one_sentence_with_a_next_step(

@@ -217,6 +217,25 @@ def test_what_fails_is_counted_and_tried_again(
     feed.close()
 
 
+@pytest.mark.parametrize("name", ["estimates.csv", "readings/magnet.csv", "instruments.json"])
+def test_nothing_outside_of_the_run_is_read(
+    name: str, tmp_path: Path, wait_for: Callable[..., None]
+) -> None:
+    with MadeRun(tmp_path / "runs", live=False) as made:
+        made.estimate(*estimates(ramp(1.0, 10)))
+        made.readings(1.0)
+        made.identify("magnet", "of another run")
+    (made.path / name).rename(tmp_path / "outside")
+    (made.path / name).symlink_to(tmp_path / "outside")
+    store = RunStore(made.run.run_id, made.run.rig)
+    feed = Feed(made.run, store)
+    feed.start()
+    wait_for(lambda: store.run().failures > 0, "it is told")
+    feed.close()
+    assert "is outside the run" in store.run().failure
+    assert all(line.identity == "" for line in store.run().streams)
+
+
 TABLE = Table("a", "a.csv", "", (SEQ, TIME, Column("text", "string")))
 
 

@@ -10,6 +10,7 @@ from acquire.config import parse
 from acquire.errors import RampsideError, UsageError
 from dashboard.commands.watch import run_plan
 from dashboard.configuration import load_configuration
+from dashboard.page_address import page_address
 from dashboard.ports import free_ports, is_free
 from dashboard.roles import laboratory_ports, with_ports
 from dashboard.watch import WatchPlan
@@ -26,6 +27,7 @@ def run(arguments: argparse.Namespace) -> int:
             config,
             arguments.folder,
             arguments.port,
+            page_address(arguments.page_address, arguments.page_secret),
             not arguments.no_browser,
             arguments.exit,
             arguments.seconds,

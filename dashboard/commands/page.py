@@ -9,7 +9,8 @@ from dashboard.bad_end import close_if_ended_badly
 from dashboard.browser import open_page
 from dashboard.child import python
 from dashboard.interrupts import asked_to_end
-from dashboard.ports import LOOPBACK, listens, page_port
+from dashboard.page_address import page_address
+from dashboard.ports import listens, page_port
 from dashboard.roles import PAGE
 from dashboard.supervisor import ProcessNews, Role, Supervisor
 
@@ -22,19 +23,19 @@ def run(arguments: argparse.Namespace) -> int:
     run_folder = open_run(arguments.run_folder)
     if told := close_if_ended_badly(run_folder, "rampside page"):
         print(told, flush=True)
-    port = page_port(arguments.port)
-    address = f"http://{LOOPBACK}:{port}"
+    place = page_address(arguments.page_address, arguments.page_secret)
+    port = page_port(arguments.port, place.address)
 
     def tell(news: ProcessNews) -> None:
         if news.happening != "ready":
             print(f"{news.text}.", flush=True)
-        elif arguments.no_browser or not open_page(address):
+        elif arguments.no_browser or not open_page(place.url(port)):
             print("Open it in a browser.", flush=True)
 
-    command = python("dashboard.page", run_folder.path, "--port", port)
-    page = Role(PAGE, command, lambda since: listens(port))
+    command = python("dashboard.page", run_folder.path, "--port", port, *place.arguments())
+    page = Role(PAGE, command, lambda since: listens(port, place.address))
     supervisor = Supervisor([page], tell, lambda role, line: print(line, flush=True))
-    print(f"Page: {address}\nRun:  {run_folder.path}\nCtrl-C ends it.", flush=True)
+    print(f"Page: {place.told(port)}\nRun:  {run_folder.path}\nCtrl-C ends it.", flush=True)
     with asked_to_end() as wish:
         try:
             supervisor.start()

@@ -6,6 +6,7 @@ import argparse
 
 from dashboard.configuration import load_configuration
 from dashboard.interrupts import asked_to_end
+from dashboard.page_address import page_address
 from dashboard.terminal import open_view
 from dashboard.watch import WatchPlan, watch
 from dashboard.words import told
@@ -20,6 +21,7 @@ def run(arguments: argparse.Namespace) -> int:
             config,
             arguments.folder,
             arguments.port,
+            page_address(arguments.page_address, arguments.page_secret),
             not arguments.no_browser,
             arguments.exit,
             arguments.seconds,

@@ -15,7 +15,7 @@ from pathlib import Path
 from acquire.bus import Subscriber
 from acquire.cells import LONGEST_LINE, RowCodec
 from acquire.clock import RunClock
-from acquire.errors import RampsideError
+from acquire.errors import RampsideError, RunError
 from acquire.run_folder import LiveRun, RunFolder
 from acquire.tables import Row, Table
 from analyse.estimate_table import ESTIMATES, EVENTS
@@ -104,7 +104,10 @@ class Feed:
         self._read_identities()
 
     def _read_identities(self) -> None:
-        changed_at = (self._run.path / "instruments.json").stat().st_mtime_ns
+        path = self._run.path / "instruments.json"
+        if not path.resolve().is_relative_to(self._run.path.resolve()):
+            raise RunError(f"instruments.json: is outside the run {self._run.path}.")
+        changed_at = path.stat().st_mtime_ns
         if changed_at == self._identities_at:
             return
         self._identities_at = changed_at

@@ -34,7 +34,7 @@ def visible(text: str) -> str:
     return cut if len(text) <= LONGEST else f"{cut}… ({len(text)} characters)"
 
 
-def element(name: str, *content: str, **attributes: str) -> Html:
+def element(name: str, /, *content: str, **attributes: str) -> Html:
     """An element. What is not :class:`Html` is escaped; ``class_`` stands for ``class``.
 
     >>> element("b", "<script>", class_="loud")

@@ -18,6 +18,7 @@ from dashboard.page.budget_panel import budget, budget_panel
 from dashboard.page.caution_panel import caution_panel
 from dashboard.page.field_panel import field_panel
 from dashboard.page.hold_panel import HoldPanel
+from dashboard.page.html import visible
 from dashboard.page.path_plots import PathPlots
 from dashboard.page.resistivity_plots import ResistivityPlots
 from dashboard.page.store import BarFacts, RunStore
@@ -66,7 +67,7 @@ class Session:
         with document.models.freeze():  # else each root looks through all models again
             for model in (*models, *self._resistivities.figures, *self._paths.figures):
                 document.add_root(model)
-        document.title = f"rampside · {self._store.run_id}"
+        document.title = f"rampside · {visible(self._store.run_id)}"
         document.template = style.TEMPLATE
         document.template_variables["style"] = style.PAGE
         document.template_variables["script"] = style.SCRIPT
