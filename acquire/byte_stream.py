@@ -82,22 +82,12 @@ class ByteStream:
             raise BadReply(f"{stray!r} came without a question; does something else use the line?")
 
     def line(self, query: str, longest: int = LONGEST_REPLY) -> bytes:
-        """A reply up to its terminator, which is kept."""
-        if self._kind == "message":
-            return self._message(longest)
-        deadline = self._now() + self._timeout_s
-        pieces, size = list[bytes](), 0
-        while True:
-            piece = self._some(deadline)
-            pieces.append(piece)
-            size += len(piece)
-            self.came = (self.came + piece)[: max(LONGEST_REPLY, _SHOWN) + _GULP]
-            if piece.endswith(self._end[-1:]):
-                return b"".join(pieces)
-            if size > longest:
-                raise BadReply(f"{query!r}: the reply does not end within {longest} bytes")
-            if self._now() >= deadline:
-                raise ReplyTimeout(self.silence(query))
+        """A reply up to its terminator, without it."""
+        data = self._message(longest) if self._kind == "message" else self._up_to_end(query, longest)
+        self.came = data[:LONGEST_REPLY]
+        if not data.endswith(self._end):
+            raise BadReply(f"{query!r}: the reply {escaped(data)!r} {self._other_end()}")
+        return data[: len(data) - len(self._end)]
 
     def block(self, query: str, terminated: bool) -> bytes:
         """What a definite-length block holds. ``terminated``: whether the terminator follows."""
@@ -119,13 +109,28 @@ class ByteStream:
         within = f"within {self._section.timeout_ms} ms"
         if not self.came:
             return f"{query!r}: no reply {within}"
-        return f"{query!r}: only {escaped(self.came)!r} came {within}; it {self.other_end()}"
+        return f"{query!r}: only {escaped(self.came)!r} came {within}; it {self._other_end()}"
 
-    def other_end(self) -> str:
+    def _other_end(self) -> str:
         """How a reply ends that does not end as configured, for whoever mends the configuration."""
         told = f"does not end with read_termination = {self._section.read_termination!r}"
         tail = self.came[len(self.came.rstrip(b"\r\n\0;")) :]
         return f"{told} but with {escaped(tail)!r}" if tail else told
+
+    def _up_to_end(self, query: str, longest: int) -> bytes:
+        deadline = self._now() + self._timeout_s
+        pieces, size = list[bytes](), 0
+        while True:
+            piece = self._some(deadline)
+            pieces.append(piece)
+            size += len(piece)
+            self.came = (self.came + piece)[: LONGEST_REPLY + _GULP]
+            if piece.endswith(self._end[-1:]):
+                return b"".join(pieces)
+            if size > longest:
+                raise BadReply(f"{query!r}: the reply does not end within {longest} bytes")
+            if self._now() >= deadline:
+                raise ReplyTimeout(self.silence(query))
 
     def _take(self, query: str, count: int, deadline: float) -> bytes:
         """Exactly so many bytes."""

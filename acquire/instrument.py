@@ -27,7 +27,7 @@ import pyvisa
 from pyvisa.constants import BufferOperation, Parity, StatusCode, StopBits
 from pyvisa.resources import MessageBasedResource, SerialInstrument, TCPIPSocket
 
-from acquire.byte_stream import LONGEST_REPLY, ByteStream, Kind
+from acquire.byte_stream import ByteStream, Kind
 from acquire.config.block import Block
 from acquire.config.reader import Connection, SerialLine
 from acquire.errors import (
@@ -108,7 +108,7 @@ class Instrument:
         """
         with self._exchange(query):
             self._write(query)
-            return self._line(query).decode(self.section.encoding)
+            return self._stream.line(query).decode(self.section.encoding)
 
     def ask_block(self, query: str, block: Block) -> bytes:
         """Send one question and return what the block holds that answers it: bytes as they are,
@@ -134,7 +134,7 @@ class Instrument:
 
     def _block(self, query: str, block: Block) -> bytes:
         if block.format == "text":
-            return self._line(query, LONGEST_BLOCK)
+            return self._stream.line(query, LONGEST_BLOCK)
         return self._stream.block(query, block.terminated)
 
     def tell(self, command: str) -> None:
@@ -223,16 +223,6 @@ class Instrument:
         self._resource.write_raw(data)
         if self._socket is not None:
             acknowledge_at_once(self._socket)
-
-    def _line(self, query: str, longest: int = LONGEST_REPLY) -> bytes:
-        """A reply up to its terminator, without it."""
-        data = self._stream.line(query, longest)
-        self._stream.came = data[:LONGEST_REPLY]
-        end = self.section.read_termination.encode("latin-1", "replace")
-        if not data.endswith(end):
-            other = self._stream.other_end()
-            raise BadReply(f"{query!r}: the reply {escaped(data)!r} {other}")
-        return data[: len(data) - len(end)]
 
     @contextmanager
     def _exchange(self, line: str, silent: bool = True) -> Iterator[None]:

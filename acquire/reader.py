@@ -14,7 +14,6 @@ import faulthandler
 import math
 import sys
 import time
-import zlib
 from collections import deque
 from collections.abc import Callable, Iterable, Sequence
 from contextlib import suppress
@@ -23,32 +22,22 @@ from typing import Any
 from acquire.blocks import Blocks, Taken
 from acquire.child_process import Child, child_parser
 from acquire.clock import RunClock
-from acquire.config.reader import ReaderSection, Setting
+from acquire.config.reader import ReaderSection
 from acquire.dialogue import Asked, Dialogue, Known
 from acquire.errors import BadReply, InstrumentError, OtherInstrument, RunError
 from acquire.instrument import Instrument
+from acquire.pauses import pause_s
 from acquire.reader_output import live_run_for, reader_output
 from acquire.readings import reading_table
 from acquire.recorder import RETRY_S, Recorder
 from acquire.run_folder import RunFolder, open_run
-from acquire.settings import changes, not_understood
+from acquire.settings import SettingsRound, changes, not_understood
 from acquire.stop import Stop, Stopped
 from acquire.unnoted import unnoted_settings
 
-SHORTEST_PAUSE_S, LONGEST_PAUSE_S = 0.5, 10.0
 SILENT_ROW_S = 1.0  # a reader without an instrument says so at least so often
 SHORTEST_SILENCE_S = 0.005  # so long, at least, the line is watched after a reading
 LONGEST_SLEEP_S = 0.2  # so soon it is seen that the parent has died
-
-
-def pause_s(reader: str, attempt: int) -> float:
-    """How long to wait before the next attempt after ``attempt`` failures in a row, in seconds.
-
-    Doubles from 0.5 s up to 10 s; shorter by up to a fifth, by the reader's name and the attempt,
-    so that readers of one dead gateway do not all call at once.
-    """
-    full = min(SHORTEST_PAUSE_S * 2.0 ** min(attempt - 1, 10), LONGEST_PAUSE_S)
-    return full * (1.0 - 0.2 * zlib.crc32(f"{reader} {attempt}".encode()) / 2**32)
 
 
 class Reader:
@@ -101,8 +90,7 @@ class Reader:
         self._slot = math.floor(self._due / section.period_s)
         self._why = "not tried yet"
         self._told = False  # whether identity and settings as they are stand in the journal
-        self._to_ask: list[Setting] = []
-        self._settings_at = 0.0
+        self._round = SettingsRound(section)
         self._known: Known = {}  # the settings that were told last
         self._took: deque[float] = deque(maxlen=16)
         self._stranger = False  # whether it was said that another instrument answers
@@ -128,7 +116,7 @@ class Reader:
 
     def _pause(self) -> None:
         """Ask nothing while nothing more can be kept; afterwards it is opened anew."""
-        self.connected, self._to_ask = False, []
+        self.connected = False
         self._dialogue.close()
         self._due = self._try_at = self._silent_at = self._now() + RETRY_S
 
@@ -174,22 +162,19 @@ class Reader:
         return slot * self.section.period_s
 
     def _refresh_settings(self) -> None:
-        """Ask one setting again, if it is time: one a reading, so that readings stay in step."""
-        if not self._to_ask and self.section.settings_period_s and self._now() >= self._settings_at:
-            self._to_ask = list(self.section.settings)
-            self._settings_at = self._now() + self.section.settings_period_s
-        if not self._to_ask:
-            return
         began = self._now()
+        setting = self._round.due(began)
+        if setting is None:
+            return
         try:
-            changed = self._dialogue.refresh(self._to_ask.pop(0))
+            changed = self._dialogue.refresh(setting)
             self._dialogue.expect_silence(self._silence_s())
         except InstrumentError as error:
             self._fail(error, began)
             return
         if changed:
             self._tell()
-        if not self._to_ask:
+        if self._round.is_over:
             self._recorder.confirm(self._dialogue.answers)
 
     def _fail(self, error: InstrumentError, began: float) -> None:
@@ -198,7 +183,8 @@ class Reader:
         self._recorder.row(status, str(error), took=(began, self._now()))
 
     def _disconnect(self, why: str) -> None:
-        self.connected, self._to_ask = False, []
+        self.connected = False
+        self._round.restart(self._now())
         self._silent_at = self._now() + max(SILENT_ROW_S, self.section.period_s)
         self._failed(why)
 
@@ -230,7 +216,7 @@ class Reader:
         self.connected, self._stranger = True, False
         if self._blocks is not None:
             self._blocks.restart()
-        self._settings_at = now + self.section.settings_period_s
+        self._round.restart(now)
         self._slot = math.floor(now / self.section.period_s)
         self._due = now if self._streamed else self._next_slot()
         if changed or not self._told:

@@ -26,6 +26,8 @@ from acquire.tables import SEQ, TIME, Column, Row, Table
 
 STATUSES = ("ok", "overload", "range", "no_answer", "bad_reply", "settings", "end")
 
+_TOOK = "from question to answer, time_s is the middle; empty for samples of a block"
+
 
 def stream_of(reader: str) -> str:
     """The name of a reader's stream on the bus."""
@@ -41,7 +43,7 @@ def reading_table(name: str, source: ReaderSection | TableSection) -> Table:
     fixed = (
         SEQ,
         TIME,
-        Column("took_s", "number", "s", "from question to answer; time_s is the middle"),
+        Column("took_s", "number", "s", _TOOK),
         Column("status", "string", "", ", ".join(STATUSES)),
         Column("detail", "string", "", "what was wrong, or settings as JSON"),
     )

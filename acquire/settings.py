@@ -1,11 +1,38 @@
-"""What is to be said of an instrument's settings: which have changed, which can't be understood."""
+"""An instrument's settings: when to ask for which, and what is to be said of the answers."""
 
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
 
-from acquire.config.reader import ReaderSection
+from acquire.config.reader import ReaderSection, Setting
 from acquire.reply import escaped
+
+
+class SettingsRound:
+    """Which setting is to be asked again: all of them every ``settings_period_s``, never two
+    between the same two readings, so that readings stay in step."""
+
+    def __init__(self, section: ReaderSection) -> None:
+        self._settings = section.settings
+        self._period_s = section.settings_period_s
+        self._left: list[Setting] = []
+        self._next_s = 0.0
+
+    @property
+    def is_over(self) -> bool:
+        """Whether all have been asked."""
+        return not self._left
+
+    def restart(self, now_s: float) -> None:
+        """They have just been asked, or can't be asked now."""
+        self._left, self._next_s = [], now_s + self._period_s
+
+    def due(self, now_s: float) -> Setting | None:
+        """The one to ask now, if any."""
+        if not self._left and self._period_s and now_s >= self._next_s:
+            self._left, self._next_s = list(self._settings), now_s + self._period_s
+        return self._left.pop(0) if self._left else None
+
 
 Entry = Mapping[str, float | int | str | None]
 

@@ -725,7 +725,7 @@ def test_a_reader_takes_blocks_off_a_socket_and_goes_on_after_a_cut(
     scripted: ScriptedInstrument, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     """An instrument whose sample k has the value k, every 2 ms by the clock of the reader."""
-    monkeypatch.setattr("acquire.reader.SHORTEST_PAUSE_S", 0.02)
+    monkeypatch.setattr("acquire.pauses.SHORTEST_PAUSE_S", 0.02)
     start, sent = time.monotonic(), [0]
 
     def held() -> bytes:

@@ -110,8 +110,8 @@ def scripted() -> Iterator[ScriptedInstrument]:
 
 @pytest.fixture(autouse=True)
 def quick_pauses(monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr("acquire.reader.SHORTEST_PAUSE_S", 0.02)
-    monkeypatch.setattr("acquire.reader.LONGEST_PAUSE_S", 0.1)
+    monkeypatch.setattr("acquire.pauses.SHORTEST_PAUSE_S", 0.02)
+    monkeypatch.setattr("acquire.pauses.LONGEST_PAUSE_S", 0.1)
     monkeypatch.setattr("acquire.reader.SILENT_ROW_S", 0.05)
 
 
@@ -551,7 +551,27 @@ ELSEWHERE: dict[tuple[str, str], str] = {
     ("disk full", "journal"): "test_journal::test_a_full_disk_loses_nothing_and_is_got_over",
     ("HWM overflow", "bus"): "test_bus::test_what_a_slow_subscriber_loses_is_filled",
     ("subscriber frozen", "bus"): (
+        "test_flood::test_a_frozen_listener_loses_nothing_and_costs_nobody_else_memory"
+    ),
+    ("subscriber frozen at the end", "bus"): (
         "test_bus::test_closing_does_not_wait_for_somebody_who_does_not_listen"
+    ),
+    ("frozen", "estimator"): (
+        "test_flood::test_a_frozen_estimator_goes_on_as_if_it_had_not_been"
+    ),
+    ("terminal closed", "supervisor"): (
+        "test_closed_terminal::test_a_terminal_that_is_closed_ends_all_in_order"
+    ),
+    ("power cut", "run"): "test_bad_end::test_a_power_cut_is_told",
+    ("SIGKILL of everything", "run"): (
+        "test_bad_end::test_it_is_as_an_undisturbed_run_but_for_its_marks"
+    ),
+    ("all of it at random", "everything"): "test_soak::test_a_short_soak",
+    ("late reply", "hold"): "test_hold_watch::test_answering_late",
+    ("half-dead supply", "hold"): "test_hold_watch::test_half_dead_from_the_command_on",
+    ("a command that is ignored", "hold"): "test_hold_watch::test_ignored",
+    ("estimator killed before the command", "hold"): (
+        "test_hold_watch::test_the_estimator_dies_between_decision_and_command"
     ),
     ("SIGKILL + restart of the publisher", "bus"): (
         "test_bus::test_a_killed_publisher_is_followed_through_its_restarts"

@@ -29,6 +29,7 @@ from scripted_instrument import (
 )
 
 import acquire.instrument
+from acquire.byte_stream import LONGEST_REPLY
 from acquire.config.reader import ReaderSection
 from acquire.errors import (
     BadReply,
@@ -37,7 +38,7 @@ from acquire.errors import (
     ReplyTimeout,
     SessionLost,
 )
-from acquire.instrument import LONGEST_REPLY, Instrument
+from acquire.instrument import Instrument
 from acquire.reader import Reader
 from acquire.socket_line import is_writable, socket_below
 from acquire.stop import Stop, Stopped
@@ -570,7 +571,7 @@ def test_a_reader_on_a_serial_line_from_end_to_end(
     serial: SerialInstrument, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     """Readings, settings and blocks; a late answer and one that comes twice are none of its own."""
-    monkeypatch.setattr("acquire.reader.SHORTEST_PAUSE_S", 0.02)
+    monkeypatch.setattr("acquire.pauses.SHORTEST_PAUSE_S", 0.02)
     data = b"".join(struct.pack(">2f", 0.5, 1.5) for _ in range(40))
     serial.answers |= {"T?": b"9\n", "BUFFER?": b"#3%d" % len(data) + data + b"\n"}
     rows: list[tuple[object, ...]] = []

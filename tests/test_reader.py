@@ -30,7 +30,8 @@ from acquire.errors import (
     ReplyTimeout,
     RunError,
 )
-from acquire.reader import Reader, main, pause_s, run_reader
+from acquire.pauses import pause_s
+from acquire.reader import Reader, main, run_reader
 from acquire.readings import reading_table
 from acquire.run_folder import RunFolder, create_run, open_run
 from acquire.stop import Stop

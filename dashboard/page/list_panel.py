@@ -18,6 +18,7 @@ _KINDS = {
     "verdict": "verdict",
     "caution": "caution",
     "caution_over": "passed",
+    "setting": "setting",
     "note": "note",
     "process": "process",
     "run": "run",
