@@ -11,6 +11,7 @@ from typing import Any
 
 import numpy as np
 import pytest
+from bench_readers import read
 from hypothesis import given
 from hypothesis import strategies as st
 from scripted_instrument import Answer, Close, Hold, ScriptedInstrument, Send
@@ -26,7 +27,6 @@ from acquire.laboratory.bench import Bench
 from acquire.laboratory.scenario import Scenario
 from acquire.probe import probe
 from acquire.reader import Reader
-from acquire.readings import Reading
 from acquire.sample_clock import OutOfStep, SampleClock
 from analyse.replay import merge_by_time
 from analyse.rig import RigEstimator
@@ -538,29 +538,6 @@ settings = [{ name = "p", query = "SAMPLEPERIOD?" }]
 )
 
 
-class Wire(Lab):
-    """One instrument of a laboratory that several readers share, and its clock."""
-
-    def __init__(self, shared: Lab, bench: Bench, name: str) -> None:
-        self.shared, self.bench, self.name = shared, bench, name
-        self.took_s, self.reply_after_s = 0.004, 0.0
-        self.rows, self.words, self.asked, self.spoil = [], [], [], []
-
-    @property
-    def now(self) -> float:  # type: ignore[override]
-        return self.shared.now
-
-    @now.setter
-    def now(self, value: float) -> None:
-        self.shared.now = value
-
-    def ask(self, query: str) -> str:
-        self.now += self.took_s / 2
-        (piece,) = self.bench.hear(self.name, query, self.now).pieces
-        self.now += self.took_s / 2
-        return piece.data.decode("latin-1").removesuffix("\n")
-
-
 def test_samples_out_of_blocks_are_readings_as_any_other_for_the_estimator() -> None:
     buffered = {
         "noise_V_per_rtHz": 2e-7, "time_constant_s": 0.03, "poles": 2,
@@ -576,23 +553,8 @@ def test_samples_out_of_blocks_are_readings_as_any_other_for_the_estimator() -> 
             {"name": "xy", "measures": "hall", **buffered},
         ],
     }  # fmt: skip
-    rig, shared = parse(RIG), Lab()
-    shared.now = 0.0
-    bench = Bench(Scenario.model_validate(scenario))
-    wires = {one.name: Wire(shared, bench, one.name) for one in rig.readers}
-    readers = {
-        name: Reader(rig.reader(name), wire, wire.publish, wire.now_s)
-        for name, wire in wires.items()
-    }
-    due = dict.fromkeys(readers, 0.0)
-    while shared.now < 36.0:
-        name = min(due, key=lambda one: due[one])
-        shared.now = max(shared.now, due[name])
-        due[name] = readers[name].step()
-    rows = {
-        name: [Reading.from_row(name, (seq, *row)) for seq, row in enumerate(wire.rows)]
-        for name, wire in wires.items()
-    }
+    rig = parse(RIG)
+    rows = read(rig, Bench(Scenario.model_validate(scenario)), 36.0)
     assert len(rows["xy"]) > 1600
     assert {row.status for known in rows.values() for row in known} == {"ok", "settings"}
     found = RigEstimator(rig)

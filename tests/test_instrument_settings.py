@@ -9,10 +9,13 @@ from collections.abc import Callable, Iterable
 from dataclasses import replace
 
 import pytest
+from bench_readers import read
 from simulated_bar import Sample
 from two_bars import interleaved
 
 from acquire.config import ConfigError, Rig, parse
+from acquire.laboratory.bench import Bench
+from acquire.laboratory.scenario import Scenario
 from acquire.readings import Reading
 from analyse import LockinFilter
 from analyse.estimate import Estimate
@@ -257,6 +260,52 @@ def test_a_change_is_an_event_at_its_field_point_whatever_the_order_of_arrival()
     ]
     assert all(CHANGE_S < cells[0] < CHANGE_S + 0.5 for cells in told)  # type: ignore[operator]
     assert "setting" in DETERMINED
+
+
+def test_a_time_constant_turned_in_mid_ramp_of_the_simulated_laboratory() -> None:
+    """From the knob to the answer: noticed within a second, used from then on; a reader that does
+    not ask again leaves the truth."""
+    scenario = {
+        "current_A": 1e-6,
+        "sample": {
+            "sheet_density_per_m2": TRUTH.density_per_m2,
+            "mobility_m2_per_V_s": TRUTH.mobility,
+            "quantum_lifetime_s": 1e-13,
+            "carriers": "holes",
+        },
+        "magnet": {"path_T": [0.0, 1.0], "rate_T_per_min": 1.0, "wait_s": 1.0},
+        "lockins": [
+            {"name": "along", "measures": "longitudinal", "noise_V_per_rtHz": 1e-7},
+            {"name": "across", "measures": "hall", "noise_V_per_rtHz": 1e-7},
+        ],
+    }
+    text = config(TOLD_FILTER).decode()
+    text = text.replace('queries = ["B?"]', 'queries = ["FIELD?"]')
+    start = text.index("settings = [{ name = \"T\"")
+    for again_s in (1.0, 0.0):
+        asked = f"""settings_period_s = {again_s}
+settings = [{{ name = "T", query = "TIMECONSTANT?", codes = {{ "5" = 0.3, "6" = 1.0 }} }},
+            {{ name = "n", query = "SLOPE?", codes = {{ "3" = 4 }} }}]
+"""
+        rig = parse((text[:start] + asked).encode())
+        found = read(
+            rig, Bench(Scenario.model_validate(scenario)), 62.0, [(30.0, "across", "TIMECONSTANT 6")]
+        )
+        told = [row for row in found["across"] if row.status == "settings"]
+        pairs, estimates = pairs_and_estimates(rig, merge_by_time(found))
+        if not again_s:
+            assert len(told) == 1
+            assert error_of(estimates) > 1
+            continue
+        assert len(told) == 2
+        assert 30.0 < told[1].time_s < 31.5
+        used = {pair.time_s: pair.stages for pair in pairs if pair.kind == "ok"}
+        later = {stages for time_s, stages in used.items() if time_s > told[1].time_s}
+        assert later == {LockinFilter(1.0, 4)}
+        assert min(t for t in used if t > told[1].time_s) > told[1].time_s + 10.0
+        assert error_of(estimates) < 1
+        events = [one.cells for one in made(rig, merge_by_time(found)) if one.stream == "events"]
+        assert [cells[3] for cells in events if cells[1] == "setting"] == ["T"]
 
 
 @pytest.mark.parametrize("key", ["phase_setting", "full_scale_setting", "range_setting"])
