@@ -19,7 +19,7 @@ from scripted_instrument import ScriptedInstrument
 from acquire.bus import Endpoint, Introducer, Publisher, free_endpoints
 from acquire.clock import utc_text
 from acquire.config import parse
-from acquire.errors import JournalError, RunError
+from acquire.errors import JournalError, RowError, RunError
 from acquire.journal import Journal
 from acquire.readings import reading_table
 from acquire.relay.far_side import FarSide
@@ -177,6 +177,23 @@ class Desk:
         if self.locked:
             raise RunError("locked")
         self.notes.append(entry)
+
+
+def test_a_row_that_no_journal_takes_does_not_hold_up_the_others() -> None:
+    desk = Desk()
+    taken = desk.publish
+
+    def publish(*cells: Any) -> int:
+        if cells[4] == 0.0:
+            raise RowError("a row is too long")
+        return taken(*cells)
+
+    desk.relaying._publish = publish
+    desk.relaying.take([row(0, 0.0), row(1, 0.1)])
+    desk.relaying.step()
+    assert not desk.relaying.behind
+    assert [cells[2] for cells in desk.rows] == ["no_answer", "bad_reply", "ok"]
+    assert desk.rows[1][3] == "a row is too long"
 
 
 def test_a_full_disk_delays_rows_and_loses_none() -> None:

@@ -2,19 +2,20 @@
 
 from __future__ import annotations
 
+import shutil
 import socket
 from pathlib import Path
 
 import pytest
 from soak import folder, truth
 from soak.link import LOOPBACK, Link
-from soak.rig import INSTRUMENTS, configuration
+from soak.rig import INSTRUMENTS, QUESTIONS, configuration
 from soak.run import main
 
 from acquire.config import parse
 from acquire.journal import Journal
 from acquire.readings import stream_of
-from acquire.run_folder import RunFolder, create_run
+from acquire.run_folder import RunFolder, create_run, open_run
 from acquire.tables import Row
 from analyse.estimate_table import ESTIMATES, EVENTS
 from analyse.replay import RowMaker, replay_readings
@@ -31,19 +32,25 @@ def test_a_short_soak(seed: int, capsys: pytest.CaptureFixture[str]) -> None:
     assert main(words) == 0, capsys.readouterr().out
 
 
-@pytest.fixture
-def run(tmp_path: Path) -> RunFolder:
+@pytest.fixture(scope="module")
+def made(tmp_path_factory: pytest.TempPathFactory) -> Path:
     """A run of some readings, with the estimates that they make."""
     config = configuration(1, 60.0, PORTS, PORTS).encode()
     rig = parse(config)
     tables = run_tables(rig)
-    run = create_run(rig, config, list(tables.values()), tmp_path / "runs")
+    run = create_run(rig, config, list(tables.values()), tmp_path_factory.mktemp("made"))
     for name in INSTRUMENTS:
         add(run, stream_of(name), [reading(name, k) for k in range(100)])
     maker = RowMaker(rig)
     for record in replay_readings(maker, logged_readings(run, maker.readers)):
         add(run, record.stream, [record.cells])
-    return run
+    return run.path
+
+
+@pytest.fixture
+def run(made: Path, tmp_path: Path) -> RunFolder:
+    """A copy of it."""
+    return open_run(shutil.copytree(made, tmp_path / made.name))
 
 
 def add(run: RunFolder, stream: str, cells: list[Row]) -> None:
@@ -72,9 +79,8 @@ def truth_file(run: RunFolder, path: Path, **changed: object) -> Path:
             one = {"at": START + 0.1 * k + 0.01, "reply": ",".join(map(repr, values)), "bad": ""}
             if name == "magnet" and k == 50:
                 one |= changed
-            question = "FIELD?" if name == "magnet" else "XYS?"
-            reply = f"{one['reply']},0" if name != "magnet" else one["reply"]
-            lines.append(f'{one["at"]!r},{name},{question},"{reply}",{one["bad"]}')
+            reply = f"{one['reply']},0" if name == "lockin_xx" else one["reply"]
+            lines.append(f'{one["at"]!r},{name},{QUESTIONS[name]},"{reply}",{one["bad"]}')
     path.write_text("\n".join(lines) + "\n")
     return path
 

@@ -9,7 +9,7 @@ from datetime import datetime, timedelta
 from typing import Any
 
 from acquire.clock import utc_text
-from acquire.errors import JournalError, RampsideError
+from acquire.errors import JournalError, RampsideError, RowError
 from acquire.relay.translation import DETAIL, STATUS, Translation
 from acquire.tables import Cell, Row
 
@@ -88,6 +88,10 @@ class Relaying:
             cells = self._unpublished[0]
             try:
                 seq = self._publish(*cells)
+            except RowError as error:  # no disk will ever take it; each row there has one here
+                refused = (*cells[: STATUS - 1], "bad_reply", str(error)[:1000], *self._nothing)
+                self._unpublished[0] = refused
+                continue
             except JournalError as error:
                 self._lose(error)
                 return

@@ -22,6 +22,8 @@ from dashboard.page.sweeps import threshold_T
 from dashboard.summary import Summary
 
 EVENTS_KEPT = 200
+TROUBLE_S = 5.0
+"""Who can't record says so when asked, once a second; who says nothing has stopped."""
 ESTIMATES_PERIODS = 2.0
 """A field point takes readings of all instruments, so estimates may come half as often."""
 
@@ -130,7 +132,8 @@ class RunStore:
         nothing new for hours."""
         with self._lock:
             for stream, one in health.items():
-                self._presence[stream].unrecorded = one.trouble
+                silent_s = monotonic_s - (one.last_heard_monotonic or 0.0)
+                self._presence[stream].unrecorded = one.trouble if silent_s < TROUBLE_S else ""
             now_s, heard = self._now_s(), health[EVENTS.stream].last_heard_monotonic
             if now_s is not None and heard is not None:
                 self._presence[EVENTS.stream].heard(now_s - (monotonic_s - heard))

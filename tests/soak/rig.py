@@ -5,7 +5,8 @@ from __future__ import annotations
 from collections.abc import Mapping
 
 INSTRUMENTS = ("magnet", "lockin_xx", "lockin_xy")
-QUESTIONS = {"magnet": "FIELD?", "lockin_xx": "XYS?", "lockin_xy": "XYS?"}
+QUESTIONS = {"magnet": "FIELD?", "lockin_xx": "XYS?", "lockin_xy": "XY?"}
+"""By instrument: the question that brings the values of a reading."""
 PERIOD_S = 0.05
 TO_T = 0.9
 
@@ -60,7 +61,7 @@ write_termination = "\\n"
 read_termination = "\\n"
 timeout_ms = 400
 identity = {{ pattern = "LOCK-IN,{name}" }}
-queries = ["XYS?"]
+queries = {queries}
 fields = 3
 period_s = {period}
 values = [{{ name = "X", position = 1 }}, {{ name = "Y", position = 2 }}]
@@ -88,10 +89,18 @@ def configuration(
     head = _HEAD.format(
         to=TO_T, rate=rate, seed=seed, period=PERIOD_S, port=ports["magnet"], link=links["magnet"]
     )
-    measures = {"lockin_xx": "longitudinal", "lockin_xy": "hall"}
+    lockins = {
+        "lockin_xx": ("longitudinal", '["XYS?"]'),
+        "lockin_xy": ("hall", '["XY?", "STATUS?"]'),  # two answers a reading, to be mixed up
+    }
     return head + "".join(
         _LOCKIN.format(
-            name=name, measures=what, period=PERIOD_S, port=ports[name], link=links[name]
+            name=name,
+            measures=what,
+            queries=queries,
+            period=PERIOD_S,
+            port=ports[name],
+            link=links[name],
         )
-        for name, what in measures.items()
+        for name, (what, queries) in lockins.items()
     )
