@@ -12,6 +12,7 @@ RampsideError                 its text says what happened and what to do next
   JournalError                acquire.journal: a table on disk can't be written or read
     RowError                  a row that its table does not take, whatever the disk
   BusError                    acquire.bus: an address can't be bound or used
+    KeysError                 acquire.bus.keys: keys that are missing, malformed or open to others
   TableError                  acquire.table: a table measured elsewhere can't be used
   RunError                    acquire.run_folder: a folder that is not a run
   LaboratoryError             acquire.laboratory: a simulated instrument can't listen
@@ -69,6 +70,10 @@ class RowError(JournalError):
 
 class BusError(RampsideError):
     """An address can't be bound or used."""
+
+
+class KeysError(BusError):
+    """Keys are missing, malformed or open to others."""
 
 
 class TableError(RampsideError):

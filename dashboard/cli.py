@@ -18,6 +18,7 @@ from importlib.metadata import version
 from pathlib import Path
 from typing import TypeAlias
 
+from acquire.config.keys import DEFAULT_KEYS
 from acquire.config.problems import ConfigError
 from acquire.errors import RampsideError, UsageError
 
@@ -94,6 +95,7 @@ def parser() -> argparse.ArgumentParser:
     _add_replay(commands)
     _add_read(commands)
     _add_page(commands)
+    _add_keys(commands)
     return root
 
 
@@ -219,6 +221,24 @@ def _add_page(commands: Commands) -> None:
     page = _add(commands, "page", "show a run in the browser", "Ctrl-C ends it.")
     page.add_argument("run_folder", metavar="RUN", type=Path, help="the folder of a run")
     _add_page_options(page)
+
+
+def _add_keys(commands: Commands) -> None:
+    more = "Needed only where readers run on other computers without an SSH tunnel."
+    keys = _add(commands, "keys", "make and accept the keys of computers", more)
+    actions = keys.add_subparsers(dest="action", metavar="ACTION", required=True, title="actions")
+    make = actions.add_parser("make", help="make this computer's keys; overwrites nothing")
+    make.add_argument("name", metavar="NAME", help="what this computer is called in configurations")
+    accept = actions.add_parser("accept", help="let another computer come in")
+    accept.add_argument("file", metavar="COMPUTER.pub", type=Path, help="its public key")
+    for action in (make, accept, actions.add_parser("list", help="show who may come in")):
+        action.add_argument(
+            "--folder",
+            metavar="F",
+            type=Path,
+            default=DEFAULT_KEYS,
+            help="where this computer's keys are (default %(default)s)",
+        )
 
 
 def _port(text: str) -> int:

@@ -9,7 +9,7 @@ from pathlib import Path
 from threading import Event
 
 from acquire.bus import Endpoint, Subscriber, ask, free_endpoints
-from acquire.bus.addresses import check_loopback
+from acquire.bus.addresses import check_address
 from acquire.config import Rig
 from acquire.errors import BusError, UsageError
 from acquire.run_folder import LiveRun, RunFolder, create_run
@@ -92,8 +92,8 @@ def endpoints_of(rig: Rig) -> tuple[dict[str, Endpoint], str]:
     """
     for reader in rig.readers:
         if reader.elsewhere is not None:
-            check_loopback(reader.elsewhere.publish)
-            check_loopback(reader.elsewhere.answer)
+            check_address(reader.elsewhere.publish, False)
+            check_address(reader.elsewhere.answer, False)
     endpoints = free_endpoints([*run_tables(rig), "requests"])
     requests = endpoints.pop("requests").answer
     return endpoints, requests

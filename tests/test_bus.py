@@ -334,9 +334,9 @@ ELSEWHERE = [
 @pytest.mark.parametrize("address", ELSEWHERE)
 def test_an_address_that_is_not_on_loopback_is_refused(journal, address):
     for endpoint in (Endpoint(address, FREE.answer), Endpoint(FREE.publish, address)):
-        with pytest.raises(BusError, match=r"CURVE keys would be needed|is no address of the bus"):
+        with pytest.raises(BusError, match=r"so keys are needed|is no address of the bus|is not the address of one"):
             Publisher("run", TABLE, journal, endpoint)
-        with pytest.raises(BusError, match=r"CURVE keys would be needed|is no address of the bus"):
+        with pytest.raises(BusError, match=r"so keys are needed|is no address of the bus|is not the address of one"):
             Subscriber("run", {"a": endpoint}, {"a": TABLE})
 
 

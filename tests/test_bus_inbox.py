@@ -114,10 +114,10 @@ def test_a_reply_to_somebody_who_has_gone_is_dropped():
 
 
 def test_an_inbox_is_on_loopback_only_and_its_port_its_own():
-    for address in ("tcp://0.0.0.0:0", "tcp://*:0"):
-        with pytest.raises(BusError, match="CURVE keys would be needed"):
+    for address in ("tcp://0.0.0.0:0", "tcp://10.1.2.3:0"):
+        with pytest.raises(BusError, match="so keys are needed|not the address of one"):
             Inbox(address)
-    with pytest.raises(BusError, match="CURVE keys would be needed"):
+    with pytest.raises(BusError, match="so keys are needed|not the address of one"):
         ask("tcp://192.168.1.5:20000", {}, 20)
     with Inbox("tcp://127.0.0.1:0") as inbox, pytest.raises(BusError, match="port is taken"):
         Inbox(inbox.address)

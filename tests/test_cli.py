@@ -16,7 +16,7 @@ from ramp_bench import RampBench
 from dashboard.cli import parser
 
 RAMPSIDE = Path(sys.executable).parent / "rampside"
-COMMANDS = ("demo", "watch", "check", "replay", "read", "page")
+COMMANDS = ("demo", "watch", "check", "replay", "read", "page", "keys")
 
 TABLE_CONFIG = """
 [run]

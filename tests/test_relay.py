@@ -296,7 +296,7 @@ def test_a_publisher_introduces_itself(tmp_path: Path, wait_for: Wait) -> None:
     with (
         Journal(tmp_path / "a", TABLE) as journal,
         Publisher("far", TABLE, journal, FREE, started_utc=HERE) as publisher,
-        Introducer(publisher.endpoint.answer) as introducer,
+        Introducer(publisher.endpoint) as introducer,
     ):
         found: list[Any] = []
         wait_for(lambda: found.append(introducer.ask(0.1)) or found[-1])
@@ -310,7 +310,7 @@ def test_nobody_there_is_no_error_and_who_comes_later_is_found(
     tmp_path: Path, wait_for: Wait
 ) -> None:
     far = free_endpoints(["far"])["far"]
-    with Introducer(far.answer) as introducer:
+    with Introducer(far) as introducer:
         assert introducer.ask(0.05) is None
         assert introducer.ask(0.0) is None
         with (
@@ -504,7 +504,7 @@ def test_another_run_elsewhere_is_taken_up_where_the_first_ended(
 def test_a_relay_that_hears_nobody_ends_in_order(pair: Pair, wait_for: Wait) -> None:
     near = pair.near()
     near.start()
-    with Introducer(near.endpoint.answer) as introducer:
+    with Introducer(near.endpoint) as introducer:
         wait_for(lambda: introducer.ask(0.1) is not None, "the relay")
     assert near.end() == 0
     assert [one[3] for one in near.rows()] == ["end"]

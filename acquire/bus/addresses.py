@@ -2,13 +2,13 @@
 
 from __future__ import annotations
 
-import ipaddress
 import random
 import socket
 from collections.abc import Iterable
 from contextlib import ExitStack
 from dataclasses import dataclass
 
+from acquire.address import Address, parse_address
 from acquire.errors import BusError
 
 # Below the ports that systems hand out for outgoing connections (from 32768 on Linux, 49152
@@ -16,33 +16,39 @@ from acquire.errors import BusError
 # port that it calls, talk to itself and keep the publisher from coming back.
 LOWEST_PORT, HIGHEST_PORT = 20_000, 32_000
 
+KEYS_NEEDED = (
+    "so keys are needed: make them by `rampside keys make` on both computers, and name the other "
+    "one as `computer` in [readers.elsewhere]"
+)
+
 
 @dataclass(frozen=True)
 class Endpoint:
-    """The two addresses of a publisher: where it publishes, and where it answers questions."""
+    """The two addresses of a publisher: where it publishes, and where it answers questions.
+
+    ``keys``: the folder of the keys that are used there, empty for none; ``computer``: whose key
+    the publisher must have.
+    """
 
     publish: str
     answer: str
+    keys: str = ""
+    computer: str = ""
 
 
-def check_loopback(address: str) -> None:
-    """Refuse whatever is not ``tcp://``, a numeric loopback address and a port. Raises BusError.
+def check_address(text: str, with_keys: bool) -> Address:
+    """An address at which the bus may be used. Raises BusError.
 
-    The bus is neither encrypted nor authenticated, so nothing of it may leave the machine.
+    Without keys the bus is neither encrypted nor authenticated, so nothing of it may leave the
+    computer.
     """
-    host, _, port = address.removeprefix("tcp://").rpartition(":")
-    good_port = port.isascii() and port.isdigit() and int(port) <= 65_535
-    if not address.startswith("tcp://") or not good_port:
-        raise BusError(f"{address}: is no address of the bus; write tcp://127.0.0.1:PORT.")
     try:
-        loopback = ipaddress.ip_address(host.strip("[]")).is_loopback
-    except ValueError:
-        loopback = False
-    if not loopback:
-        raise BusError(
-            f"{address}: not a loopback address, where CURVE keys would be needed, which are not "
-            "built yet; use tcp://127.0.0.1:PORT, and an SSH tunnel to other computers."
-        )
+        address = parse_address(text)
+    except ValueError as error:
+        raise BusError(f"{text}: {error}.") from None
+    if not (address.loopback or with_keys):
+        raise BusError(f"{text}: not a loopback address, {KEYS_NEEDED}.")
+    return address
 
 
 def free_endpoints(streams: Iterable[str]) -> dict[str, Endpoint]:

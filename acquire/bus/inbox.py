@@ -18,6 +18,8 @@ REQUESTS_QUEUED = 100  # a peer
 class Inbox(Closing):
     """Takes requests at a loopback address. Belongs to one thread.
 
+    It has no keys and so no other addresses: nobody on another computer has anything to request.
+
     Port 0 takes a free one; ``address`` tells which. Raises BusError if it can't be bound.
     """
 
@@ -70,7 +72,7 @@ def ask(address: str, message: dict[str, Any], timeout_s: float) -> dict[str, An
     if len(request) > LONGEST_QUESTION:
         raise BusError(f"a request of {len(request)} bytes; at most {LONGEST_QUESTION} are taken.")
     with zmq.Context() as context:
-        socket = connected(context, zmq.DEALER, address, 1)
+        socket, _ = connected(context, zmq.DEALER, address, 1)
         try:
             socket.send(request, zmq.NOBLOCK)
             reply = unpack_plain(socket.recv()) if socket.poll(milliseconds(timeout_s)) else None

@@ -28,7 +28,8 @@ class StreamHealth:
     by a row or an answer; None before. ``filled``: rows got by asking. ``refused``: messages
     dropped because they were malformed or of another run. ``rewound``: answers of a publisher
     that had fewer rows than were delivered (its last second went with a power cut). ``trouble``:
-    why the publisher can't record, and so not publish, what it has; empty while it can.
+    why the publisher can't record, and so not publish, what it has; empty while it can. ``barred``:
+    why the connections are not let in or not trusted, in words; empty if they are.
     """
 
     last_seq: int
@@ -37,6 +38,7 @@ class StreamHealth:
     refused: int
     rewound: int = 0
     trouble: str = ""
+    barred: str = ""
 
 
 class StreamProgress:

@@ -5,11 +5,16 @@ from __future__ import annotations
 
 import threading
 import time
+from collections.abc import Callable
+from dataclasses import replace
 
 import zmq
+from msgspec import structs
 
 from acquire.bus.addresses import Endpoint
-from acquire.bus.sockets import HIGH_WATER, bound, milliseconds
+from acquire.bus.gate import Gate
+from acquire.bus.keys import KeyFolder
+from acquire.bus.sockets import HIGH_WATER, bound, bound_anew, milliseconds
 from acquire.bus.wire import ANY_RUN, Answer, Introduction, Message, Question, pack, topic, unpack
 from acquire.closing import Closing
 from acquire.errors import BusError, JournalError
@@ -26,9 +31,15 @@ class Publisher(Closing):
     A background thread answers questions and syncs the journal once a second, so that both go on
     while the owner waits for an instrument. ``publish`` and ``close`` belong to the thread that
     made the publisher. The journal stays the caller's: close it after the publisher.
-    ``started_utc``, the run's start, is told to those who ask who publishes here.
-    Raises BusError if an address is not on loopback or is taken; port 0 takes a free one, and
-    ``endpoint`` tells which.
+    ``started_utc``, the run's start, and its clock ``now_s``, from any thread, are told to those
+    who ask who publishes here. Port 0 takes a
+    free one, and ``endpoint`` tells which.
+
+    Where ``endpoint`` names a folder of keys, only those come in whose public keys are there;
+    ``tell`` takes a sentence for each one who was refused. When a key is taken out of the folder
+    all connections are cut before the next row, and those who are still known come again.
+    Raises KeysError if the keys can't be used, BusError if an address is taken, or is not on
+    loopback and there are no keys.
     """
 
     def __init__(
@@ -39,24 +50,38 @@ class Publisher(Closing):
         endpoint: Endpoint,
         *,
         started_utc: str = "",
+        now_s: Callable[[], float] | None = None,
         high_water: int = HIGH_WATER,
+        tell: Callable[[str], None] = lambda text: None,
     ) -> None:
         self._run_id = run_id
         self._stream = table.stream
         self._topic = topic(table.stream)
         self._journal = journal
         self._closed = False
-        self._context = zmq.Context()
+        self._high_water = high_water
+        self._context = context = zmq.Context()
+        self._gate: Gate | None = None
         try:
-            self._socket, publish = bound(self._context, zmq.PUB, endpoint.publish, high_water)
-            router, answer = bound(self._context, zmq.ROUTER, endpoint.answer, QUESTIONS_QUEUED)
+            if endpoint.keys:
+                keys = KeyFolder(endpoint.keys)
+                self._gate = Gate(context, keys, tell, endpoint.computer)
+            self._socket, publish = bound(
+                context, zmq.PUB, endpoint.publish, high_water, self._gate
+            )
+            router, answer = bound(
+                context, zmq.ROUTER, endpoint.answer, QUESTIONS_QUEUED, self._gate
+            )
         except BaseException:
-            self._context.destroy(linger=0)
+            if self._gate is not None:
+                self._gate.close()
+            context.destroy(linger=0)
             raise
-        self.endpoint = Endpoint(publish, answer)
+        self._cuts = 0
+        self.endpoint = replace(endpoint, publish=publish, answer=answer)
         columns = tuple((one.name, one.kind, one.unit, one.description) for one in table.columns)
-        introduction = Introduction(run_id, table.stream, started_utc, columns)
-        self._answerer = _Answerer(self._context, router, introduction, journal)
+        introduction = Introduction(run_id, table.stream, 0, None, started_utc, columns)
+        self._answerer = _Answerer(context, router, answer, introduction, journal, now_s, self._gate)
 
     @property
     def refused(self) -> int:
@@ -76,6 +101,8 @@ class Publisher(Closing):
         seq = row[0]
         assert isinstance(seq, int)
         message = pack(Message(self._run_id, self._stream, seq, row[1:]))
+        if self._gate is not None and self._gate.cuts != self._cuts:
+            self._cut(self._gate)
         self._socket.send_multipart([self._topic, message], zmq.NOBLOCK)
         return seq
 
@@ -83,12 +110,20 @@ class Publisher(Closing):
         """The row as recorded. Whoever asks meanwhile is told if that can't be done."""
         try:
             self._answerer.raise_failure()
+            if self._gate is not None:
+                self._gate.raise_failure()
             row = self._journal.record(cells)
         except JournalError as error:
             self._answerer.trouble = error.reason
             raise
         self._answerer.trouble = ""
         return row
+
+    def _cut(self, gate: Gate) -> None:
+        self._cuts = gate.cuts
+        self._socket = bound_anew(
+            self._socket, self._context, self.endpoint.publish, self._high_water, gate
+        )
 
     def close(self) -> None:
         """Stop answering, sync, give what is queued a moment to be sent. Ends within 1 s.
@@ -100,6 +135,8 @@ class Publisher(Closing):
         self._closed = True
         stopped = self._answerer.stop()
         self._socket.close()
+        if self._gate is not None:
+            self._gate.close()
         if stopped:
             self._context.term()
         self._journal.sync()
@@ -113,14 +150,22 @@ class _Answerer:
         self,
         context: zmq.Context[zmq.Socket[bytes]],
         router: zmq.Socket[bytes],
+        address: str,
         introduction: Introduction,
         journal: Journal,
+        now_s: Callable[[], float] | None,
+        gate: Gate | None,
     ) -> None:
         self.refused = 0
         self.trouble = ""  # why nothing can be recorded; written by the owner's thread
+        self._context = context
+        self._address = address
+        self._gate = gate
+        self._cuts = 0
         self._run_id = introduction.run
         self._stream = stream = introduction.stream
-        self._introduction = pack(introduction)
+        self._introduction = introduction
+        self._now_s = now_s
         self._journal = journal
         self._journal_error: JournalError | None = None
         self._router = router
@@ -159,13 +204,22 @@ class _Answerer:
         poller.register(self._end, zmq.POLLIN)
         next_sync = time.monotonic() + SYNC_PERIOD_S
         while True:
+            if self._gate is not None and self._gate.cuts != self._cuts:
+                self._cuts = self._gate.cuts
+                poller.unregister(self._router)
+                self._router = bound_anew(
+                    self._router, self._context, self._address, QUESTIONS_QUEUED, self._gate
+                )
+                poller.register(self._router, zmq.POLLIN)
             wait_s = max(next_sync - time.monotonic(), 0.0)
             ready = dict(poller.poll(milliseconds(wait_s)))
             if self._end in ready:
                 return
             try:
                 if self._router in ready:
-                    self._answer(self._router.recv_multipart())
+                    frames = self._router.recv_multipart()
+                    if self._gate is None or self._gate.cuts == self._cuts:
+                        self._answer(frames)
                 if time.monotonic() >= next_sync:
                     next_sync = time.monotonic() + SYNC_PERIOD_S
                     self._journal.sync()
@@ -175,7 +229,7 @@ class _Answerer:
     def _answer(self, frames: list[bytes]) -> None:
         question = unpack(Question, frames[1]) if len(frames) == 2 else None
         if question is not None and question.run == ANY_RUN:
-            self._router.send_multipart([frames[0], self._introduction], zmq.NOBLOCK)
+            self._router.send_multipart([frames[0], self._introduce(question.start)], zmq.NOBLOCK)
             return
         if question is None or question.stream != self._stream:
             self.refused += 1
@@ -189,3 +243,7 @@ class _Answerer:
         answer = Answer(*head, piece.first, piece.next_seq, piece.lines, self.trouble)
         # A peer that does not take its answers loses them here; this never blocks.
         self._router.send_multipart([frames[0], pack(answer)], zmq.NOBLOCK)
+
+    def _introduce(self, start: int) -> bytes:
+        time_s = None if self._now_s is None else self._now_s()
+        return pack(structs.replace(self._introduction, start=start, time_s=time_s))

@@ -4,13 +4,15 @@ from __future__ import annotations
 
 import time
 from collections.abc import Mapping
+from dataclasses import replace
 from pathlib import Path
 
 import zmq
 
 from acquire.bus.addresses import Endpoint
+from acquire.bus.keys import client_keys
 from acquire.bus.progress import StreamHealth, StreamProgress
-from acquire.bus.sockets import HIGH_WATER, connected, milliseconds
+from acquire.bus.sockets import HIGH_WATER, RENEW_S, connected, milliseconds
 from acquire.bus.wire import Question, pack, topic
 from acquire.closing import Closing
 from acquire.errors import BusError, JournalError
@@ -19,7 +21,6 @@ from acquire.tables import Row, Table
 
 QUESTIONS_QUEUED = 1  # while nobody is connected; one is enough, its answer tells the rest
 MOST_AT_ONCE = 1000  # messages taken from one socket before the others have their turn
-RENEW_S = 10.0  # after so long a silence the sockets are made anew
 
 
 class Subscriber(Closing):
@@ -28,7 +29,8 @@ class Subscriber(Closing):
     ``endpoints`` and ``tables`` have the same streams. ``start`` is the first number wanted, for
     all or by stream (0 where not named); -1 means from the newest row on. A publisher that has
     ended answers no more: with ``folder``, the run's on this machine, what it has recorded is
-    then read from there. Raises BusError for an address not on loopback.
+    then read from there. Raises BusError for an address not on loopback without keys, KeysError
+    where the keys of an endpoint can't be used.
     """
 
     def __init__(
@@ -86,12 +88,14 @@ class Subscriber(Closing):
 
     def health(self) -> dict[str, StreamHealth]:
         """What is known of each stream."""
-        return {name: stream.progress.health() for name, stream in self._streams.items()}
+        return {name: stream.health() for name, stream in self._streams.items()}
 
     def close(self) -> None:
         """Close all sockets, at once. Closing twice is no mistake."""
         if not self._closed:
             self._closed = True
+            for stream in self._streams.values():
+                stream.close()
             self._context.destroy(linger=0)
 
     def _ask(self) -> float:
@@ -193,14 +197,30 @@ class _Stream:
 
     def reconnect(self, now: float) -> None:
         """Give up both connections and make them anew."""
+        self.close()
+        self._connect(now)
+
+    def health(self) -> StreamHealth:
+        """What is known of it."""
+        troubles = [handshakes.look() for handshakes in self._handshakes]
+        return replace(self.progress.health(), barred=next(filter(None, troubles), ""))
+
+    def close(self) -> None:
+        """Close both sockets, at once."""
+        for handshakes in self._handshakes:
+            handshakes.close()
         for socket in self.sockets:
             socket.close(linger=0)
-        self._connect(now)
 
     def _connect(self, now: float) -> None:
         self._connected = now
-        self._listening = connected(
-            self._context, zmq.SUB, self._endpoint.publish, self._high_water
+        endpoint = self._endpoint
+        keys = client_keys(endpoint.keys, endpoint.computer)
+        self._listening, rows = connected(
+            self._context, zmq.SUB, endpoint.publish, self._high_water, keys, endpoint.computer
         )
         self._listening.setsockopt(zmq.SUBSCRIBE, self._topic)
-        self._asking = connected(self._context, zmq.DEALER, self._endpoint.answer, QUESTIONS_QUEUED)
+        self._asking, answers = connected(
+            self._context, zmq.DEALER, endpoint.answer, QUESTIONS_QUEUED, keys, endpoint.computer
+        )
+        self._handshakes = [one for one in (rows, answers) if one is not None]

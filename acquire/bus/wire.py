@@ -31,7 +31,10 @@ class Message(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_field
 
 
 class Question(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_fields=True):
-    """Asks for the rows of a stream from number ``start`` on, or the newest (-1)."""
+    """Asks for the rows of a stream from number ``start`` on, or the newest (-1).
+
+    Where no run is named ``start`` is any number, by which the answer is known again.
+    """
 
     run: str
     stream: str
@@ -57,12 +60,16 @@ class Answer(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_fields
 class Introduction(msgspec.Struct, array_like=True, frozen=True, forbid_unknown_fields=True):
     """Who publishes: the answer to a question that names no run.
 
+    ``start`` is that of the question, which so knows its answer. ``time_s``: the time of the run
+    when it was answered, by the clock of its rows, None if the publisher was not given one.
     ``started_utc``: the start of the run, from which the times in its rows count; empty if the
     publisher was not told. ``columns``: name, kind, unit and description of each.
     """
 
     run: str
     stream: str
+    start: Start
+    time_s: float | None
     started_utc: str
     columns: tuple[tuple[str, str, str, str], ...]
 

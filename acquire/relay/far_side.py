@@ -28,7 +28,7 @@ class FarSide(Closing):
         self._table = table
         self._endpoint = endpoint
         self._adopt = adopt
-        self._introducer = Introducer(endpoint.answer)
+        self._introducer = Introducer(endpoint)
         self._subscriber: Subscriber | None = None
         self._run = ""
         self._since = time.monotonic()

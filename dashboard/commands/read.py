@@ -10,7 +10,7 @@ import argparse
 import time
 
 from acquire.bus import Endpoint, Subscriber, free_endpoints
-from acquire.bus.addresses import check_loopback
+from acquire.bus.addresses import check_address
 from acquire.config import ConfigError, Rig
 from acquire.config.problems import Problem, nearest_name
 from acquire.config.reader import ReaderSection
@@ -81,7 +81,7 @@ def _endpoint(reader: ReaderSection, publish: int | None, answer: int | None) ->
         (answer, given.answer if given else None, free.answer),
     ):
         address = f"tcp://{LOOPBACK}:{port}" if port else configured or other
-        check_loopback(address)
+        check_address(address, False)
         addresses.append(address)
     if addresses[0] == addresses[1]:
         raise UsageError("--publish-port and --answer-port must differ.")
