@@ -5,6 +5,11 @@ from __future__ import annotations
 import ipaddress
 from dataclasses import dataclass
 
+KEYS_NEEDED = (
+    "not a loopback address, so keys are needed: make them by `rampside keys make` on both "
+    "computers, and name the one that reads as `computer` in [readers.elsewhere]"
+)
+
 
 @dataclass(frozen=True)
 class Address:

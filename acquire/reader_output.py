@@ -6,6 +6,7 @@ from collections.abc import Callable, Iterator
 from contextlib import ExitStack, contextmanager
 
 from acquire.bus import Publisher
+from acquire.clock import RunClock
 from acquire.errors import RunError
 from acquire.journal import Journal
 from acquire.readings import stream_of
@@ -42,5 +43,7 @@ def reader_output(
             journal,
             live.endpoints[table.stream],
             started_utc=run.started_utc,
+            now_s=RunClock(live.monotonic_start).now_s,
+            tell=complain,
         )
         yield stack.enter_context(publisher)

@@ -11,6 +11,8 @@ bad_reply  a reply came that is not what was configured; the values are empty
 settings   no reading: ``detail`` has the instrument's identity and settings (JSON),
            valid from this row on
 end        no reading: the reader has ended in order; nothing follows
+relay      no reading: a relay says whom it listens to elsewhere, or how far the clocks are apart
+unheard    no reading: a relay says why the reader elsewhere can't be heard
 ========== =======================================================================
 
 Values are the numbers as read; the configuration's ``scale`` turns them into its unit.
@@ -24,7 +26,10 @@ from acquire.config.reader import ReaderSection
 from acquire.config.table import TableSection
 from acquire.tables import SEQ, TIME, Column, Row, Table
 
-STATUSES = ("ok", "overload", "range", "no_answer", "bad_reply", "settings", "end")
+NO_READING = ("settings", "end", "relay", "unheard")
+"""Statuses of rows that are about the reader, and for which no time has passed without a reading."""
+
+STATUSES = ("ok", "overload", "range", "no_answer", "bad_reply", *NO_READING)
 
 _TOOK = "from question to answer, time_s is the middle; empty for samples of a block"
 

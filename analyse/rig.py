@@ -8,7 +8,7 @@ from dataclasses import dataclass
 from acquire.config.hall_bar import HallBarSection
 from acquire.config.hall_bar import Signal as SignalSection
 from acquire.config.rig import Rig
-from acquire.readings import Reading
+from acquire.readings import NO_READING, Reading
 from analyse.estimate import Estimate
 from analyse.estimator import Estimator
 from analyse.hall_bar import HallBar
@@ -71,7 +71,7 @@ class RigEstimator:
         routes = self._routes.get(reading.reader, ())
         if reading.status == "settings":
             self._use_settings(reading, routes)
-        if reading.status in ("settings", "end"):
+        if reading.status in NO_READING:
             return
         for route in routes:
             values = self._values(reading, route)

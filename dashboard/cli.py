@@ -209,6 +209,12 @@ def _add_read(commands: Commands) -> None:
     read.add_argument("reader", metavar="READER", help="the reader's name in the configuration")
     _add_folder(read)
     read.add_argument(
+        "--host",
+        metavar="ADDRESS",
+        help="this computer's address to be heard at, a number (default: as configured, else "
+        "127.0.0.1); any but loopback needs keys",
+    )
+    read.add_argument(
         "--publish-port", metavar="N", type=_port, help="where readings go out (default: as configured)"
     )
     read.add_argument(

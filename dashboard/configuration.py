@@ -7,8 +7,10 @@ from typing import Any
 
 import tomli
 
+from acquire.bus.keys import client_keys
 from acquire.config import ConfigError, Problem, Rig, load
 from acquire.config.problems import nearest_name
+from acquire.errors import KeysError
 from analyse.materials import MATERIALS, find_material
 from analyse.replay import RowMaker
 
@@ -29,6 +31,19 @@ def load_configuration(path: str | Path) -> tuple[Rig, bytes]:
     except ValueError as error:
         raise ConfigError(str(path), [Problem("hall_bars", str(error))]) from None
     return rig, config
+
+
+def check_keys(rig: Rig) -> None:
+    """Raise ConfigError if there are not the keys that are needed to hear readers elsewhere."""
+    problems = []
+    for index, reader in enumerate(rig.readers):
+        if reader.elsewhere is not None and reader.elsewhere.computer is not None:
+            try:
+                client_keys(rig.keys.folder, reader.elsewhere.computer)
+            except KeysError as error:
+                problems.append(Problem(f"readers[{index}].elsewhere.computer", str(error)))
+    if problems:
+        raise ConfigError("keys", problems)
 
 
 def _materials(path: Path) -> list[Problem]:

@@ -6,14 +6,13 @@ from collections.abc import Mapping
 
 from acquire.bus import StreamHealth
 from acquire.config import Rig
-from acquire.readings import stream_of
+from acquire.readings import NO_READING, stream_of
 from acquire.tables import Row
 from analyse.estimate_table import ESTIMATES, EVENTS
 from dashboard.streams import reading_tables
 from dashboard.summary import Summary
 
 _STATUS, _DETAIL, _TIME = 3, 4, 1
-_NO_READING = ("settings", "end")
 
 
 class Progress:
@@ -50,7 +49,9 @@ class Progress:
 
     def _take_reading(self, stream: str, row: Row) -> None:
         status, name = row[_STATUS], self._readers[stream]
-        if status in _NO_READING:
+        if status == "unheard":
+            self.trouble[name] = str(row[_DETAIL])
+        if status in NO_READING:
             return
         if status == "ok":
             self.readings[name] += 1

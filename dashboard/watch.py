@@ -9,7 +9,6 @@ from pathlib import Path
 from threading import Event
 
 from acquire.bus import Endpoint, Subscriber, ask, free_endpoints
-from acquire.bus.addresses import check_address
 from acquire.config import Rig
 from acquire.errors import BusError, UsageError
 from acquire.run_folder import LiveRun, RunFolder, create_run
@@ -17,6 +16,7 @@ from analyse.estimate_table import ESTIMATES, EVENTS
 from dashboard import roles
 from dashboard.bad_end import complete
 from dashboard.browser import open_page
+from dashboard.configuration import check_keys
 from dashboard.earlier_runs import EarlierRuns
 from dashboard.event_sender import EventSender
 from dashboard.hangs import Hangs
@@ -61,8 +61,9 @@ class WatchPlan:
 def watch(plan: WatchPlan, view: View, wish: Event) -> tuple[RunFolder, Summary]:
     """Make a run, watch it until it is over or ``wish`` is set, and end everything in order.
 
-    Raises UsageError for a configuration that has nothing to watch, and what can go wrong
-    before anything was started; after that processes are restarted rather than given up.
+    Raises UsageError for a configuration that has nothing to watch, ConfigError for keys of
+    readers elsewhere that can't be used, and what can go wrong before anything was started; after
+    that processes are restarted rather than given up.
     """
     if not plan.rig.readers:
         raise UsageError(
@@ -72,6 +73,7 @@ def watch(plan: WatchPlan, view: View, wish: Event) -> tuple[RunFolder, Summary]
         raise UsageError("--exit needs a [ramp] in the configuration, which says when it is over.")
     if plan.arm_hold and plan.rig.hold is None:
         raise UsageError("--arm-hold needs a [hold] in the configuration, which says what is sent.")
+    check_keys(plan.rig)
     port = page_port(plan.port, plan.page.address)
     endpoints, requests = endpoints_of(plan.rig)
     run = create_run(plan.rig, plan.config, list(run_tables(plan.rig).values()), plan.folder)
@@ -88,12 +90,8 @@ def watch(plan: WatchPlan, view: View, wish: Event) -> tuple[RunFolder, Summary]
 def endpoints_of(rig: Rig) -> tuple[dict[str, Endpoint], str]:
     """Where each stream meets its listeners, and the address of the estimator's inbox.
 
-    Free addresses, all different. Raises BusError if a reader elsewhere is not on loopback.
+    Free addresses, all different. Raises BusError if there are none.
     """
-    for reader in rig.readers:
-        if reader.elsewhere is not None:
-            check_address(reader.elsewhere.publish, False)
-            check_address(reader.elsewhere.answer, False)
     endpoints = free_endpoints([*run_tables(rig), "requests"])
     requests = endpoints.pop("requests").answer
     return endpoints, requests

@@ -192,6 +192,26 @@ def test_the_demo_is_answered_as_it_is_configured() -> None:
         (changed("readers", 1, "fields", to=1), "readers[1]", "beyond the reply's fields = 1"),
         (changed("readers", 0, "settings", 0, "codes", to={"1": []}),
          "readers[0].settings[0].codes.1", "number, or input"),
+        (changed("readers", 0, "elsewhere", to={
+            "publish": "tcp://192.168.1.30:42001", "answer": "tcp://127.0.0.1:42002"}),
+         "readers[0].elsewhere", "so keys are needed: make them by `rampside keys make`"),
+        (changed("readers", 0, "elsewhere", to={
+            "publish": "tcp://cryostat:42001", "answer": "tcp://0.0.0.0:42002"}),
+         "readers[0].elsewhere.publish", "with a number (found 'tcp://cryostat:42001')"),
+        (changed("readers", 0, "elsewhere", to={
+            "publish": "tcp://127.0.0.1:42001", "answer": "tcp://0.0.0.0:42002"}),
+         "readers[0].elsewhere.answer", "not the address of one computer"),
+        (changed("readers", 0, "elsewhere", to={
+            "publish": "tcp://127.0.0.1:42001", "answer": "tcp://127.0.0.1:42001"}),
+         "readers[0].elsewhere", "must be different"),
+        (changed("readers", 0, "elsewhere", to={
+            "publish": "tcp://[::1]:0", "answer": "tcp://[::1]:42001", "computer": "a b"}),
+         "readers[0].elsewhere.computer", "pattern"),
+        (changed("readers", 0, "elsewhere", to={
+            "publish": "tcp://[::1]:0", "answer": "tcp://[::1]:42001"}),
+         "readers[0].elsewhere.publish", "needs a port from 1 on"),
+        (changed("keys", to={"folder": ""}), "keys.folder", "at least 1 character"),
+        (changed("keys", to={"folders": "x"}), "keys.folders", "did you mean folder?"),
         (changed("laboratory", "magnet", "path_T", to=[0, 0]),
          "laboratory.magnet.path_T", "no two equal ones"),
         (changed("laboratory", "lockins", 0, "time_constant_s", to=0.2),

@@ -10,7 +10,8 @@ import pytest
 from ramp_bench import RampBench
 from running import RAMPSIDE, Running
 
-from acquire.bus import Subscriber, free_endpoints
+from acquire.bus import Endpoint, Subscriber, free_endpoints
+from acquire.bus.keys import KeyFolder
 from acquire.run_folder import open_run
 from dashboard.streams import reading_tables
 
@@ -45,6 +46,86 @@ def test_the_ports_as_asked_for(config: Path, tmp_path: Path) -> None:
     done = subprocess.run(line, capture_output=True, text=True, timeout=60, check=False)
     assert done.returncode == 2
     assert "must differ" in done.stderr
+
+
+def test_another_address_needs_keys_and_says_what_to_do(config: Path, tmp_path: Path) -> None:
+    keys = tmp_path / "keys"
+    config.write_text(f'{config.read_text()}\n[keys]\nfolder = "{keys}"\n')
+    line = [str(RAMPSIDE), "read", str(config), "magnet", "--host"]
+    for host, message in [
+        ("192.0.2.7", "make it by: rampside keys make NAME"),
+        ("0.0.0.0", "is not the address of one computer"),  # noqa: S104
+        ("cryostat", "is no address of the bus"),
+    ]:
+        done = subprocess.run([*line, host], capture_output=True, text=True, timeout=60, check=False)
+        assert (done.returncode, message in done.stderr) == (2, True), done.stderr
+    KeyFolder(keys).make("desk")
+    done = subprocess.run(
+        [*line, "192.0.2.7", "--folder", str(tmp_path / "runs"), "--seconds", "20"],
+        capture_output=True, text=True, timeout=60, check=False,
+    )  # fmt: skip
+    assert "can't be bound" in done.stdout  # documentation's address, not of this computer
+    assert "is it an address of this computer?" in done.stdout
+
+
+def elsewhere(config: Path, addresses: Endpoint, keys: KeyFolder) -> Path:
+    """The same rig, its magnet read on the computer "cryostat" with these keys."""
+    section = (
+        f'elsewhere = {{ publish = "{addresses.publish}", answer = "{addresses.answer}", '
+        'computer = "cryostat" }'
+    )
+    name = 'name = "magnet"'
+    text = config.read_text().replace(name, f"{name}\n{section}")
+    path = config.with_name(f"{keys.path.name}.toml")
+    path.write_text(f'{text}\n[keys]\nfolder = "{keys.path}"\n')
+    return path
+
+
+def test_two_computers_with_keys_and_a_stranger(config: Path, tmp_path: Path) -> None:
+    """Several loopback addresses stand for several computers."""
+    free = free_endpoints(["readings/magnet"])["readings/magnet"]
+    addresses = Endpoint(*(one.replace("127.0.0.1", "127.0.0.2") for one in
+                           (free.publish, free.answer)))  # fmt: skip
+    cryostat, desk, stranger = (
+        KeyFolder(tmp_path / name) for name in ("cryostat", "desk", "stranger")
+    )
+    for keys in (cryostat, desk, stranger):
+        keys.make(keys.path.name)
+    for keys in (desk, stranger):
+        keys.accept(cryostat.path / "cryostat.pub")
+    cryostat.accept(desk.path / "desk.pub")
+    runs = tmp_path / "runs"
+    words = ("--port", 0, "--no-browser", "--folder", runs)
+    with Running("read", elsewhere(config, addresses, cryostat), "magnet", "--folder", runs) as reader:
+        reader.wait_for("readings; B ")
+        with Running("watch", elsewhere(config, addresses, stranger), *words) as watch:
+            watch.wait_for("'cryostat' refused our key")
+            reader.wait_for(f"refused somebody at 127.0.0.1 with the key {stranger.own().public}")
+            assert watch.end()[0] == 0
+        with Running("watch", elsewhere(config, addresses, desk), *words) as watch:
+            watch.wait_until_all_work()
+            assert watch.end()[0] == 0
+        assert reader.end()[0] == 0
+        assert "'cryostat' refused our key" not in watch.text
+    run = open_run(watch.run)
+    rows = list(run.rows(reading_tables(run.rig)["readings/magnet"]))
+    assert sum(row[3] == "ok" for row in rows) > 5
+
+
+def test_a_watch_without_the_keys_does_not_begin(config: Path, tmp_path: Path) -> None:
+    desk = KeyFolder(tmp_path / "desk")
+    path = elsewhere(config, Endpoint("tcp://192.0.2.7:42001", "tcp://192.0.2.7:42002"), desk)
+    for command, message in [
+        ("watch", "make it by: rampside keys make NAME"),
+        ("check", "make it by: rampside keys make NAME"),
+        ("watch", "no public key of 'cryostat' (there are: desk)"),
+    ]:
+        line = [str(RAMPSIDE), command, str(path)]
+        done = subprocess.run(line, capture_output=True, text=True, timeout=60, check=False)
+        assert (done.returncode, message in done.stderr) == (2, True), done.stderr
+        if command == "check":
+            desk.make("desk")
+    assert not (tmp_path / "runs").exists()
 
 
 def test_a_watch_takes_over_what_a_reader_elsewhere_reads(config: Path, tmp_path: Path) -> None:

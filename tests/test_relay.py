@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import re
 import signal
 import subprocess
 import sys
+import time
 from collections.abc import Callable, Iterator
 from datetime import datetime, timedelta
 from itertools import pairwise
@@ -22,6 +24,7 @@ from acquire.config import parse
 from acquire.errors import JournalError, RowError, RunError
 from acquire.journal import Journal
 from acquire.readings import reading_table
+from acquire.relay.clocks import Difference
 from acquire.relay.far_side import FarSide
 from acquire.relay.relaying import Relaying
 from acquire.relay.translation import ENDED, Standing, Translation, standing_of
@@ -40,6 +43,11 @@ def there(seconds: float) -> str:
     return utc_text(START + timedelta(seconds=seconds))
 
 
+def apart(seconds: float) -> Difference:
+    """Clocks that were found to be so far apart."""
+    return Difference(float(seconds), 0.001)
+
+
 def row(seq: int, time_s: float, status: str = "ok", detail: str | None = None) -> Row:
     """A row of the reader elsewhere, with one value."""
     return (seq, time_s, 0.01, status, detail, float(seq) if status == "ok" else None)
@@ -49,18 +57,21 @@ def row(seq: int, time_s: float, status: str = "ok", detail: str | None = None) 
 
 
 def test_a_row_comes_out_at_the_same_moment_of_this_run() -> None:
-    translation = Translation(HERE, Standing())
-    assert translation.adopt("far", there(2.5)) == 0
+    translation = Translation(HERE, Standing(), 1)
+    assert translation.adopt("far", there(2.5), apart(2.5)) == 0
     begin, first = translation.take(row(0, 1.25))
-    assert begin[:3] == (0.0, None, "no_answer")
-    assert begin[3] == f'listens to run "far", started {there(2.5)}, from its row 0 on'
+    assert begin[:3] == (0.0, None, "relay")
+    assert begin[3] == (
+        f'listens to run "far", started {there(2.5)}, from its row 0 on; '
+        "its 0 s are 2.5 s here, to within 0.001 s"
+    )
     assert first == (3.75, 0.01, "ok", None, 0.0)
     assert translation.take(row(1, 1.5, "overload", "X")) == [(4.0, 0.01, "overload", "X", None)]
 
 
 def test_what_was_read_before_this_run_is_left_out_but_for_the_last_settings() -> None:
-    translation = Translation(HERE, Standing())
-    translation.adopt("far", there(-10))
+    translation = Translation(HERE, Standing(), 1)
+    translation.adopt("far", there(-10), apart(-10))
     old = [row(0, 0.0, "settings", "old"), row(1, 5.0), row(2, 9.0, "settings", SETTINGS)]
     assert [translation.take(one) for one in old] == [[], [], []]
     known, begin, first = translation.take(row(3, 10.5))
@@ -72,11 +83,11 @@ def test_what_was_read_before_this_run_is_left_out_but_for_the_last_settings() -
 
 
 def test_the_end_of_the_run_elsewhere_is_not_the_end_here() -> None:
-    translation = Translation(HERE, Standing())
-    translation.adopt("far", HERE)
+    translation = Translation(HERE, Standing(), 1)
+    translation.adopt("far", HERE, apart(0))
     translation.take(row(0, 1.0))
     assert translation.take(row(1, 2.0, "end")) == [(2.0, 0.01, "no_answer", ENDED, None)]
-    assert translation.adopt("next", there(60)) == 0
+    assert translation.adopt("next", there(60), apart(60)) == 0
     begin, first = translation.take(row(0, 0.0, "settings", SETTINGS))
     assert str(begin[3]).startswith("listens to run")
     assert begin[0] == 2.0
@@ -84,10 +95,10 @@ def test_the_end_of_the_run_elsewhere_is_not_the_end_here() -> None:
 
 
 def test_a_run_that_broke_off_is_said() -> None:
-    translation = Translation(HERE, Standing())
-    translation.adopt("far", HERE)
+    translation = Translation(HERE, Standing(), 1)
+    translation.adopt("far", HERE, apart(0))
     translation.take(row(0, 1.0))
-    translation.adopt("next", there(60))
+    translation.adopt("next", there(60), apart(60))
     begin, _ = translation.take(row(0, 0.0))
     assert str(begin[3]).startswith("run 'far' was heard up to its row 0, not to its end; listens")
 
@@ -95,7 +106,7 @@ def test_a_run_that_broke_off_is_said() -> None:
 @pytest.mark.parametrize("text", ["", "yesterday", "2031-05-14T10:00:00"])
 def test_a_start_that_is_not_known_is_refused(text: str) -> None:
     with pytest.raises(RunError, match="start of the run 'far' elsewhere is not known"):
-        Translation(HERE, Standing()).adopt("far", text)
+        Translation(HERE, Standing(), 1).adopt("far", text, apart(0))
 
 
 RUN_IDS = st.text(st.characters(codec="utf-8"), min_size=1).filter(str.strip)
@@ -128,25 +139,26 @@ def relayed(runs: list[tuple[str, int, int]], kills: list[int]) -> list[Row]:
     so many rows each, 5 s apart, until the next one begins."""
     journal: list[Row] = []
     lives = iter(kills)
-    translation, life = Translation(HERE, Standing()), next(lives, 10_000)
+    translation, life = Translation(HERE, Standing(), 1), next(lives, 10_000)
     for name, start, count in runs:
-        seq = translation.adopt(name, there(start))
+        seq = translation.adopt(name, there(start), apart(start))
         while seq < count:
             status = "settings" if seq == 0 else "end" if seq == count - 1 else "ok"
             rows = translation.take(row(seq, 5.0 * seq, status, SETTINGS))
             journal += [(len(journal) + n, *cells) for n, cells in enumerate(rows[:life])]
             seq, life = seq + 1, life - len(rows)
             if life < 0:
-                translation, life = Translation(HERE, standing_of(journal)), next(lives, 10_000)
-                seq = translation.adopt(name, there(start))
+                translation, life = Translation(HERE, standing_of(journal), 1), next(lives, 10_000)
+                seq = translation.adopt(name, there(start), apart(start))
     return journal
 
 
 def test_the_end_of_a_relay_is_not_counted_as_a_row_elsewhere() -> None:
-    translation = Translation(HERE, Standing())
-    translation.adopt("far", HERE)
+    translation = Translation(HERE, Standing(), 1)
+    translation.adopt("far", HERE, apart(0))
     rows = [(0, *cells) for cells in translation.take(row(0, 1.0))]
-    assert standing_of([*rows, (2, 5.0, None, "end", None, None)]) == Standing("far", 1, 1.0)
+    found = standing_of([*rows, (2, 5.0, None, "end", None, None)])
+    assert found == Standing("far", 1, 1.0, clocks=apart(0))
 
 
 # What is done with rows.
@@ -161,8 +173,9 @@ class Desk:
         self.complaints: list[str] = []
         self.full = self.locked = False
         self.now = 0.0
-        translation = Translation(HERE, Standing())
-        translation.adopt("far", HERE)
+        translation = Translation(HERE, Standing(), 1)
+        translation.adopt("far", HERE, apart(0))
+        self.translation = translation
         self.relaying = Relaying(
             translation, HERE, 1, self.publish, self.note, self.complaints.append, lambda: self.now
         )
@@ -233,14 +246,20 @@ def test_settings_are_noted_when_they_can_be() -> None:
     ]  # fmt: skip
 
 
-def test_clocks_that_differ_are_said_once() -> None:
+def test_why_nobody_is_heard_stands_in_the_run_and_is_said_once() -> None:
     desk = Desk()
-    desk.relaying.take([row(0, 0.4)])
-    assert desk.complaints == []
-    desk.relaying.take([row(1, 7.0), row(2, 8.0)])
-    desk.relaying.take([row(3, 9.0)])
-    assert len(desk.complaints) == 1
-    assert "8 s before their time" in desk.complaints[0]
+    desk.relaying.take([row(0, 1.0)])
+    for trouble in ("", "refused", "refused", "", "refused", "hangs up"):
+        desk.relaying.heed(trouble)
+    desk.relaying.step()
+    assert desk.complaints == ["refused", "refused", "hangs up"]
+    assert [cells[2:4] for cells in desk.rows[2:]] == [
+        ("unheard", "refused"), ("unheard", "refused"), ("unheard", "hangs up")
+    ]  # fmt: skip
+    assert {cells[0] for cells in desk.rows[2:]} == {1.0}  # what is read now may still come
+    desk.relaying.take([row(1, 1.5)])
+    desk.relaying.step()
+    assert desk.rows[-1] == (1.5, 0.01, "ok", None, 1.0)
 
 
 def test_the_end_is_the_last_row() -> None:
@@ -330,8 +349,8 @@ def test_somebody_else_there_is_told_in_one_sentence(tmp_path: Path, what: str) 
     message = "publishes 'readings/other', not" if what == "stream" else "has other columns .*10.0"
     with (
         Journal(tmp_path / "a", other) as journal,
-        Publisher("far", other, journal, FREE, started_utc=HERE) as publisher,
-        FarSide(TABLE, publisher.endpoint, lambda run, started: 0) as far_side,
+        Publisher("far", other, journal, FREE, started_utc=HERE, now_s=lambda: 0.0) as publisher,
+        FarSide(TABLE, publisher.endpoint, lambda *met: 0, time.monotonic) as far_side,
         pytest.raises(RunError, match=message),
     ):
         for _ in range(200):
@@ -405,16 +424,26 @@ def pair(tmp_path: Path) -> Iterator[Pair]:
             side.close()
 
 
-def as_heard_here(far: Side, near: Side, first: int = 0) -> list[Row]:
-    """The rows elsewhere from number ``first`` on as they must stand here, without their numbers."""
-    far_start, near_start = (datetime.fromisoformat(side.run.started_utc) for side in (far, near))
-    offset_s = (far_start - near_start).total_seconds()
+def as_heard_here(far: Side, near: Side) -> list[Row]:
+    """The rows elsewhere that were heard, as they must stand here by what this run's journal says
+    of the clocks; without their numbers."""
+    there = {one[0]: one[1:] for one in far.rows()}
     rows: list[Row] = []
-    for _, time_s, took_s, status, detail, *values in far.rows()[first:]:
-        assert isinstance(time_s, float)
-        if status == "end":
-            status, detail = "no_answer", ENDED
-        rows.append((time_s + offset_s, took_s, status, detail, *values))
+    seq: int | None = None
+    offset_s = latest_s = 0.0
+    for _, time_s, _, status, detail, *_ in near.rows():
+        clock = re.search(r"its 0 s are (\S+) s here", str(detail)) if status == "relay" else None
+        offset_s = float(clock[1]) if clock is not None else offset_s
+        adopted = re.search(r"to run \"(.*)\", started .*, from its row (\d+)", str(detail))
+        if status == "relay" and adopted is not None:
+            seq = int(adopted[2]) if adopted[1] == far.run.run_id else None
+        elif seq is not None and status not in ("relay", "unheard", "end"):
+            read_s, took_s, was, what, *values = there[seq]
+            assert isinstance(read_s, float)
+            was, what = ("no_answer", ENDED) if was == "end" else (was, what)
+            rows.append((max(read_s + offset_s, latest_s), took_s, was, what, *values))
+            seq += 1
+        latest_s = max(latest_s, float(str(time_s)))
     return rows
 
 
@@ -425,7 +454,7 @@ def heard_of(near: Side, run: RunFolder) -> list[Row]:
     (begin,) = [n for n, one in enumerate(rows) if f'listens to run "{run.run_id}"' in str(one[4])]
     after = rows[begin + 1 :]
     stop = next((n for n, one in enumerate(after) if "listens to run" in str(one[4])), len(after))
-    return [one[1:] for one in after[:stop] if one[3] != "end"]
+    return [one[1:] for one in after[:stop] if one[3] not in ("end", "relay", "unheard")]
 
 
 def test_whoever_is_killed_no_row_is_lost_or_doubled(pair: Pair, wait_for: Wait) -> None:
@@ -446,6 +475,7 @@ def test_whoever_is_killed_no_row_is_lost_or_doubled(pair: Pair, wait_for: Wait)
     wait_for(lambda: near.rows()[-1][4] == ENDED, "the end elsewhere")
     assert near.end() == 0
     assert heard_of(near, far.run) == as_heard_here(far, near)
+    assert len(heard_of(near, far.run)) == far.count()
     assert near.rows()[-1][3] == "end"
     notes, own = near.run.instruments(), far.run.instruments()
     assert [note["identity"] for note in notes] == ["MAKER,MODEL,7,1.0"] * 2
@@ -470,10 +500,11 @@ def test_a_run_that_began_late_hears_what_holds_and_nothing_older(
     assert near.run.instruments()[0]["identity"] == "MAKER,MODEL,7,1.0"
     first = int(str(begin[4]).rpartition("row ")[2].split()[0])
     assert first >= 5
-    here = as_heard_here(far, near)
-    assert here[first - 1][0] < 0 <= here[first][0]  # type: ignore[operator]
-    heard = heard_of(near, far.run)
-    assert heard == here[first : first + len(heard)]
+    clock = re.search(r"its 0 s are (\S+) s here", str(begin[4]))
+    assert clock is not None
+    last, next_one = (float(str(far.rows()[seq][1])) + float(clock[1]) for seq in (first - 1, first))
+    assert last < 0 <= next_one
+    assert heard_of(near, far.run) == as_heard_here(far, near)
 
 
 def test_another_run_elsewhere_is_taken_up_where_the_first_ended(

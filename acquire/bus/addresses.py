@@ -8,18 +8,13 @@ from collections.abc import Iterable
 from contextlib import ExitStack
 from dataclasses import dataclass
 
-from acquire.address import Address, parse_address
+from acquire.address import KEYS_NEEDED, Address, parse_address
 from acquire.errors import BusError
 
 # Below the ports that systems hand out for outgoing connections (from 32768 on Linux, 49152
 # elsewhere): a subscriber that keeps calling a dead publisher would in the end be given the very
 # port that it calls, talk to itself and keep the publisher from coming back.
 LOWEST_PORT, HIGHEST_PORT = 20_000, 32_000
-
-KEYS_NEEDED = (
-    "so keys are needed: make them by `rampside keys make` on both computers, and name the other "
-    "one as `computer` in [readers.elsewhere]"
-)
 
 
 @dataclass(frozen=True)
@@ -47,7 +42,7 @@ def check_address(text: str, with_keys: bool) -> Address:
     except ValueError as error:
         raise BusError(f"{text}: {error}.") from None
     if not (address.loopback or with_keys):
-        raise BusError(f"{text}: not a loopback address, {KEYS_NEEDED}.")
+        raise BusError(f"{text}: {KEYS_NEEDED}.")
     return address
 
 

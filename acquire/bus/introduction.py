@@ -62,9 +62,6 @@ class Introducer(Closing):
         """
         now = time.monotonic()
         if now - self._asked > PATIENCE_S:
-            if now - self._heard > RENEW_S:
-                self._disconnect()
-                self._connect()
             self._asked = now
             self._send(NEWEST)
         introduction = self._receive(timeout_s)
@@ -99,6 +96,9 @@ class Introducer(Closing):
             self._context.destroy(linger=0)
 
     def _send(self, start: int) -> None:
+        if time.monotonic() - self._heard > RENEW_S:  # also: ZeroMQ gives up where it was refused
+            self._disconnect()
+            self._connect()
         try:
             self._socket.send(pack(Question(ANY_RUN, "", start)), zmq.NOBLOCK)
         except zmq.Again:

@@ -83,6 +83,15 @@ class StreamProgress:
         self._gap = False
         return NEWEST if self._next is None else self._next
 
+    @property
+    def settled(self) -> bool:
+        """Whether the last question was answered and nothing is known to be missing."""
+        return self._asked is None and not self._gap
+
+    def inquire(self) -> None:
+        """Have a question asked at once, whether or not one is due."""
+        self._gap, self._asked = True, None
+
     def refuse(self) -> None:
         """Count something that was no message at all."""
         self._refused += 1

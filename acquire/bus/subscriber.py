@@ -86,6 +86,20 @@ class Subscriber(Closing):
                 return got
             wait_s = max(min(deadline, next_question) - now, 0.0)
 
+    def catch_up(self, within_s: float) -> list[tuple[str, Row]]:
+        """As :meth:`receive`, but asks each stream at once and waits until all that it had then
+        has come, at most ``within_s`` seconds."""
+        for stream in self._streams.values():
+            stream.progress.inquire()
+        deadline = time.monotonic() + within_s
+        got = self.receive(0.0)
+        while not self._settled() and (left_s := deadline - time.monotonic()) > 0:
+            got += self.receive(min(left_s, 0.05))
+        return got
+
+    def _settled(self) -> bool:
+        return all(stream.progress.settled for stream in self._streams.values())
+
     def health(self) -> dict[str, StreamHealth]:
         """What is known of each stream."""
         return {name: stream.health() for name, stream in self._streams.items()}

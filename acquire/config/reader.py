@@ -6,6 +6,7 @@ from typing import Annotated, Literal
 
 from pydantic import Field, field_validator, model_validator
 
+from acquire.address import KEYS_NEEDED, parse_address
 from acquire.config.block import Block
 from acquire.config.sections import Name, NotNegative, Positive, Section, Several
 
@@ -165,10 +166,31 @@ class ReaderSection(Connection):
 
 
 class Elsewhere(Section):
-    """The two addresses of a reader that was started by itself (``rampside read``)."""
+    """The two addresses of a reader that was started by itself (``rampside read``).
 
-    publish: Annotated[str, Field(pattern=r"^tcp://")]
-    answer: Annotated[str, Field(pattern=r"^tcp://")]
+    ``computer``: the one that it runs on, known by the public key of this name; needed for
+    addresses that are not on loopback.
+    """
+
+    publish: str
+    answer: str
+    computer: Name | None = None
+
+    @field_validator("publish", "answer")
+    @classmethod
+    def _is_an_address(cls, text: str) -> str:
+        if parse_address(text).port == 0:
+            raise ValueError("needs a port from 1 on, which both sides know")
+        return text
+
+    @model_validator(mode="after")
+    def _two(self) -> Elsewhere:
+        if self.publish == self.answer:
+            raise ValueError("publish and answer must be different addresses")
+        for text in (self.publish, self.answer):
+            if self.computer is None and not parse_address(text).loopback:
+                raise ValueError(f"{text} is {KEYS_NEEDED}")
+        return self
 
 
 ReaderSection.model_rebuild()

@@ -9,6 +9,7 @@ from pydantic import Field, field_validator, model_validator
 
 from acquire.config.hall_bar import HallBarSection
 from acquire.config.hold import HoldSection
+from acquire.config.keys import KeysSection
 from acquire.config.reader import ReaderSection
 from acquire.config.sections import Name, NotNegative, Positive, Section, Several, Share
 from acquire.config.table import TableSection
@@ -99,6 +100,7 @@ class Rig(Section):
     readers: Several[ReaderSection] = ()
     table: TableSection | None = None
     hold: HoldSection | None = None
+    keys: KeysSection = KeysSection()
     laboratory: Scenario | None = None
 
     def reader(self, name: str) -> ReaderSection:

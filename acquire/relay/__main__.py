@@ -18,13 +18,16 @@ from acquire.config.reader import ReaderSection
 from acquire.errors import RunError
 from acquire.reader_output import live_run_for, reader_output
 from acquire.readings import reading_table, stream_of
-from acquire.relay.far_side import FarSide
+from acquire.relay.clock_words import ClockWords, tolerable_s
+from acquire.relay.clocks import Difference
+from acquire.relay.far_side import FarSide, endpoint_elsewhere
 from acquire.relay.relaying import Relaying
 from acquire.relay.translation import STATUS, Translation, standing_of
 from acquire.run_folder import LiveRun, RunFolder, open_run
 from acquire.tables import Row, Table
 
 LONGEST_WAIT_S = 0.1
+LAST_ROWS_S = 0.4  # how long it may take at the end to have the last rows
 
 
 def main(arguments: Sequence[str] | None = None) -> int:
@@ -44,31 +47,51 @@ def _relay(run: RunFolder, name: str, child: Child) -> None:
         run.note_instrument({"reader": name, "resource": far.publish, **known})
 
     with reader_output(run, live, table, child.complain) as publisher:
-        translation = Translation(run.started_utc, standing_of(run.rows(table)))
+        width, now_s = len(section.values), RunClock(live.monotonic_start).now_s
+        translation = Translation(run.started_utc, standing_of(run.rows(table)), width)
         relaying = Relaying(
-            translation,
-            run.started_utc,
-            len(section.values),
-            publisher.publish,
-            note,
-            child.complain,
-            RunClock(live.monotonic_start).now_s,
+            translation, run.started_utc, width, publisher.publish, note, child.complain, now_s
         )
         relaying.note_later(_unnoted(run, table, name))
-        with FarSide(table, far, translation.adopt) as far_side:
-            _listen(far_side, relaying, child.wanted)
+        words = ClockWords(tolerable_s(run.rig, section), child.complain)
+
+        def adopt(there: str, started_utc: str, clocks: Difference) -> int:
+            first = translation.adopt(there, started_utc, clocks)
+            words.met(translation.wall_clocks_apart_s(started_utc))
+            print(
+                f"listens to run {there!r}; its clock is known to within "
+                f"{1e3 * clocks.uncertainty_s:.2g} ms",
+                flush=True,
+            )
+            return first
+
+        def compare(found: Difference) -> None:
+            words.compared(now_s(), found)
+            relaying.say(translation.correct(found))
+
+        with FarSide(table, far, adopt, now_s) as far_side:
+            _listen(far_side, relaying, compare, child.wanted)
 
 
-def _listen(far_side: FarSide, relaying: Relaying, wanted: Callable[[], bool]) -> None:
-    """Take rows until it is not wanted any more, then those that have come already."""
+def _listen(
+    far_side: FarSide,
+    relaying: Relaying,
+    compare: Callable[[Difference], None],
+    wanted: Callable[[], bool],
+) -> None:
+    """Take rows until it is not wanted any more, then those that are there by then."""
     while wanted():
         if relaying.behind:
             time.sleep(LONGEST_WAIT_S)  # what the bus loses meanwhile is asked for again
         else:
             relaying.take(far_side.receive(LONGEST_WAIT_S))
+            relaying.heed(far_side.trouble)
+            found = far_side.compare_clocks()
+            if found is not None:
+                compare(found)
         relaying.step()
     if not relaying.behind:
-        relaying.take(far_side.receive(0.0))
+        relaying.take(far_side.last_rows(LAST_ROWS_S))
     relaying.end()
 
 
@@ -86,7 +109,7 @@ def _elsewhere(run: RunFolder, name: str) -> tuple[ReaderSection, Endpoint, Live
         names = ", ".join(one.name for one in run.rig.readers if one.elsewhere is not None)
         raise RunError(f"{run.path}: has no reader {name!r} elsewhere; it has {names or 'none'}.")
     live = live_run_for(run, name)
-    far = Endpoint(section.elsewhere.publish, section.elsewhere.answer)
+    far = endpoint_elsewhere(run.rig, section)
     if {far.publish, far.answer} & {*vars(live.endpoints[stream_of(name)]).values()}:
         raise RunError(f"{run.path}: listens to {name!r} itself, so that no relay is needed.")
     return section, far, live

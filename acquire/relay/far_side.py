@@ -6,11 +6,32 @@ import time
 from collections.abc import Callable
 
 from acquire.bus import Endpoint, Introducer, Introduction, Subscriber
+from acquire.bus.keys import KeyFolder
 from acquire.closing import Closing
+from acquire.config import Rig
+from acquire.config.reader import ReaderSection
 from acquire.errors import RunError
+from acquire.relay.clocks import ClockComparison, Difference
 from acquire.tables import Row, Table
 
 SILENT_S = 2.0  # after which it is asked whether another run is there now
+COMPARE_EVERY_S = 2.0
+TRIP_S = 0.5  # a longer round trip would tell nothing of use
+FIRST_TRIPS, FIRST_TRIPS_S = 8, 1.5  # before the first row is taken, and how long they may take
+
+Adopt = Callable[[str, str, Difference], int]
+"""Takes a run's id, its start in UTC and how far its clock is from ours, when it is first heard
+of; returns the number of the row that is wanted first."""
+
+
+def endpoint_elsewhere(rig: Rig, reader: ReaderSection) -> Endpoint:
+    """Where a reader of the configuration is heard. Its section must say so by ``elsewhere``."""
+    assert reader.elsewhere is not None
+    given = reader.elsewhere
+    if given.computer is None:
+        return Endpoint(given.publish, given.answer)
+    folder = str(KeyFolder(rig.keys.folder).path)
+    return Endpoint(given.publish, given.answer, folder, given.computer)
 
 
 class FarSide(Closing):
@@ -20,18 +41,22 @@ class FarSide(Closing):
     ----------
     table : what its table must be.
     endpoint : where it publishes, and where it answers.
-    adopt : takes a run's id and start in UTC when it is first heard of; returns the number of the
-        row that is wanted first.
+    adopt : see :data:`Adopt`.
+    now_s : the clock of this run.
     """
 
-    def __init__(self, table: Table, endpoint: Endpoint, adopt: Callable[[str, str], int]) -> None:
+    def __init__(
+        self, table: Table, endpoint: Endpoint, adopt: Adopt, now_s: Callable[[], float]
+    ) -> None:
         self._table = table
         self._endpoint = endpoint
         self._adopt = adopt
+        self._now_s = now_s
         self._introducer = Introducer(endpoint)
         self._subscriber: Subscriber | None = None
+        self._clocks = ClockComparison()
         self._run = ""
-        self._since = time.monotonic()
+        self._since = self._compared = time.monotonic()
 
     def receive(self, timeout_s: float) -> list[Row]:
         """Rows of the present run, in order and each once; waits for them up to ``timeout_s``.
@@ -47,6 +72,20 @@ class FarSide(Closing):
                 self._meet(introduction)
         return rows
 
+    def compare_clocks(self) -> Difference | None:
+        """How far the clocks are apart, if it was time to ask and somebody has answered."""
+        now = time.monotonic()
+        if self._subscriber is None or now - self._compared < COMPARE_EVERY_S:
+            return None
+        self._compared = now
+        return self._difference() if self._ask_the_time(self._run) else None
+
+    def last_rows(self, within_s: float) -> list[Row]:
+        """All that is there by now, as far as it can be had in ``within_s`` seconds."""
+        if self._subscriber is None:
+            return []
+        return [row for _, row in self._subscriber.catch_up(within_s)]
+
     @property
     def silent(self) -> bool:
         """Whether nothing has proved for some time that the reader elsewhere lives."""
@@ -54,6 +93,13 @@ class FarSide(Closing):
         if self._subscriber is not None:
             heard = self._subscriber.health()[self._table.stream].last_heard_monotonic
         return time.monotonic() - max(heard or 0.0, self._since) > SILENT_S
+
+    @property
+    def trouble(self) -> str:
+        """Why it is not heard: it or we are refused; empty if neither is."""
+        health = {} if self._subscriber is None else self._subscriber.health()
+        texts = [self._introducer.trouble, *(one.trouble for one in health.values())]
+        return next(filter(None, texts), "")
 
     def close(self) -> None:
         """Close all sockets, at once. Closing twice is no mistake."""
@@ -63,14 +109,32 @@ class FarSide(Closing):
 
     def _meet(self, introduction: Introduction) -> None:
         self._check(introduction)
+        self._clocks = ClockComparison()
+        deadline = time.monotonic() + FIRST_TRIPS_S
+        trips = 0
+        while trips < FIRST_TRIPS and time.monotonic() < deadline:
+            trips += self._ask_the_time(introduction.run)
+        difference = self._difference()
+        if difference is None:
+            return  # it has gone again, or the line is too slow just now
         stream = self._table.stream
-        first = self._adopt(introduction.run, introduction.started_utc)
+        first = self._adopt(introduction.run, introduction.started_utc, difference)
         if self._subscriber is not None:
             self._subscriber.close()
         self._run, self._since = introduction.run, time.monotonic()
         self._subscriber = Subscriber(
             introduction.run, {stream: self._endpoint}, {stream: self._table}, first
         )
+
+    def _ask_the_time(self, run: str) -> bool:
+        trip = self._introducer.round_trip(self._now_s, TRIP_S)
+        if trip is None or trip.run != run:
+            return False
+        self._clocks.add(trip)
+        return True
+
+    def _difference(self) -> Difference | None:
+        return self._clocks.difference(self._now_s())
 
     def _check(self, introduction: Introduction) -> None:
         where = f"the reader elsewhere ({self._endpoint.answer})"
@@ -79,6 +143,8 @@ class FarSide(Closing):
                 f"{where} publishes {introduction.stream!r}, not {self._table.stream!r}; "
                 "see to the addresses in its [elsewhere]."
             )
+        if introduction.time_s is None:
+            raise RunError(f"{where} does not tell its time; is it started by rampside read?")
         ours = [(one.name, one.kind, one.unit, one.description) for one in self._table.columns]
         if list(introduction.columns) != ours:
             different = [pair for pair in zip(introduction.columns, ours) if pair[0] != pair[1]]

@@ -11,11 +11,10 @@ from typing import Any
 from acquire.clock import utc_text
 from acquire.errors import JournalError, RampsideError, RowError
 from acquire.relay.translation import DETAIL, STATUS, Translation
-from acquire.tables import Cell, Row
+from acquire.tables import Row
 
 RETRY_S = 1.0  # after a row could not be recorded
 RETRY_NOTE_S = 10.0  # after instruments.json could not be written
-AHEAD_S = 0.5  # rows that come from the future by more than this tell of clocks that differ
 
 
 class Relaying:
@@ -52,7 +51,8 @@ class Relaying:
         self._unpublished: deque[Row] = deque()
         self._unnoted: deque[Row] = deque()
         self._publish_at = self._note_at = float("-inf")
-        self._told_lost = self._told_ahead = False
+        self._told_lost = False
+        self._trouble = ""
 
     @property
     def behind(self) -> bool:
@@ -63,8 +63,20 @@ class Relaying:
         """Take rows of the reader elsewhere."""
         for row in rows:
             self._unpublished.extend(self._translation.take(row))
-        if self._unpublished:
-            self._check_clocks(self._unpublished[-1][0])
+
+    def say(self, rows: Iterable[Row]) -> None:
+        """Take what is to be written beside the rows of the reader elsewhere."""
+        self._unpublished.extend(rows)
+
+    def heed(self, trouble: str) -> None:
+        """Say why the reader elsewhere can't be heard, once until it is heard again.
+
+        ``trouble`` is empty where nothing is known to be wrong.
+        """
+        if trouble and trouble != self._trouble:
+            self._complain(trouble)
+            self.say(self._translation.unheard(trouble))
+        self._trouble = trouble
 
     def note_later(self, rows: Iterable[Row]) -> None:
         """Take settings rows of the journal, with their ``seq``, that are not noted yet."""
@@ -124,16 +136,6 @@ class Relaying:
         known = _known(str(row[DETAIL]))
         utc = utc_text(self._started + timedelta(seconds=time_s))
         return {"seq": seq, "time_s": time_s, "utc": utc, **known}
-
-    def _check_clocks(self, newest_s: Cell) -> None:
-        assert isinstance(newest_s, float)
-        ahead_s = newest_s - self._now()
-        if ahead_s > AHEAD_S and not self._told_ahead:
-            self._told_ahead = True
-            self._complain(
-                f"its rows come {ahead_s:.3g} s before their time: the clocks of the two computers "
-                "differ; set both by the same time server, or field and voltages do not fit."
-            )
 
 
 def _known(detail: str) -> dict[str, Any]:

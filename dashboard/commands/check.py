@@ -10,13 +10,14 @@ from acquire.config.reader import ReaderSection
 from acquire.hold.words import what_is_expected, what_is_sent, what_stands
 from acquire.probe import Exchange, Probe, probe
 from acquire.reply import escaped
-from dashboard.configuration import load_configuration
+from dashboard.configuration import check_keys, load_configuration
 from dashboard.outlook import lag_lines, target_lines
 
 
 def run(arguments: argparse.Namespace) -> int:
     """Check and say what was found; exit status 1 if an instrument failed."""
     rig, _ = load_configuration(arguments.config)
+    check_keys(rig)
     print(f"{arguments.config}: no mistakes. {_contents(rig)}")
     if rig.table is not None:
         print("It describes a table: nothing to ask. Try it by rampside replay TABLE --config.")

@@ -8,21 +8,24 @@ from __future__ import annotations
 
 import argparse
 import time
+from dataclasses import replace
 
+from acquire.address import Address, parse_address
 from acquire.bus import Endpoint, Subscriber, free_endpoints
 from acquire.bus.addresses import check_address
+from acquire.bus.keys import KeyFolder
 from acquire.config import ConfigError, Rig
 from acquire.config.problems import Problem, nearest_name
 from acquire.config.reader import ReaderSection
-from acquire.errors import UsageError
+from acquire.errors import KeysError, UsageError
 from acquire.readings import stream_of
+from acquire.relay.far_side import endpoint_elsewhere
 from acquire.run_folder import RunFolder, create_run
 from acquire.tables import Row, Table
 from dashboard.child import python
 from dashboard.configuration import load_configuration
 from dashboard.earlier_runs import EarlierRuns
 from dashboard.interrupts import asked_to_end
-from dashboard.ports import LOOPBACK
 from dashboard.streams import reading_tables
 from dashboard.supervisor import ProcessNews, Role, Supervisor
 
@@ -35,7 +38,7 @@ def run(arguments: argparse.Namespace) -> int:
     """Read until Ctrl-C, or for as long as asked; exit status 0."""
     rig, config = load_configuration(arguments.config)
     reader = _reader(rig, arguments.reader)
-    endpoint = _endpoint(reader, arguments.publish_port, arguments.answer_port)
+    endpoint = _endpoint(rig, reader, arguments)
     table = reading_tables(rig)[stream_of(reader.name)]
     run_folder = create_run(rig, config, [table], arguments.folder)
     with asked_to_end() as wish:
@@ -71,21 +74,45 @@ def _reader(rig: Rig, name: str) -> ReaderSection:
     return reader
 
 
-def _endpoint(reader: ReaderSection, publish: int | None, answer: int | None) -> Endpoint:
-    """The addresses: as asked for, else as configured, else free ones. Raises BusError."""
-    free = free_endpoints([reader.name])[reader.name]
+def _endpoint(rig: Rig, reader: ReaderSection, arguments: argparse.Namespace) -> Endpoint:
+    """The addresses: as asked for, else as configured, else free ones on loopback.
+
+    Raises ConfigError for keys that can't be used, BusError for an address that can't.
+    """
     given = reader.elsewhere
-    addresses = []
-    for port, configured, other in (
-        (publish, given.publish if given else None, free.publish),
-        (answer, given.answer if given else None, free.answer),
-    ):
-        address = f"tcp://{LOOPBACK}:{port}" if port else configured or other
-        check_address(address, False)
-        addresses.append(address)
-    if addresses[0] == addresses[1]:
+    endpoint = free_endpoints([reader.name])[reader.name]
+    if given is not None:
+        endpoint = endpoint_elsewhere(rig, reader)
+    publish = _address(endpoint.publish, arguments.host, arguments.publish_port)
+    answer = _address(endpoint.answer, arguments.host, arguments.answer_port)
+    if publish == answer:
         raise UsageError("--publish-port and --answer-port must differ.")
-    return Endpoint(*addresses)
+    if not endpoint.keys and not parse_address(publish).loopback:
+        endpoint = replace(endpoint, keys=str(KeyFolder(rig.keys.folder).path))
+    if endpoint.keys:
+        try:
+            name = KeyFolder(endpoint.keys).own_name()
+            KeyFolder(endpoint.keys).for_server(endpoint.computer or name)
+        except KeysError as error:
+            raise ConfigError(f"reader {reader.name}", [Problem("keys", str(error))]) from None
+        endpoint = replace(endpoint, computer=name)
+    for address in (publish, answer):
+        check_address(address, bool(endpoint.keys))
+    return replace(endpoint, publish=publish, answer=answer)
+
+
+def _address(text: str, host: str | None, port: int | None) -> str:
+    """An address with another host or port in its place, where they are given."""
+    address = parse_address(text)
+    return str(replace(address if host is None else _host(host), port=port or address.port))
+
+
+def _host(text: str) -> Address:
+    written = f"[{text}]" if ":" in text else text
+    try:
+        return parse_address(f"tcp://{written}:0")
+    except ValueError as error:
+        raise UsageError(f"--host {text}: {error}.") from None
 
 
 class _One:
@@ -107,6 +134,8 @@ class _One:
     def start(self, endpoint: Endpoint) -> None:
         """Start reading, and say where."""
         _say(f"Readings at {endpoint.publish}, missed ones at {endpoint.answer}")
+        if endpoint.keys:
+            _say(f"For the computers in {endpoint.keys}; this is {endpoint.computer!r}.")
         _say(f"Run: {self._run.path}\nCtrl-C ends it.")
         self._supervisor.start()
 

@@ -20,6 +20,7 @@ _TROUBLE = {
     "bad_reply": "reply not understood",
     "overload": "overload",
     "range": "out of range",
+    "unheard": "not heard",
 }
 
 
