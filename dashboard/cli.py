@@ -232,7 +232,9 @@ def _add_page(commands: Commands) -> None:
 def _add_keys(commands: Commands) -> None:
     more = "Needed only where readers run on other computers without an SSH tunnel."
     keys = _add(commands, "keys", "make and accept the keys of computers", more)
-    actions = keys.add_subparsers(dest="action", metavar="ACTION", required=True, title="actions")
+    actions = keys.add_subparsers(
+        dest="action", metavar="ACTION", required=True, title="actions", help="what to do"
+    )
     make = actions.add_parser("make", help="make this computer's keys; overwrites nothing")
     make.add_argument("name", metavar="NAME", help="what this computer is called in configurations")
     accept = actions.add_parser("accept", help="let another computer come in")
