@@ -13,7 +13,7 @@ from acquire.config.reader import ReaderSection
 from acquire.dialogue import Dialogue
 from acquire.errors import BadReply
 from acquire.reply import parse_fields, read_number
-from acquire.sample_clock import OutOfStep, SampleClock
+from acquire.sample_clock import OutOfStep, SampleClock, Times
 
 
 @dataclass(frozen=True)
@@ -85,7 +85,8 @@ class Blocks:
                 left = [place - skipped for place in places]
                 times = self._clock.times(left[-1] + 1 if left else 0, asked_s, answered_s)
                 self._fresh = False
-                self._since_s = max([self._since_s, *times[-1:]])
+                if times.count:
+                    self._since_s = max(self._since_s, times.at(times.count - 1))
                 return list(self._placed(samples, left, times))
             except OutOfStep as error:
                 why = f"{error}: some were lost, or came twice, or the sample period is another"
@@ -145,19 +146,19 @@ class Blocks:
         return [int(number) for number in found if number is not None]
 
     def _placed(
-        self, samples: list[Sample], places: list[int], times: list[float]
+        self, samples: list[Sample], places: list[int], times: Times
     ) -> Iterator[Taken]:
         after = -1
         for sample, place in zip(samples, places):
             if place > after + 1:
                 missing = place - after - 1
                 why = f"{missing} samples before the next were lost: the buffer ran over"
-                yield Taken(times[place - 1], "no_answer", why)
+                yield Taken(times.at(place - 1), "no_answer", why)
             after = place
             reply = parse_fields(self._section, sample)
             if not reply.in_order:
                 raise BadReply(f"in a block of {len(samples)} samples: {reply.detail}")
-            yield Taken(times[place], reply.status, reply.detail, reply.values)
+            yield Taken(times.at(place), reply.status, reply.detail, reply.values)
 
 
 def _unused(time_s: float, samples: list[Sample], why: str) -> Taken:

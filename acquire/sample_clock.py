@@ -16,6 +16,8 @@ they do not overlap, samples were lost, or came twice.
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 DRIFT = 5e-3
 """How far the instrument's clock may be off, as a share. Real ones are a hundred times better; that
 is for periods that are stated in round numbers."""
@@ -29,6 +31,19 @@ class OutOfStep(Exception):
     def __init__(self, due: float) -> None:
         super().__init__(f"about {due:.0f} were due")
         self.due = due
+
+
+@dataclass(frozen=True)
+class Times:
+    """Equally spaced times of ``count`` samples, oldest first."""
+
+    first_s: float
+    step_s: float
+    count: int
+
+    def at(self, index: int) -> float:
+        """The time of one of them."""
+        return self.first_s + index * self.step_s
 
 
 class SampleClock:
@@ -45,9 +60,9 @@ class SampleClock:
         self._low_s, self._high_s = self._interval(asked_s, answered_s)
         self._next_s = None
 
-    def times(self, count: int, asked_s: float, answered_s: float) -> list[float]:
-        """The times of the ``count`` samples that were taken since, oldest first; they follow on
-        those before, and on each other, strictly.
+    def times(self, count: int, asked_s: float, answered_s: float) -> Times:
+        """The times of the ``count`` samples that were taken since; they follow on those before,
+        and on each other, strictly.
 
         Raises OutOfStep if so many can't have been; :meth:`start` again then.
         """
@@ -61,9 +76,9 @@ class SampleClock:
             passed_s = middle - (self._low_s + self._high_s) / 2
             raise OutOfStep(max(passed_s / self.period_s, 0.0))
         self._low_s, self._high_s = low, high
-        return self._given(count, span_s) if count else []
+        return self._given(count, span_s) if count else Times(0.0, 0.0, 0)
 
-    def _given(self, count: int, span_s: float) -> list[float]:
+    def _given(self, count: int, span_s: float) -> Times:
         """Times that follow on those given before, come closer to the middle of what is possible
         without tearing neighbouring samples apart, and are possible."""
         middle = (self._low_s + self._high_s) / 2
@@ -77,7 +92,7 @@ class SampleClock:
         if not self.period_s / 4 < step_s < 4 * self.period_s:
             raise OutOfStep((middle - first) / self.period_s)
         self._next_s = following
-        return [first + index * step_s for index in range(count)]
+        return Times(first, step_s, count)
 
     def _interval(self, asked_s: float, answered_s: float) -> tuple[float, float]:
         return asked_s - self.latency_s, answered_s - self.latency_s + self.period_s

@@ -118,6 +118,11 @@ def test_mistakes_in_the_configuration_of_a_block(keys: dict[str, Any], words: s
 # ---- when its samples were taken ----
 
 
+def times_of(clock: SampleClock, count: int, asked_s: float, answered_s: float) -> list[float]:
+    times = clock.times(count, asked_s, answered_s)
+    return [times.at(index) for index in range(times.count)]
+
+
 def test_times_lie_within_a_period_and_the_quickest_exchange_of_the_truth() -> None:
     """Whatever the exchanges take and however the clocks drift; and they always go on."""
     rng = random.Random(1)
@@ -130,7 +135,7 @@ def test_times_lie_within_a_period_and_the_quickest_exchange_of_the_truth() -> N
             if number == 0:
                 clock.start(asked, asked + wait)
             else:
-                times = clock.times(due - taken, asked, asked + wait)
+                times = times_of(clock, due - taken, asked, asked + wait)
                 assert all(b > a for a, b in zip([last, *times], times))
                 errors += [t - k * true_s for k, t in enumerate(times, taken)]
                 last = times[-1]
@@ -143,7 +148,7 @@ def test_latency_moves_all_times() -> None:
     plain, late = SampleClock(0.01), SampleClock(0.01, latency_s=0.3)
     for clock in (plain, late):
         clock.start(1.0, 1.001)
-    one, two = (clock.times(20, 1.2, 1.201) for clock in (plain, late))
+    one, two = (times_of(clock, 20, 1.2, 1.201) for clock in (plain, late))
     assert [a - b for a, b in zip(one, two)] == pytest.approx([0.3] * 20)
 
 
@@ -167,7 +172,7 @@ def test_times_go_on_or_are_refused(steps: list[tuple[int, float, float]]) -> No
     for count, wait, took in steps:
         asked, now = now + wait, now + wait + took
         try:
-            times = clock.times(count, asked, now)
+            times = times_of(clock, count, asked, now)
         except OutOfStep:
             clock.start(asked, now)
             last = -math.inf
@@ -320,6 +325,24 @@ def test_a_buffer_that_ran_over_is_marked_and_shifts_nothing(when_full: str, cou
     else:
         assert status == "bad_reply"
         assert "50 samples can't be used: about" in detail
+
+
+def test_a_number_that_jumps_far_is_no_gap_that_was_real() -> None:
+    """And takes no memory for all the samples that it says are missing."""
+    lab = Lab(counter=True)
+    reader = lab.reader(fields=4, block={"counter_position": 4})
+    lab.run(reader, 1.0)
+
+    def far(data: bytes) -> bytes:
+        numbers = np.frombuffer(data, ">f8").reshape(-1, 4).copy()
+        numbers[:, 3] += 1e12
+        return numbers.astype(">f8").tobytes()
+
+    lab.spoil = [far]
+    lab.run(reader, 3.0)
+    assert "can't be used" in lab.marked()[0][1]
+    assert lab.rows[-1][2] == "ok"
+    assert max(map(abs, lab.errors())) < TOLERANCE_S
 
 
 def test_a_block_that_comes_twice_is_used_once_and_nothing_is_lost() -> None:
