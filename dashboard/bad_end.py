@@ -16,7 +16,7 @@ import os
 import sys
 import time
 from collections.abc import Callable, Iterator, Sequence
-from contextlib import ExitStack
+from contextlib import ExitStack, suppress
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -55,8 +55,23 @@ def close_if_ended_badly(
             return ""
         told = _patiently(_Closing(run, live, by, wanted).close)
     except RampsideError as error:
-        return f"{run.run_id} ended badly and was left as it is: {error}"
+        in_use = isinstance(error, JournalError) and error.reason == IN_USE
+        who = f" {_processes_of(run)}" if in_use else ""
+        return f"{run.run_id} ended badly and was left as it is: {error}{who}"
     return "" if not told else f"{run.run_id} ended badly. {' '.join(told)}"
+
+
+def _processes_of(run: RunFolder) -> str:
+    """Who still works on a run, or was stopped in it, as far as the system tells."""
+    found = []
+    for path in sorted(Path("/proc").glob("[0-9]*/cmdline")):
+        with suppress(OSError):
+            words = path.read_bytes().decode(errors="replace").split("\0")
+            if str(run.path) in words and "-m" in words:
+                what = words[words.index("-m") + 1 :]
+                name = " ".join(word for word in (what[0], *what[2:3]) if word[:2] != "--")
+                found.append(f"{path.parent.name} ({name})")
+    return f"Still there: process {', '.join(found)}." if found else ""
 
 
 def complete(run: RunFolder, live: LiveRun, within_s: float) -> bool:

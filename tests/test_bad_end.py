@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import errno
 import os
+import signal
 import subprocess
 import sys
 from collections.abc import Iterator
 from contextlib import suppress
 from dataclasses import asdict, replace
 from pathlib import Path
+from random import Random
 from typing import Any
 
 import pytest
@@ -33,6 +35,7 @@ from dashboard.earlier_runs import EarlierRuns
 from dashboard.page.feed import Feed
 from dashboard.page.list_panel import banner_panel, head_panel
 from dashboard.page.store import RunStore
+from dashboard.replay import logged_readings
 
 READERS = {reader.name: reading_table(reader.name, reader) for reader in rig().readers}
 BY = "rampside replay"
@@ -161,6 +164,24 @@ def test_never_while_one_of_its_processes_lives(
         assert crashed.codes() == []
 
 
+def test_a_process_of_it_that_was_stopped_is_named(
+    crashed: Crashed, monkeypatch: pytest.MonkeyPatch, wait_for: Any
+) -> None:
+    """It could not notice that its supervisor has gone."""
+    monkeypatch.setattr(bad_end, "LAST_PROCESSES_S", 0.0)
+    line = [sys.executable, "-m", "acquire.reader", str(crashed.run.path), "magnet"]
+    with subprocess.Popen(line, stderr=subprocess.DEVNULL) as reader:
+        try:
+            path = crashed.run.journal_path(READERS["magnet"])
+            size = path.stat().st_size
+            wait_for(lambda: path.stat().st_size > size, "it has begun", 60.0)
+            reader.send_signal(signal.SIGSTOP)
+            told = close_if_ended_badly(crashed.run, BY)
+            assert f"Still there: process {reader.pid} (acquire.reader magnet)." in told
+        finally:
+            reader.kill()
+
+
 def test_two_programs_at_once_close_it_once(
     crashed: Crashed, whole: dict[str, list[Row]]
 ) -> None:
@@ -235,6 +256,26 @@ def test_estimates_whose_readings_a_power_cut_has_taken_are_taken_back(
     assert [row[4] for row in crashed.events("note")] == ["the first", "the last"]
     cut = (crashed.run.path / "estimates.csv.cut").read_bytes()
     assert cut.count(b"\n") == lost
+
+
+@pytest.mark.parametrize("seed", [1, 2, 3])
+def test_whatever_a_power_cut_leaves_of_each_file_comes_out_whole(
+    tmp_path: Path, gone: int, whole: dict[str, list[Row]], seed: int
+) -> None:
+    """Each file ends anywhere; some have their length but not their content on disk."""
+    random = Random(seed)
+    crashed = Crashed(tmp_path, gone, whole, random.random())
+    for table in (*READERS.values(), ESTIMATES, EVENTS):
+        path = crashed.run.journal_path(table)
+        data = path.read_bytes()
+        size = random.randrange(data.index(b"\n") + 1, len(data))
+        path.write_bytes(data[:size] + bytes(random.choice([0, 0, 700])))
+    crashed.be_of_another_start()
+    close_if_ended_badly(crashed.run, BY)
+    left: dict[str, list[Row]] = {"estimates": [], "events": []}
+    for record in replay_readings(RowMaker(rig()), logged_readings(crashed.run, READERS)):
+        left[record.stream].append(record.cells)
+    crashed.assert_closed_once(left)
 
 
 def test_rows_that_come_out_otherwise_are_told_and_left(
