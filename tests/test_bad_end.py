@@ -53,8 +53,8 @@ def gone() -> int:
 def whole() -> dict[str, list[Row]]:
     """The rows without seq of both tables, as all readings make them."""
     found: dict[str, list[Row]] = {"estimates": [], "events": []}
-    for record in replay_readings(RowMaker(rig()), merge_by_time(rows())):
-        found[record.stream].append(record.cells)
+    for one in replay_readings(RowMaker(rig()), merge_by_time(rows())):
+        found[one.stream].append(one.cells)
     return found
 
 
@@ -186,9 +186,9 @@ def test_two_programs_at_once_close_it_once(
     crashed: Crashed, whole: dict[str, list[Row]]
 ) -> None:
     line = [sys.executable, "-m", "dashboard.bad_end", str(crashed.run.path)]
-    closers = [subprocess.Popen(line, stderr=subprocess.PIPE, text=True) for _ in range(3)]
+    closers = [subprocess.Popen(line, stderr=subprocess.PIPE, text=True) for _ in range(2)]
     said = [closer.communicate(timeout=60)[1] for closer in closers]
-    assert [closer.returncode for closer in closers] == [0, 0, 0]
+    assert [closer.returncode for closer in closers] == [0, 0]
     assert sum("added" in text for text in said) == 1
     crashed.assert_closed_once(whole)
 
@@ -245,8 +245,8 @@ def test_estimates_whose_readings_a_power_cut_has_taken_are_taken_back(
         with Journal(crashed.run.journal_path(READERS[name]), READERS[name]) as journal:
             journal.cut_back(len(readings))
     less: dict[str, list[Row]] = {"estimates": [], "events": []}
-    for record in replay_readings(RowMaker(rig()), merge_by_time(kept)):
-        less[record.stream].append(record.cells)
+    for one in replay_readings(RowMaker(rig()), merge_by_time(kept)):
+        less[one.stream].append(one.cells)
     lost = len(whole["estimates"]) - len(less["estimates"])
     assert lost > 0
     told = close_if_ended_badly(crashed.run, BY)
@@ -273,8 +273,8 @@ def test_whatever_a_power_cut_leaves_of_each_file_comes_out_whole(
     crashed.be_of_another_start()
     close_if_ended_badly(crashed.run, BY)
     left: dict[str, list[Row]] = {"estimates": [], "events": []}
-    for record in replay_readings(RowMaker(rig()), logged_readings(crashed.run, READERS)):
-        left[record.stream].append(record.cells)
+    for one in replay_readings(RowMaker(rig()), logged_readings(crashed.run, READERS)):
+        left[one.stream].append(one.cells)
     crashed.assert_closed_once(left)
 
 
