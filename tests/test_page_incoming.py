@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import asyncio
+import gc
+import weakref
 from typing import Any
 
 import pytest
@@ -185,3 +187,26 @@ def test_a_tab_that_stops_reading_makes_its_own_page_wait_and_nothing_grow(
             await reader
 
     apart(freeze)
+
+
+def test_of_a_page_that_was_closed_nothing_is_left(
+    store: RunStore, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(door, "UNUSED_S", 1)
+
+    async def come_and_go() -> None:
+        async with serving(store) as served:
+            opened = [await served.connect() for _ in range(2)]
+            left = [weakref.ref(page) for page in served.pages]
+            served.pages.clear()
+            for line in opened:
+                await line.close()
+            await until(lambda: not served.server.get_sessions("/"), "their sessions end")
+
+            def gone() -> bool:
+                gc.collect()
+                return all(page() is None for page in left)
+
+            await until(gone, "nothing refers to them")
+
+    apart(come_and_go)

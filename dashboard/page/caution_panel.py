@@ -34,13 +34,14 @@ def caution_panel(bar: BarFacts) -> Html:
         div("caution", div("code", f"▲ {_words(code)}"), div("text", bar.cautions[code] or "…"))
         for code in loud
     ]
+    quiet = [code for code in bar.cautions if code not in loud]
     notes = [
-        div("noted", span("code", _words(code)), span("text", f" {text or '…'}"))
-        for code, text in bar.cautions.items()
-        if code not in loud
+        div("noted", span("code", _words(code)), span("text", f" {bar.cautions[code] or '…'}"))
+        for code in quiet
     ]
-    if not loud:
-        notes.insert(0, div("none", "None that touches the answer. Also seen:"))
+    names = ", ".join(map(_words, quiet))
+    if not loud:  # all names in the first line, since there may be no room for the sentences
+        notes.insert(0, div("none", f"None that touches the answer. Also seen: {names}"))
     return div("cautions", *cards, *notes)
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from acquire.config import Rig
 from dashboard.page.html import Html, div, span
+from dashboard.page.number_panel import reasons
 from dashboard.page.store import BarFacts, RunFacts
 from dashboard.quantities import NOT_KNOWN, QUANTITIES
 from dashboard.words import duration, signed
@@ -66,7 +67,8 @@ def _awaited(bar: BarFacts, run: RunFacts) -> tuple[str, str]:
     farthest_T = float(abs(fields).max()) if fields.size else 0.0
     if field_T is not None and abs(field_T) < NEAR_FARTHEST * farthest_T:
         return f"when |B| is past {farthest_T:.2f} T", "the ramp has been at these fields already"
-    return "not in sight", "not within the planned ramp, as things are now"
+    found = reasons(curves.text("waiting_for"))
+    return "no forecast yet", f"waits: {found[0]}" if found else ""
 
 
 def _range(bar: BarFacts) -> str:

@@ -21,6 +21,7 @@ from dashboard.quantities import (
 )
 from dashboard.words import duration, signed
 
+JUST = 1.1  # times what is wanted
 GAUGE_TARGETS = 4.0
 """How many times the target the gauge reaches to either side."""
 
@@ -120,18 +121,18 @@ def _why(state: str, bar: BarFacts, run: RunFacts) -> Html:
         return div("why", "the run ended before the numbers meant anything")
     if state == "unknown":
         return div("why", "the field must move on before the numbers mean anything")
-    reasons = _reasons(bar.curves.text("waiting_for")) or ["narrowing towards the target"]
-    return div("why", *(div("reason", reason) for reason in reasons))
+    found = reasons(bar.curves.text("waiting_for")) or ["narrowing towards the target"]
+    return div("why", *(div("reason", reason) for reason in found))
 
 
-def _reasons(waiting: str) -> list[str]:
+def reasons(waiting: str) -> list[str]:
     """What is in the way, one line each; several numbers that are too wide share a line."""
-    reasons = [reason.replace(" %", "\u00a0%") for reason in waiting.split("; ") if reason]
-    wide = [reason.partition(_WIDE)[0] for reason in reasons if _WIDE in reason]
+    found = [reason.replace(" %", "\u00a0%") for reason in waiting.split("; ") if reason]
+    wide = [reason.partition(_WIDE)[0] for reason in found if _WIDE in reason]
     if len(wide) < 2:
-        return reasons
+        return found
     names = f"{', '.join(wide[:-1])} and {wide[-1]} not yet as well known as wanted"
-    return [names, *(reason for reason in reasons if _WIDE not in reason)]
+    return [names, *(reason for reason in found if _WIDE not in reason)]
 
 
 def _flags(bar: BarFacts) -> list[Html]:
@@ -184,7 +185,8 @@ def _interval(quantity: Quantity, value: float, low: float, high: float, confide
 
 def _distance(share: float, target: float) -> Html:
     met = share <= target
-    how = "✓ met" if met else f"{share / target:.2g} × too wide"
+    times = share / target
+    how = "✓ met" if met else f"{times:.2g} × too wide" if times > JUST else "just too wide"
     return div(
         "distance met" if met else "distance",
         span("now", f"± {percent(share)}"),

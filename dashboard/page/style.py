@@ -155,6 +155,7 @@ PANELS = """
 .verdict.converging { background: var(--quiet-tint); border-color: var(--number); }
 .verdict.converging svg, .verdict.converging .word { color: var(--number); }
 .verdict.unknown { border-style: dashed; border-color: var(--soft); }
+.verdict.unknown .word { font-size: min(32px, 10cqw); white-space: nowrap; }
 .verdict.unknown svg { stroke-dasharray: 5 8; color: var(--soft); }
 .flag { margin-top: 6px; font-weight: 600; color: var(--warning); }
 .flag.loud { color: var(--alarm); }
@@ -221,6 +222,10 @@ tr.warning:not(.aside) td { font-weight: 700; }
 .hold.pause .word { font-size: 18px; color: var(--good); }
 .hold.alarm { border-color: var(--alarm); background: var(--alarm); color: #fff; font-size: 17px; }
 .hold.alarm .word { font-size: 20px; }
+@media (max-width: 639px) {
+  .hold { flex-wrap: wrap; gap: 0 14px; }
+  .hold .word { white-space: normal; }
+}
 .cautionary p { margin: 8px 0 4px; overflow-wrap: anywhere; }
 .cautionary ul { margin: 0; padding-left: 18px; }
 .answer { font-weight: 600; padding: 4px 0 10px; }
