@@ -6,6 +6,7 @@ number, whatever was lost, sent twice or came late.
 
 from __future__ import annotations
 
+import re
 from dataclasses import dataclass
 
 from acquire.bus.wire import NEWEST, Answer, Message, unpack
@@ -17,6 +18,9 @@ SILENCE_S = 1.0  # after which a stream is asked whether there is anything new
 FIRST_SILENCE_S = 0.05  # the same, doubled each time, until rows come unasked: see take_answer
 PATIENCE_S = 1.0  # after which a question is held for lost
 MOST_AHEAD = 2000  # rows kept while a gap before them is filled; more are asked for again
+
+_NEVER_WRITTEN = re.compile(rb"[\x00-\x09\x0b-\x1f\x7f]|\xc2[\x80-\x9f]|\xe2\x80[\xa8\xa9]")
+"""Control characters in the lines of a journal: they are written as text (see cells)."""
 
 
 @dataclass(frozen=True)
@@ -128,6 +132,8 @@ class StreamProgress:
             self._refused += 1
             return []
         try:
+            if _NEVER_WRITTEN.search(answer.lines):
+                raise JournalError("characters that no journal has")
             rows = self._codec.rows_in(answer.lines, answer.first)
         except JournalError:
             self._refused += 1

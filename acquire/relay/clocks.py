@@ -60,5 +60,5 @@ class ClockComparison:
 
 def _at(trip: RoundTrip, now_s: float) -> Difference:
     offset_s = (trip.sent_s + trip.received_s) / 2 - trip.there_s
-    age_s = max(now_s - trip.received_s, 0.0)
+    age_s = max(now_s - trip.sent_s, 0.0)
     return Difference(offset_s, (trip.received_s - trip.sent_s) / 2 + DRIFT * age_s)

@@ -52,7 +52,7 @@ class Relaying:
         self._unnoted: deque[Row] = deque()
         self._publish_at = self._note_at = float("-inf")
         self._told_lost = False
-        self._trouble = ""
+        self._troubles: set[str] = set()  # said since a row was heard
 
     @property
     def behind(self) -> bool:
@@ -62,6 +62,7 @@ class Relaying:
     def take(self, rows: Iterable[Row]) -> None:
         """Take rows of the reader elsewhere."""
         for row in rows:
+            self._troubles.clear()
             self._unpublished.extend(self._translation.take(row))
 
     def say(self, rows: Iterable[Row]) -> None:
@@ -69,14 +70,14 @@ class Relaying:
         self._unpublished.extend(rows)
 
     def heed(self, trouble: str) -> None:
-        """Say why the reader elsewhere can't be heard, once until it is heard again.
+        """Say why the reader elsewhere can't be heard, each reason once until it is heard again.
 
         ``trouble`` is empty where nothing is known to be wrong.
         """
-        if trouble and trouble != self._trouble:
+        if trouble and trouble not in self._troubles:
+            self._troubles.add(trouble)
             self._complain(trouble)
             self.say(self._translation.unheard(trouble))
-        self._trouble = trouble
 
     def note_later(self, rows: Iterable[Row]) -> None:
         """Take settings rows of the journal, with their ``seq``, that are not noted yet."""
