@@ -205,7 +205,7 @@ def test_a_row_that_no_journal_takes_does_not_hold_up_the_others() -> None:
     desk.relaying.take([row(0, 0.0), row(1, 0.1)])
     desk.relaying.step()
     assert not desk.relaying.behind
-    assert [cells[2] for cells in desk.rows] == ["no_answer", "bad_reply", "ok"]
+    assert [cells[2] for cells in desk.rows] == ["relay", "bad_reply", "ok"]
     assert desk.rows[1][3] == "a row is too long"
 
 
@@ -316,6 +316,26 @@ def test_somebody_else_there_is_told_in_one_sentence(tmp_path: Path, what: str) 
         Publisher("far", other, journal, FREE, started_utc=HERE, now_s=lambda: 0.0) as publisher,
         FarSide(TABLE, publisher.endpoint, lambda *met: 0, time.monotonic) as far_side,
         pytest.raises(RunError, match=message),
+    ):
+        for _ in range(200):
+            far_side.receive(0.1)
+
+
+@pytest.mark.parametrize(
+    "changes", [{"run": "x" * 201}, {"started_utc": "2" * 101}, {"time_s": None}]
+)
+def test_a_run_that_no_rampside_would_make_is_refused(
+    tmp_path: Path, changes: dict[str, Any]
+) -> None:
+    given: dict[str, Any] = {"run": "far", "started_utc": HERE, "time_s": 0.0, **changes}
+    now_s = None if given["time_s"] is None else lambda: 0.0
+    with (
+        Journal(tmp_path / "a", TABLE) as journal,
+        Publisher(
+            given["run"], TABLE, journal, FREE, started_utc=given["started_utc"], now_s=now_s
+        ) as publisher,
+        FarSide(TABLE, publisher.endpoint, lambda *met: 0, time.monotonic) as far_side,
+        pytest.raises(RunError, match=r"is it started by rampside read\?"),
     ):
         for _ in range(200):
             far_side.receive(0.1)

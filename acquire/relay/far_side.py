@@ -18,6 +18,7 @@ SILENT_S = 2.0  # after which it is asked whether another run is there now
 COMPARE_EVERY_S = 2.0
 TRIP_S = 0.5  # a longer round trip would tell nothing of use
 FIRST_TRIPS, FIRST_TRIPS_S = 8, 1.5  # before the first row is taken, and how long they may take
+LONGEST_RUN, LONGEST_START = 200, 100  # characters; a row of the journal has to take them
 
 Adopt = Callable[[str, str, Difference], int]
 """Takes a run's id, its start in UTC and how far its clock is from ours, when it is first heard
@@ -143,8 +144,9 @@ class FarSide(Closing):
                 f"{where} publishes {introduction.stream!r}, not {self._table.stream!r}; "
                 "see to the addresses in its [elsewhere]."
             )
-        if introduction.time_s is None:
-            raise RunError(f"{where} does not tell its time; is it started by rampside read?")
+        named = len(introduction.run) <= LONGEST_RUN and len(introduction.started_utc) <= LONGEST_START
+        if introduction.time_s is None or not named:
+            raise RunError(f"{where} does not say what is needed; is it started by rampside read?")
         ours = [(one.name, one.kind, one.unit, one.description) for one in self._table.columns]
         if list(introduction.columns) != ours:
             different = [pair for pair in zip(introduction.columns, ours) if pair[0] != pair[1]]

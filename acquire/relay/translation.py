@@ -16,6 +16,7 @@ from collections.abc import Iterable
 from dataclasses import dataclass, replace
 from datetime import datetime
 
+from acquire.cells import LONGEST_LINE
 from acquire.errors import RunError
 from acquire.relay.clocks import Difference
 from acquire.tables import Cell, Row
@@ -189,9 +190,10 @@ def _older(row: Row | None, before: Cell) -> str | None:
     so it counts for none of those. None if there are no settings."""
     try:
         known = json.loads(str(row[DETAIL])) if row is not None else {}
-        return json.dumps({**known, "from_before_row": before}) if known else None
+        marked = json.dumps({**known, "from_before_row": before}) if known else ""
     except (ValueError, TypeError):
         return None
+    return marked if 0 < len(marked) < LONGEST_LINE // 4 else None  # what a row can take for sure
 
 
 def _moment(text: str, whose: str) -> datetime:
