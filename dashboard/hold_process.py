@@ -25,14 +25,18 @@ class Said:
 
 
 class HoldProcess:
-    """``python -m acquire.hold`` for a run. Raises OSError if it can't be started."""
+    """``python -m acquire.hold`` for a run. Raises OSError if it can't be started.
 
-    def __init__(self, run: RunFolder) -> None:
+    ``trial``: it sees whether the supply can be asked, and sends nothing.
+    """
+
+    def __init__(self, run: RunFolder, trial: bool = False) -> None:
         self._run = run
         self._lines: queue.SimpleQueue[str] = queue.SimpleQueue()
         self._finished = False
         self._words = ""
-        self._child = Child(python("acquire.hold", run.path), self._lines.put)
+        words = (run.path, "--trial") if trial else (run.path,)
+        self._child = Child(python("acquire.hold", *words), self._lines.put)
 
     @property
     def pid(self) -> int:

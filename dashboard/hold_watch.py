@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Mapping
+from contextlib import suppress
 from threading import Event
 from typing import Any
 
@@ -16,18 +17,17 @@ from acquire.bus import Inbox
 from acquire.closing import Closing
 from acquire.errors import RampsideError
 from acquire.hold.code import new_code
-from acquire.hold.command import NOT_SENT
+from acquire.hold.command import NOT_SENT, REACHED
 from acquire.hold.keeper import Answer, Keeper, Step
-from acquire.hold.words import CAUTIONS, GOOD_ENOUGH, what_is_expected, what_is_sent, what_stands
+from acquire.hold.words import GOOD_ENOUGH
 from acquire.run_folder import RunFolder
+from dashboard.hold_arming import typed_code
 from dashboard.hold_process import HoldProcess, Said
 from dashboard.progress import Progress
-from dashboard.typed_line import typed_line
 from dashboard.view import View
 
 LOOPBACK_ANY = "tcp://127.0.0.1:0"
 MOST_REQUESTS = 10  # a look
-TYPING_S = 300.0
 RING_EVERY_S, RING_FOR_S = 2.0, 30.0  # the terminal's bell, at an alarm
 
 HARMLESS = frozenset(
@@ -59,7 +59,9 @@ class HoldWatch(Closing):
         self._keeper: Keeper | None = None
         self._inbox: Inbox | None = None
         self._process: HoldProcess | None = None
-        self._good = False
+        self._trial: HoldProcess | None = None
+        self._tried = False
+        self._good = self._has_field = False
         self._trouble = ""
         self._ringing: tuple[float, float] | None = None  # next ring, last one
         if rig.hold is not None and rig.ramp is not None:
@@ -75,8 +77,8 @@ class HoldWatch(Closing):
 
     @property
     def asking(self) -> bool:
-        """Whether the process of the command is there."""
-        return self._process is not None
+        """Whether a process of ours talks to the supply."""
+        return self._process is not None or self._trial is not None
 
     @property
     def alarm(self) -> str:
@@ -96,8 +98,7 @@ class HoldWatch(Closing):
         if not arm:
             self._view.say(f"Code: {self._code} (to hold the field, which is not armed)")
             return
-        self._view.say(arming_text(self._run, self._code))
-        typed = typed_line(wish, TYPING_S)
+        typed = typed_code(self._run, self._view, self._code, wish)
         if not typed:
             self._view.say("Not armed: no code was typed. The watch goes on without.")
         elif not (answer := self._keeper.arm(typed, self._now_s())).ok:
@@ -106,6 +107,7 @@ class HoldWatch(Closing):
 
     def field(self, time_s: float, field_T: float) -> None:
         """Take a usable field reading."""
+        self._has_field = True
         if self._keeper is not None:
             self._keeper.field(time_s, field_T, self._now_s())
 
@@ -124,6 +126,7 @@ class HoldWatch(Closing):
                 self._keeper.ramp_over()
         self._note_verdicts(progress, ramp_over)
         self._answer_requests()
+        self._try()
         self._carry_out()
         self._ring()
 
@@ -136,12 +139,14 @@ class HoldWatch(Closing):
         elif self._keeper.state == "checking":
             self._keeper.remark("hold_unproven", "The watch ends before the field was seen to stand.")
         self._carry_out()
+        self._end_trial()
         if self._process is not None:
             self._process.close()
             self._carry_out()
 
     def close(self) -> None:
         """Give back the address, and the process if it still lives."""
+        self._end_trial()
         if self._process is not None:
             self._process.close()
             self._process = None
@@ -220,8 +225,36 @@ class HoldWatch(Closing):
         for step in keeper.steps():
             self._show(step)
 
+    def _try(self) -> None:
+        """Once armed and with its reader at work, see whether the supply takes another connection:
+        better now, while a person is there, than when the command is to go out."""
+        keeper = self._keeper
+        if keeper is None:
+            return
+        if keeper.state != "armed":
+            self._tried = False
+        elif not self._tried and self._has_field and not self._trouble:
+            self._tried = True
+            with suppress(OSError):
+                self._trial = HoldProcess(self._run, trial=True)
+        if self._trial is None:
+            return
+        for said in self._trial.said():
+            if said.step == REACHED:
+                keeper.remark("hold_reached", said.text)
+            else:
+                keeper.unexpected(f"the magnet supply can't be asked: {said.text}")
+        if self._trial.over:
+            self._end_trial()
+
+    def _end_trial(self) -> None:
+        if self._trial is not None:
+            self._trial.close()
+            self._trial = None
+
     def _start(self) -> None:
         assert self._keeper is not None
+        self._end_trial()
         try:
             self._process = HoldProcess(self._run)
         except (OSError, RampsideError) as error:
@@ -267,21 +300,3 @@ class HoldWatch(Closing):
             self._view.ring()
             last = self._ringing[1]
             self._ringing = (now + RING_EVERY_S, last) if now < last else None
-
-
-def arming_text(run: RunFolder, code: str) -> str:
-    """What a person reads who is about to arm it in the terminal."""
-    hold = run.rig.hold
-    assert hold is not None
-    lines = [f"- {text}" for text in CAUTIONS]
-    return "\n".join(
-        [
-            "To be armed: on stable, the magnet supply is asked once to hold the field.",
-            f"Sent:     {what_is_sent(hold)}",
-            f"Expected: {what_is_expected(hold)}",
-            f"Held if:  {what_stands(hold)}",
-            *lines,
-            f"Code: {code}",
-            "Type this code and Enter to arm it for this run, or Enter alone to go on without.",
-        ]
-    )

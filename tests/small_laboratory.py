@@ -84,11 +84,13 @@ stands_within_s = 4.0
 
 
 def write_small_laboratory(path: Path, hold: bool = False) -> Path:
-    """The configuration, on ports that are free now; with ``hold`` its supply can be held."""
+    """The configuration, on ports that are free now; with ``hold`` its supply can be held,
+    and its ramp takes 15 s."""
     lockins = [("lockin_xx", 47102, "longitudinal"), ("lockin_xy", 47103, "hall")]
     text = _RIG + "".join(
         _LOCKIN.format(name=name, port=port, measures=measures) for name, port, measures in lockins
     ).encode()
-    text += _HOLD if hold else b""
+    if hold:
+        text = text.replace(b"rate_T_per_min = 10.0", b"rate_T_per_min = 4.0") + _HOLD
     path.write_bytes(with_ports(text, dict(zip((47101, 47102, 47103), free_ports(3)))))
     return path

@@ -7,6 +7,7 @@ they is at work and fast otherwise, so that nothing here depends on how fast the
 from __future__ import annotations
 
 import json
+import os
 import re
 import threading
 import time
@@ -22,11 +23,12 @@ from acquire.bus import ask
 from acquire.closing import Closing
 from acquire.config import load
 from acquire.hold.record import SENDING, SENT, was_claimed, was_concluded
+from acquire.hold.words import CAUTIONS
 from acquire.laboratory.bench import Bench
 from acquire.laboratory.server import LaboratoryServer
 from acquire.run_folder import create_run, open_run
 from analyse.estimate_table import ESTIMATES
-from dashboard.hold_watch import HoldWatch
+from dashboard.hold_watch import HARMLESS, HoldWatch
 from dashboard.progress import Progress
 from dashboard.streams import run_tables
 
@@ -139,11 +141,15 @@ class Rig(Closing):
         """Armed in a ramp that has begun."""
         self.go(lambda: self.bench.magnet.reading_T(self.now_s) > 0.1)
         assert self.asks("arm", code=self.code)["ok"]
+        self.until("hold_reached")
+        self.go(lambda: not self.hold.asking)
         return self
 
     def asked(self) -> Rig:
-        """And stable, until the command's process has gone."""
-        self.armed().verdict("stable")
+        """Stable once it is armed, until the command's process has gone."""
+        if "hold_armed" not in self.codes:
+            self.armed()
+        self.verdict("stable")
         self.until("hold_begun")
         self.go(lambda: not self.hold.asking)
         return self
@@ -170,7 +176,7 @@ def replying(tmp_path: Path) -> Iterator[Rig]:
 def test_held(rig: Rig) -> None:
     rig.asked().until("hold_held")
     assert rig.codes == [
-        "hold_armed", "hold_begun", "hold_connected", "hold_allowed", "hold_sending",
+        "hold_armed", "hold_reached", "hold_begun", "hold_connected", "hold_allowed", "hold_sending",
         "hold_answered", "hold_held",
     ]  # fmt: skip
     assert rig.terminal.alarms == [] and rig.hold.alarm == ""
@@ -196,7 +202,7 @@ def test_held_with_a_reply(replying: Rig) -> None:
 
 
 def test_ignored(replying: Rig) -> None:
-    replying.misbehave("ignore")
+    replying.armed().misbehave("ignore")
     replying.asked()
     assert "answered 1" in replying.text("hold_trouble")
     replying.until("hold_not_held")
@@ -207,11 +213,11 @@ def test_ignored(replying: Rig) -> None:
 
 
 def test_half_dead_before_the_command(rig: Rig) -> None:
-    rig.misbehave("silence")
+    rig.armed().misbehave("silence")
     rig.asked()
     assert rig.codes[-1] == "hold_not_sent"
     assert "no reply within 300 ms" in rig.terminal.alarms[0]
-    assert "Does it take a second connection?" in rig.terminal.alarms[0]
+    assert "Does it take another connection" in rig.terminal.alarms[0]
     assert rig.heard() == 0
     assert not was_claimed(rig.run.path)
     assert not rig.asks("hold_now", code=rig.code)["ok"], "nothing more is tried"
@@ -238,6 +244,16 @@ def test_answering_late(replying: Rig) -> None:
     assert replying.terminal.alarms == []
 
 
+def test_a_supply_that_can_not_be_asked_is_told_when_it_is_armed(rig: Rig) -> None:
+    """As one does that takes a single connection, which its reader has."""
+    rig.misbehave("silence")
+    assert rig.asks("arm", code=rig.code)["ok"]
+    rig.until("hold_disarmed")
+    assert "can't be asked" in rig.terminal.alarms[0]
+    assert "Does it take another connection" in rig.terminal.alarms[0]
+    assert rig.heard() == 0
+
+
 def test_at_target_already(replying: Rig) -> None:
     replying.go(lambda: replying.bench.magnet.course.is_over(replying.now_s))
     assert replying.asks("arm", code=replying.code)["ok"]
@@ -253,7 +269,7 @@ def test_a_ramp_that_is_over_is_not_held(rig: Rig) -> None:
     rig.look()
     rig.verdict("stable")
     rig.look()
-    assert rig.codes == ["hold_armed", "hold_disarmed"]
+    assert rig.codes == ["hold_armed", "hold_reached", "hold_disarmed"]
     assert not rig.asks("arm", code=rig.code)["ok"]
     assert rig.heard() == 0
 
@@ -265,7 +281,7 @@ def test_disarmed_at_the_last_moment(rig: Rig) -> None:
     assert rig.asks("disarm")["ok"]
     assert not rig.hold.asking, "its process is gone"
     rig.go(lambda: rig.now_s > 15)
-    assert rig.codes == ["hold_armed", "hold_begun", "hold_disarmed"]
+    assert rig.codes == ["hold_armed", "hold_reached", "hold_begun", "hold_disarmed"]
     assert rig.heard() == 0
     assert not was_claimed(rig.run.path)
 
@@ -274,10 +290,10 @@ def test_disarmed_at_the_last_moment(rig: Rig) -> None:
 def test_a_caution_that_touches_the_answer_disarms(rig: Rig, caution: str) -> None:
     rig.armed().verdict("converging", "oscillations")
     rig.look()
-    assert rig.codes == ["hold_armed"]
+    assert rig.codes == ["hold_armed", "hold_reached"]
     rig.verdict("converging", f"oscillations {caution}")
     rig.look()
-    assert rig.codes == ["hold_armed", "hold_disarmed"]
+    assert rig.codes == ["hold_armed", "hold_reached", "hold_disarmed"]
     assert caution in rig.terminal.alarms[0]
     assert caution in rig.asks("arm", code=rig.code)["text"]
     rig.verdict("stable")
@@ -294,7 +310,7 @@ def test_the_estimator_dies_between_decision_and_command(rig: Rig) -> None:
     rig.look()
     rig.verdict("stable")  # started again, it says the same again
     rig.go(lambda: rig.now_s > 15)
-    assert rig.codes == ["hold_armed", "hold_begun", "hold_disarmed"]
+    assert rig.codes == ["hold_armed", "hold_reached", "hold_begun", "hold_disarmed"]
     assert rig.heard() == 0
 
 
@@ -373,6 +389,43 @@ def test_a_person_presses_hold_now(rig: Rig) -> None:
     assert "a person asked for it" in rig.text("hold_begun")
 
 
+@pytest.mark.parametrize(
+    ("typed", "state", "words"),
+    [
+        ("CODE\n", "armed", ""),
+        ("AIAI\n", "off", "this is not the code of this run"),
+        ("\n", "off", "Not armed: no code was typed."),
+        ("", "off", "Not armed: no code was typed."),
+    ],
+)
+def test_armed_in_the_terminal(
+    rig: Rig, monkeypatch: pytest.MonkeyPatch, typed: str, state: str, words: str
+) -> None:
+    reading, writing = os.pipe()
+    os.write(writing, typed.replace("CODE", rig.code).encode())
+    os.close(writing)
+    with open(reading) as keyboard:
+        monkeypatch.setattr("sys.stdin", keyboard)
+        rig.hold.begin(lambda *event: rig.events.append(event), True, threading.Event())
+    said = "\n".join([*rig.terminal.lines, *rig.terminal.alarms])
+    for caution in CAUTIONS:
+        assert caution in said
+    assert words in said
+    assert rig.asks("state")["state"] == state
+
+
+def test_nobody_waits_for_a_keyboard_when_the_watch_is_to_end(
+    rig: Rig, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    reading, writing = os.pipe()
+    wish = threading.Event()
+    wish.set()
+    with open(reading) as keyboard, open(writing, "w"):
+        monkeypatch.setattr("sys.stdin", keyboard)
+        rig.hold.begin(lambda *event: None, True, wish)
+    assert rig.terminal.lines[-1].startswith("Not armed")
+
+
 def test_not_armed_it_says_what_to_do(rig: Rig) -> None:
     rig.go(lambda: rig.now_s > 3)
     rig.verdict("stable")
@@ -390,6 +443,14 @@ def test_the_end_of_the_watch_disarms(rig: Rig) -> None:
     assert rig.codes[-1] == "hold_disarmed"
     assert not rig.hold.asking
     assert rig.heard() == 0
+
+
+def test_the_cautions_that_disarm_are_those_of_the_readme() -> None:
+    readme = (Path(__file__).parents[1] / "README.md").read_text(encoding="utf-8")
+    part = readme.split("## Cautions", 1)[1].split("\n## ", 1)[0]
+    rows = re.findall(r"^\| `(\w+)` \|.*\| ([^|]+) \|$", part, re.MULTILINE)
+    assert {code for code, touches in rows if touches == "no"} == HARMLESS
+    assert len(rows) > len(HARMLESS)
 
 
 def test_without_a_hold_section_there_is_nobody_to_ask(tmp_path: Path) -> None:

@@ -1,10 +1,10 @@
 """The process that asks the magnet supply to hold the field: once, and it can do nothing else.
 
-    python -m acquire.hold RUN_FOLDER [--parent PID]
+    python -m acquire.hold RUN_FOLDER [--trial] [--parent PID]
 
 It asks whoever watches the run whether it may, last of all before it sends; started by hand, it is
-not allowed. Each step is a line of JSON on stdout. Exit status 0: the supply answered as
-configured; 1: it did not, or nothing was sent.
+not allowed. With ``--trial`` it only sees whether the supply can be asked. Each step is a line of
+JSON on stdout. Exit status 0: the supply answered as configured; 1: it did not, or nothing was sent.
 """
 
 from __future__ import annotations
@@ -15,16 +15,16 @@ import os
 import sys
 from collections.abc import Mapping, Sequence
 from contextlib import suppress
-from pathlib import Path
 
 from acquire.bus import ask
 from acquire.child_process import Child, child_parser
 from acquire.clock import utc_now_text
+from acquire.config.hold import HoldSection
 from acquire.errors import BusError, RampsideError, RunError
 from acquire.hold import record
-from acquire.hold.command import ANSWERED, LAST, NOT_SENT, hold
+from acquire.hold.command import ANSWERED, LAST, NOT_SENT, REACHED, hold, reach
 from acquire.instrument import Instrument
-from acquire.run_folder import open_run
+from acquire.run_folder import RunFolder, open_run
 from acquire.stop import Stopped
 
 ALLOWED_WITHIN_S = 3.0
@@ -32,11 +32,16 @@ ALLOWED_WITHIN_S = 3.0
 
 def main(arguments: Sequence[str] | None = None) -> int:
     """Entry point."""
-    options = child_parser("acquire.hold", __doc__).parse_args(arguments)
+    parser = child_parser("acquire.hold", __doc__)
+    parser.add_argument("--trial", action="store_true", help="ask only who is there")
+    options = parser.parse_args(arguments)
     child = Child("hold", options.parent)
     child.stop.install()
     try:
-        return 0 if _hold(Path(options.run_folder), child) == ANSWERED else 1
+        run = open_run(options.run_folder)
+        if options.trial:
+            return 0 if _try(run, child) == REACHED else 1
+        return 0 if _hold(run, child) == ANSWERED else 1
     except Stopped:
         _say(NOT_SENT, "it was asked to end before anything was sent.")
     except RampsideError as error:
@@ -44,11 +49,18 @@ def main(arguments: Sequence[str] | None = None) -> int:
     return 1
 
 
-def _hold(folder: Path, child: Child) -> str:
-    run = open_run(folder)
-    section, live = run.rig.hold, run.live()
-    if section is None:
+def _try(run: RunFolder, child: Child) -> str:
+    return reach(Instrument(_section(run)), _say, child.stop.wait)
+
+
+def _section(run: RunFolder) -> HoldSection:
+    if run.rig.hold is None:
         raise RunError(f"{run.path}: its configuration has no [hold], so nothing was sent.")
+    return run.rig.hold
+
+
+def _hold(run: RunFolder, child: Child) -> str:
+    section, live = _section(run), run.live()
     if live is None or not live.alive or not live.hold:
         raise RunError(f"{run.path}: nobody watches this run, so nothing was sent.")
     if record.was_claimed(run.path):

@@ -14,10 +14,12 @@ from acquire.errors import InstrumentError, RunError
 from acquire.hold.words import what_is_sent
 from acquire.reply import escaped
 
-CONNECTED, SENDING, ANSWERED, TROUBLE, NOT_SENT = (
-    "connected", "sending", "answered", "trouble", "not_sent",
+CONNECTED, SENDING, ANSWERED, TROUBLE, NOT_SENT, REACHED, NOT_REACHED = (
+    "connected", "sending", "answered", "trouble", "not_sent", "reached", "not_reached",
 )  # fmt: skip
-LAST = (ANSWERED, TROUBLE, NOT_SENT)
+LAST = (ANSWERED, TROUBLE, NOT_SENT, REACHED, NOT_REACHED)
+
+HINT = "Does it take another connection beside its reader's?"
 
 Say = Callable[[str, str], None]
 
@@ -29,6 +31,19 @@ class Supply(Protocol):
     def ask(self, query: str) -> str: ...
     def tell(self, command: str) -> None: ...
     def close(self) -> None: ...
+
+
+def reach(supply: Supply, say: Say, wait: Callable[..., Any]) -> str:
+    """See whether the supply can be asked: nothing is sent but the identity query."""
+    try:
+        identity = wait(supply.open)
+    except InstrumentError as error:
+        say(NOT_REACHED, f"{_full(error)} {HINT}")
+        return NOT_REACHED
+    finally:
+        supply.close()
+    say(REACHED, f"The magnet supply can be asked: {escaped(identity)}.")
+    return REACHED
 
 
 def hold(
@@ -58,7 +73,7 @@ def hold(
                 return last(NOT_SENT, "it was not allowed any more.")
             claim({"command": section.command, "resource": section.resource, "who": identity})
         except InstrumentError as error:
-            return last(NOT_SENT, f"{_full(error)} Does it take a second connection?")
+            return last(NOT_SENT, f"{_full(error)} {HINT}")
         except RunError as error:
             return last(NOT_SENT, _full(error))
         say(SENDING, f"Sending {what_is_sent(section)}.")
