@@ -39,6 +39,13 @@ Tell = Callable[[str, str, str], None]
 """Kind, code and text of an event of the run."""
 
 
+def boot_clock() -> float:
+    """Seconds that never run backwards and, where the system has such, go on while it sleeps."""
+    if hasattr(time, "CLOCK_BOOTTIME"):
+        return time.clock_gettime(time.CLOCK_BOOTTIME)
+    return time.monotonic()
+
+
 class HoldWatch(Closing):
     """One run's holding of the field. Belongs to one thread. Raises BusError without an address.
 
@@ -50,7 +57,7 @@ class HoldWatch(Closing):
 
     def __init__(
         self, run: RunFolder, view: View, bell: bool = False,
-        clock: Callable[[], float] = time.monotonic,
+        clock: Callable[[], float] = boot_clock,
     ) -> None:  # fmt: skip
         rig = run.rig
         self._run, self._view, self._bell, self._now_s = run, view, bell, clock
@@ -64,10 +71,8 @@ class HoldWatch(Closing):
         self._good = self._has_field = False
         self._trouble = ""
         self._ringing: tuple[float, float] | None = None  # next ring, last one
-        if rig.hold is not None and rig.ramp is not None:
-            period_s = rig.reader(rig.field.reader).period_s
-            ramp = rig.ramp
-            self._keeper = Keeper(rig.hold, ramp.path_T, ramp.rate_T_per_min, period_s, self._code)
+        if rig.hold is not None:
+            self._keeper = Keeper(rig, self._code)
             self._inbox = Inbox(LOOPBACK_ANY)
 
     @property
@@ -233,7 +238,8 @@ class HoldWatch(Closing):
             return
         if keeper.state != "armed":
             self._tried = False
-        elif not self._tried and self._has_field and not self._trouble:
+            self._end_trial()
+        elif not (self._tried or self._trouble) and self._has_field:
             self._tried = True
             with suppress(OSError):
                 self._trial = HoldProcess(self._run, trial=True)

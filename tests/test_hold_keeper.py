@@ -5,12 +5,16 @@ from __future__ import annotations
 import math
 import random
 from collections.abc import Callable
+from itertools import pairwise
+from pathlib import Path
 
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from acquire.config import Rig, parse
 from acquire.config.hold import HoldSection
+from acquire.config.rig import RampSection
 from acquire.hold.code import LENGTH, LETTERS, is_code, new_code
 from acquire.hold.course import Course
 from acquire.hold.keeper import MOST_WRONG_CODES, Keeper, Step
@@ -18,6 +22,13 @@ from acquire.hold.standing import Standing
 
 CODE = "QRST"
 RATE_T_PER_S = 0.02
+
+
+def rig(**keys: object) -> Rig:
+    """The demo's, with a ramp from 0 to 2 T and back at 1.2 T/min, and this [hold]."""
+    found = parse((Path(__file__).parents[1] / "configs" / "demo.toml").read_bytes())
+    ramp = RampSection(path_T=(0.0, 2.0, 0.0), rate_T_per_min=60 * RATE_T_PER_S)
+    return found.model_copy(update={"ramp": ramp, "hold": section(**keys)})
 
 
 def section(**keys: object) -> HoldSection:
@@ -39,7 +50,7 @@ class Run:
     """A keeper and a field that ramps until it is held; 0.1 s a step."""
 
     def __init__(self, **keys: object) -> None:
-        self.keeper = Keeper(section(**keys), (0.0, 2.0, 0.0), 60 * RATE_T_PER_S, 0.1, CODE)
+        self.keeper = Keeper(rig(**keys), CODE)
         self.now_s, self.field_T, self.rate_T_per_s = 0.0, 0.0, RATE_T_PER_S
         self.happened: list[Step] = []
 
@@ -367,7 +378,7 @@ def ramp(*corners: float) -> list[float]:
     """Readings every 5 mT along these fields, with noise."""
     chance = random.Random(3)
     fields = []
-    for a, b in zip(corners, corners[1:]):
+    for a, b in pairwise(corners):
         count = max(1, round(abs(b - a) / 5e-3))
         fields += [a + (b - a) * i / count + chance.gauss(0, 1e-3) for i in range(count)]
     return fields

@@ -13,6 +13,7 @@ import pytest
 from bokeh.document import Document
 from made_run import MadeRun, config, estimates, ramp
 from playwright.sync_api import Browser, expect
+from scripted_instrument import ScriptedInstrument
 from test_hold_watch import Terminal
 from test_page import SCRIPT, opened, served
 
@@ -83,8 +84,12 @@ class Watching(Closing):
 def test_from_the_button_to_the_alarm(
     browser: Browser, tmp_path: Path, wait_for: Callable[..., None]
 ) -> None:
-    """There is no supply: so the command can't be sent, which has to be loud on the page, too."""
-    with MadeRun(tmp_path, more=HOLD) as made, Watching(made) as watching:
+    """The supply is gone when the command is due, which has to be loud on the page, too."""
+    with (
+        ScriptedInstrument({"*IDN?": "MAKER,SUPPLY,7,1"}, "\r\n", "\r\n") as supply,
+        MadeRun(tmp_path, more=HOLD.replace("::1::", f"::{supply.port}::")) as made,
+        Watching(made) as watching,
+    ):
         made.estimate(*estimates(ramp(1.0, 20)))
         with served(made.path) as process, opened(browser, process.address()) as seen:
             strip, box = seen.section("hold"), seen.section("hold_box")
@@ -93,7 +98,7 @@ def test_from_the_button_to_the_alarm(
             expect(first).to_be_hidden()
             strip.get_by_role("button", name="Hold the field").click()
             expect(first).to_be_visible()
-            for text in (*CAUTIONS, '"PAUSE\\r\\n" to TCPIP::127.0.0.1::1::SOCKET', "no reply"):
+            for text in (*CAUTIONS, f'"PAUSE\\r\\n" to {supply.resource}', "no reply"):
                 expect(box).to_contain_text(text)
             arm = box.get_by_role("button", name="Arm", exact=True)
             arm.click()
@@ -111,6 +116,8 @@ def test_from_the_button_to_the_alarm(
             expect(strip).to_contain_text("Disarmed, and nothing was sent: disarmed by a person")
             arm.click()
             expect(strip).to_contain_text("Holding the field: armed")
+            wait_for(lambda: watching.events[-1][1] == "hold_reached", "the trial")
+            supply.refuse()
             box.get_by_role("button", name="Hold now").click()
             expect(strip).to_contain_text("ALARM")
             expect(strip).to_contain_text("THE COMMAND WAS NOT SENT")

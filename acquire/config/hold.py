@@ -103,14 +103,17 @@ def _too_loose(hold: dict[str, Any], raw: dict[str, Any]) -> list[Problem]:
 
 def _too_few_readings(hold: dict[str, Any], raw: dict[str, Any]) -> list[Problem]:
     for_s, field = _number(hold, "standing_for_s", 3.0), raw.get("field")
-    wanted = field.get("reader") if isinstance(field, dict) else None
-    for reader in _tables(raw.get("readers")):
-        period_s = _number(reader, "period_s", 0.2)
-        if wanted is not None and reader.get("name") == wanted and period_s and for_s:
-            if for_s < LEAST_READINGS * period_s:
-                rule = f"must hold {LEAST_READINGS} field readings: {LEAST_READINGS * period_s:g} s"
-                return [Problem("hold.standing_for_s", rule, f"{for_s:g}")]
-    return []
+    name = field.get("reader") if isinstance(field, dict) else None
+    periods = [
+        _number(reader, "period_s", 0.2)
+        for reader in _tables(raw.get("readers"))
+        if name is not None and reader.get("name") == name
+    ]
+    needed_s = LEAST_READINGS * max((period or 0.0 for period in periods), default=0.0)
+    if for_s is None or for_s >= needed_s:
+        return []
+    rule = f"must hold {LEAST_READINGS} field readings: {needed_s:g} s"
+    return [Problem("hold.standing_for_s", rule, f"{for_s:g}")]
 
 
 def _shared(hold: dict[str, Any], raw: dict[str, Any]) -> list[Problem]:

@@ -11,11 +11,10 @@ that never runs backwards, in seconds, and the same for all methods.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Literal
 
-from acquire.config.hold import HoldSection
+from acquire.config import Rig
 from acquire.hold.code import is_code
 from acquire.hold.course import Course
 from acquire.hold.standing import Standing
@@ -51,25 +50,22 @@ class Keeper:
 
     Parameters
     ----------
-    path_T, rate_T_per_min
-        The planned ramp.
-    field_period_s
-        How often a field reading is due.
+    rig
+        With a [hold], and so with a [ramp] and readers.
     code
         The run's code.
     """
 
-    def __init__(
-        self, section: HoldSection, path_T: Sequence[float], rate_T_per_min: float,
-        field_period_s: float, code: str,
-    ) -> None:  # fmt: skip
+    def __init__(self, rig: Rig, code: str) -> None:
         self.state: State = "off"
         self.told = "Not armed: nothing will be sent to the magnet supply."
-        self._section, self._path_T, self._code = section, tuple(path_T), code
-        self._silence_s = max(LEAST_SILENCE_S, SILENT_PERIODS * field_period_s)
-        self._travel_T = 2 * rate_T_per_min / 60 * section.stands_within_s
+        assert rig.hold is not None and rig.ramp is not None
+        self._section, self._path_T, self._code = rig.hold, rig.ramp.path_T, code
+        period_s = rig.reader(rig.field.reader).period_s
+        self._silence_s = max(LEAST_SILENCE_S, SILENT_PERIODS * period_s)
+        self._travel_T = 2 * rig.ramp.rate_T_per_min / 60 * self._section.stands_within_s
         self._steps: list[Step] = []
-        self._course = Course(path_T)
+        self._course = Course(self._path_T)
         self._standing: Standing | None = None
         self._wrong_codes = 0
         self._looked_s: float | None = None
@@ -262,8 +258,8 @@ class Keeper:
         return "" if self._field_T is None else f" at {self._field_T:+.4f} T"
 
     def _off(self, why: str, loud: bool = False) -> None:
-        text = f"Disarmed, and nothing was sent: {why}."
-        self._go("off", "hold_disarmed", text, loud)
+        end = "" if why.endswith((".", "?")) else "."
+        self._go("off", "hold_disarmed", f"Disarmed, and nothing was sent: {why}{end}", loud)
 
     def _alarm(self, code: str, text: str) -> None:
         self._go("alarm", code, text, loud=True)

@@ -45,12 +45,14 @@ class HoldPanel:
         ]
         for button, do in zip(buttons, ("arm", "hold_now", "disarm")):
             button.on_click(lambda event, do=do: self._ask_for(do))
-        self._box = Column(
-            self._cautions, Row(self._code, *buttons), self._answer, name="hold_box", visible=False
-        )
+        typing = Row(children=[self._code, *buttons])
+        parts = [self._cautions, typing, self._answer]
+        self._box = Column(children=parts, name="hold_box", visible=False)
         self._open.on_change("active", self._show_box)
-        self._row = Row(self._strip, self._open, name="hold", sizing_mode="stretch_width",
-                        visible=False)  # fmt: skip
+        self._row = Row(
+            children=[self._strip, self._open], name="hold", sizing_mode="stretch_width",
+            visible=False,
+        )  # fmt: skip
 
     @property
     def roots(self) -> tuple[UIElement, ...]:
@@ -127,4 +129,4 @@ def _text(name: str, sheet: InlineStyleSheet, text: Html = NOTHING) -> Div:
 
 
 def _button(name: str, label: str, kind: str) -> Button:
-    return Button(name=name, label=label, button_type=kind, width=90)  # type: ignore[arg-type]
+    return Button(name=name, label=label, button_type=kind, width=90)
