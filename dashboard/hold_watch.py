@@ -9,7 +9,6 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Mapping
-from contextlib import suppress
 from threading import Event
 from typing import Any
 
@@ -23,6 +22,7 @@ from acquire.hold.words import GOOD_ENOUGH
 from acquire.run_folder import RunFolder
 from dashboard.hold_arming import typed_code
 from dashboard.hold_process import HoldProcess, Said
+from dashboard.hold_trial import HoldTrial
 from dashboard.progress import Progress
 from dashboard.view import View
 
@@ -66,8 +66,7 @@ class HoldWatch(Closing):
         self._keeper: Keeper | None = None
         self._inbox: Inbox | None = None
         self._process: HoldProcess | None = None
-        self._trial: HoldProcess | None = None
-        self._tried = False
+        self._trial = HoldTrial(run)
         self._good = self._has_field = False
         self._trouble = ""
         self._ringing: tuple[float, float] | None = None  # next ring, last one
@@ -83,7 +82,7 @@ class HoldWatch(Closing):
     @property
     def asking(self) -> bool:
         """Whether a process of ours talks to the supply."""
-        return self._process is not None or self._trial is not None
+        return self._process is not None or self._trial.goes_on
 
     @property
     def alarm(self) -> str:
@@ -144,14 +143,14 @@ class HoldWatch(Closing):
         elif self._keeper.state == "checking":
             self._keeper.remark("hold_unproven", "The watch ends before the field was seen to stand.")
         self._carry_out()
-        self._end_trial()
+        self._trial.close()
         if self._process is not None:
             self._process.close()
             self._carry_out()
 
     def close(self) -> None:
         """Give back the address, and the process if it still lives."""
-        self._end_trial()
+        self._trial.close()
         if self._process is not None:
             self._process.close()
             self._process = None
@@ -178,6 +177,8 @@ class HoldWatch(Closing):
                 self._view.say(GOOD_ENOUGH)
                 if self._bell:
                     self._view.ring()
+        elif self._good and not good and self._keeper is not None:
+            self._keeper.not_good_enough()
         self._good = good
 
     def _answer_requests(self) -> None:
@@ -231,36 +232,18 @@ class HoldWatch(Closing):
             self._show(step)
 
     def _try(self) -> None:
-        """Once armed and with its reader at work, see whether the supply takes another connection:
-        better now, while a person is there, than when the command is to go out."""
         keeper = self._keeper
         if keeper is None:
             return
-        if keeper.state != "armed":
-            self._tried = False
-            self._end_trial()
-        elif not (self._tried or self._trouble) and self._has_field:
-            self._tried = True
-            with suppress(OSError):
-                self._trial = HoldProcess(self._run, trial=True)
-        if self._trial is None:
-            return
-        for said in self._trial.said():
+        for said in self._trial.look(keeper.state, self._has_field and not self._trouble):
             if said.step == REACHED:
                 keeper.remark("hold_reached", said.text)
             else:
                 keeper.unexpected(f"the magnet supply can't be asked: {said.text}")
-        if self._trial.over:
-            self._end_trial()
-
-    def _end_trial(self) -> None:
-        if self._trial is not None:
-            self._trial.close()
-            self._trial = None
 
     def _start(self) -> None:
         assert self._keeper is not None
-        self._end_trial()
+        self._trial.close()
         try:
             self._process = HoldProcess(self._run)
         except (OSError, RampsideError) as error:
@@ -268,14 +251,15 @@ class HoldWatch(Closing):
 
     def _hear_process(self) -> None:
         assert self._keeper is not None and self._process is not None
-        if self._keeper.state == "off":  # it had not been allowed to send anything, and never will
+        called_off = self._keeper.state in ("off", "armed")
+        if called_off:  # it had not been allowed to send anything, and never will
             self._process.kill()
         else:
             for said in self._process.said():
                 self._hear(said)
             if self._keeper.overdue(self._now_s()):
                 self._process.kill()
-        if self._keeper.state == "off" or self._process.over:
+        if called_off or self._process.over:
             self._process.close()
             self._process = None
 

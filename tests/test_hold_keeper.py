@@ -178,6 +178,21 @@ def test_disarmed_at_the_last_moment() -> None:
     assert again.keeper.state == "checking"
 
 
+def test_stable_no_more_before_it_was_sent() -> None:
+    run = Run().armed()
+    run.keeper.good_enough(run.now_s)
+    run.keeper.not_good_enough()
+    assert run.keeper.state == "armed" and not run.keeper.may_send(run.now_s)
+    run.keeper.good_enough(run.now_s)
+    assert run.keeper.may_send(run.now_s)
+    run.keeper.not_good_enough()
+    assert run.keeper.state == "checking"
+    asked = Run().armed()
+    assert asked.keeper.hold_now(CODE, asked.now_s).ok
+    asked.keeper.not_good_enough()
+    assert asked.keeper.state == "begun", "a person wants it all the same"
+
+
 def test_it_may_go_out_once() -> None:
     run = Run().asked()
     assert not run.keeper.may_send(run.now_s)

@@ -286,6 +286,17 @@ def test_disarmed_at_the_last_moment(rig: Rig) -> None:
     assert not was_claimed(rig.run.path)
 
 
+def test_stable_no_more_before_it_was_sent(rig: Rig) -> None:
+    rig.armed().verdict("stable")
+    rig.look()
+    rig.verdict("converging")
+    rig.look()
+    assert not rig.hold.asking and rig.heard() == 0
+    rig.verdict("stable")
+    rig.until("hold_held")
+    assert rig.codes.count("hold_begun") == 2 and rig.heard() == 1
+
+
 @pytest.mark.parametrize("caution", ["overload", "field_stuck", "current_sag"])
 def test_a_caution_that_touches_the_answer_disarms(rig: Rig, caution: str) -> None:
     rig.armed().verdict("converging", "oscillations")

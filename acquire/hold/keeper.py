@@ -73,7 +73,7 @@ class Keeper:
         self._deadline_s = float("inf")
         self._field_T: float | None = None
         self._asked_at_T: float | None = None
-        self._ramp_is_over = False
+        self._ramp_is_over = self._for_stable = False
 
     def steps(self) -> list[Step]:
         """What happened since this was called last."""
@@ -125,7 +125,13 @@ class Keeper:
         """All Hall bars have become stable."""
         self.look(now_s)
         if self.state == "armed":
-            self._begin(now_s, "the answer is stable")
+            self._begin(now_s, "the answer is stable", for_stable=True)
+
+    def not_good_enough(self) -> None:
+        """They are stable no more."""
+        if self.state == "begun" and self._for_stable:
+            self._go("armed", "hold_waits", "The answer is stable no more: nothing was sent, and it "
+                     "stays armed.")  # fmt: skip
 
     def ramp_over(self) -> None:
         """The field has come to rest at the end of the planned ramp."""
@@ -229,8 +235,8 @@ class Keeper:
         since_s = now_s - max(self._field_s, self._armed_s)
         return f"no usable field reading for {since_s:.1f} s" if since_s > self._silence_s else None
 
-    def _begin(self, now_s: float, why: str) -> None:
-        self._begun_s = now_s
+    def _begin(self, now_s: float, why: str, for_stable: bool = False) -> None:
+        self._begun_s, self._for_stable = now_s, for_stable
         self._go("begun", "hold_begun", f"About to ask the magnet supply to hold the field: {why}.")
 
     def _stands(self) -> None:
