@@ -205,18 +205,18 @@ class HoldWatch(Closing):
             case "state":
                 answer = Answer(True, "")
             case "may_send":
-                answer = Answer(self._may_send(message.get("pid"), now_s), "")
+                answer = Answer(self._may_send(message, now_s), "")
             case _:
                 answer = Answer(False, "unknown request")
         return {"ok": answer.ok, "text": answer.text, "state": keeper.state, "told": keeper.told,
                 "good": self._good}  # fmt: skip
 
-    def _may_send(self, pid: object, now_s: float) -> bool:
+    def _may_send(self, message: dict[str, Any], now_s: float) -> bool:
         """Whether the process that we have started may send; nobody else ever may."""
         assert self._keeper is not None
-        if self._process is None or pid != self._process.pid:
+        if self._process is None or message.get("pid") != self._process.pid:
             return False
-        self._carry_out()  # what it has told before it asked
+        self._keeper.remark("hold_connected", str(message.get("told")))
         return self._keeper.may_send(now_s)
 
     def _carry_out(self) -> None:

@@ -60,7 +60,8 @@ class Told:
     def close(self) -> None:
         self.done.append("close")
 
-    def may_send(self) -> bool:
+    def may_send(self, told: str) -> bool:
+        assert IDENTITY in told
         self.done.append("may_send")
         return self._allowed
 
@@ -86,8 +87,8 @@ def test_it_is_written_down_before_it_is_sent_and_sent_once() -> None:
     told = Told(IDENTITY, "", IDENTITY)
     assert told.run() == "answered"
     assert told.done == ["open", "may_send", "claim", "PAUSE", "*IDN?", "close"]
-    assert [step for step, _ in told.said] == ["connected", "sending", "answered"]
-    assert told.said[1][1] == r'Sending "PAUSE\n" to TCPIP::127.0.0.1::1::SOCKET.'
+    assert [step for step, _ in told.said] == ["sending", "answered"]
+    assert told.said[0][1] == r'Sending "PAUSE\n" to TCPIP::127.0.0.1::1::SOCKET.'
 
 
 def test_with_a_reply() -> None:

@@ -66,8 +66,8 @@ def _hold(run: RunFolder, child: Child) -> str:
     if record.was_claimed(run.path):
         raise RunError(f"{run.path}: the command goes out once in a run; nothing was sent again.")
 
-    def may_send() -> bool:
-        message = {"kind": "hold", "do": "may_send", "pid": os.getpid()}
+    def may_send(told: str) -> bool:
+        message = {"kind": "hold", "do": "may_send", "pid": os.getpid(), "told": told}
         try:
             allowed = ask(live.hold, message, ALLOWED_WITHIN_S).get("ok") is True
         except BusError:

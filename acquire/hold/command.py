@@ -14,8 +14,8 @@ from acquire.errors import InstrumentError, RunError
 from acquire.hold.words import what_is_sent
 from acquire.reply import escaped
 
-CONNECTED, SENDING, ANSWERED, TROUBLE, NOT_SENT, REACHED, NOT_REACHED = (
-    "connected", "sending", "answered", "trouble", "not_sent", "reached", "not_reached",
+SENDING, ANSWERED, TROUBLE, NOT_SENT, REACHED, NOT_REACHED = (
+    "sending", "answered", "trouble", "not_sent", "reached", "not_reached",
 )  # fmt: skip
 LAST = (ANSWERED, TROUBLE, NOT_SENT, REACHED, NOT_REACHED)
 
@@ -49,16 +49,17 @@ def reach(supply: Supply, say: Say, wait: Callable[..., Any]) -> str:
 def hold(
     section: HoldSection,
     supply: Supply,
-    may_send: Callable[[], bool],
+    may_send: Callable[[str], bool],
     claim: Callable[[Mapping[str, object]], None],
     say: Say,
     wait: Callable[..., Any] = lambda call, *args: call(*args),
 ) -> str:
     """Ask the supply once to hold the field; returns the last step.
 
-    Nothing is sent but the identity query unless ``may_send`` says yes and ``claim`` (see
-    :func:`acquire.hold.record.claim`) returns. ``wait`` makes the call that can be broken off
-    (see :class:`acquire.stop.Stop`); what comes after the claim can't. Raises no error of ours.
+    Nothing is sent but the identity query unless ``may_send``, told who is there, says yes and
+    ``claim`` (see :func:`acquire.hold.record.claim`) returns. ``wait`` makes the call that can be
+    broken off (see :class:`acquire.stop.Stop`); what comes after the claim can't. Raises no error
+    of ours.
     """
 
     def last(step: str, text: str) -> str:
@@ -68,8 +69,7 @@ def hold(
     try:
         try:
             identity = wait(supply.open)
-            say(CONNECTED, f"The magnet supply is there: {escaped(identity)}.")
-            if not may_send():
+            if not may_send(f"The magnet supply is there: {escaped(identity)}."):
                 return last(NOT_SENT, "it was not allowed any more.")
             claim({"command": section.command, "resource": section.resource, "who": identity})
         except InstrumentError as error:
