@@ -580,7 +580,17 @@ ELSEWHERE: dict[tuple[str, str], str] = {
         "test_bus::test_malformed_frames_are_counted_and_do_no_harm"
     ),
     ("an address off loopback", "bus"): (
-        "test_bus::test_an_address_that_is_not_on_loopback_is_refused"
+        "test_bus_keys::test_nothing_is_bound_beyond_loopback_without_keys"
+    ),
+    ("wrong key", "bus"): (
+        "test_bus_keys::test_who_is_refused_hears_nothing_and_both_sides_say_why"
+    ),
+    ("no key", "bus"): "test_bus_keys::test_who_has_no_keys_is_refused_and_told",
+    ("revoked key", "bus"): (
+        "test_bus_keys::test_a_key_that_is_taken_away_cuts_the_connection_and_no_other"
+    ),
+    ("authenticator killed", "bus"): (
+        "test_bus_keys::test_the_bus_stays_closed_whatever_the_gate_does"
     ),
     ("SIGKILL + restart", "estimator"): "test_service::test_a_killed_process_loses_nothing",
     ("messages in any order", "estimator"): (
@@ -590,8 +600,15 @@ ELSEWHERE: dict[tuple[str, str], str] = {
         "test_relay::test_whoever_is_killed_no_row_is_lost_or_doubled"
     ),
     ("disk full", "relay"): "test_relay::test_a_full_disk_delays_rows_and_loses_none",
-    ("many GETs", "page"): "test_page_door::test_there_is_a_limit_to_open_pages",
-    ("a browser's value out of range", "page"): (
+    ("200 GETs", "page"): (
+        "test_page_incoming::test_two_hundred_requests_make_no_more_pages_than_are_allowed"
+    ),
+    ("frozen tab", "page"): (
+        "test_page_incoming::"
+        "test_a_tab_that_stops_reading_makes_its_own_page_wait_and_nothing_grow"
+    ),
+    ("slider out of range", "page"): "test_page_incoming::test_nothing_else_is_taken",
+    ("a Hall bar that is not there", "page"): (
         "test_page_panels::test_a_browser_can_choose_no_hall_bar_that_is_not_there"
     ),
     ("a stream that stops", "page"): (
