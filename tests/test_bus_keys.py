@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import socket as sockets
 import threading
 from collections.abc import Callable, Iterator
-from contextlib import ExitStack, contextmanager
+from contextlib import ExitStack, contextmanager, suppress
 from dataclasses import replace
 from pathlib import Path
+from random import Random
 
 import pytest
 import zmq
@@ -151,6 +153,26 @@ def test_who_has_no_keys_is_refused_and_told(
             wait_for(lambda: listener.receive(0.05) or told)
             assert "it uses no keys" in told[0]
             assert listener.health()["a"].last_heard_monotonic is None
+
+
+def test_whoever_speaks_nonsense_does_no_harm(
+    tmp_path: Path, server: KeyFolder, client: KeyFolder, wait_for: Wait
+) -> None:
+    """Scanners of ports, other protocols, greetings of ZeroMQ that break off or go on as they like."""
+    random, told = Random(1), []
+    greeting = b"\xff" + bytes(8) + b"\x7f\x03\x00CURVE" + bytes(48)
+    with publishing(server, tmp_path, told) as publisher, listening(client, publisher) as listener:
+        wait_for(lambda: len(listener.receive(0.1)) == 2)
+        for number in range(100):
+            said = random.choice([greeting[: random.randrange(64)], greeting, b"GET / HTTP/1.1\r\n"])
+            where = (publisher.endpoint.publish, publisher.endpoint.answer)[number % 2]
+            port = int(where.rpartition(":")[2])
+            with suppress(OSError), sockets.create_connection(("127.0.0.1", port)) as caller:
+                caller.sendall(said + random.randbytes(random.choice([0, 1, 200, 5000])))
+        publisher.publish(3, "", 3)
+        wait_for(lambda: listener.receive(0.1))
+        assert listener.health()["a"].refused == publisher.refused == 0
+    assert len(told) < 10
 
 
 def test_a_server_without_keys_is_not_trusted(

@@ -88,6 +88,21 @@ def test_the_clock_of_another_computer_is_not_compared_with_ours() -> None:
     assert presence.line(12.0).age_s == pytest.approx(2.0)
 
 
+def test_a_reader_elsewhere_that_is_not_heard_says_why_and_its_clock_is_shown() -> None:
+    presence = Presence("a", 0.2, own_clock=True)
+    words = "listens to run ...; its 0 s are 2.5 s here, to within 0.00015 s"
+    presence.take_reading(reading(1.0, "relay", words, None), 1.0)
+    presence.take_reading(reading(1.0), 1.0)
+    assert presence.line(1.5).note == "its clock is known to within 0.15 ms"
+    presence.take_reading(reading(1.0, "unheard", "'cryostat' refused our key", None), 2.0)
+    for now_s in (2.0, 200.0):
+        line = presence.line(now_s)
+        assert (line.level, line.state) == ("warning", "not heard")
+        assert line.note == "'cryostat' refused our key"
+    presence.take_reading(reading(201.0), 201.0)
+    assert state(presence, 201.0) == ("good", "running")
+
+
 def test_a_publisher_that_has_nothing_new_still_lives() -> None:
     presence = Presence("events", 0.2)
     presence.take((0, 1.0), 1.0)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from dataclasses import dataclass
 from typing import Literal
 
@@ -22,6 +23,9 @@ _TROUBLE = {
     "range": "out of range",
     "unheard": "not heard",
 }
+
+
+_CLOCK = re.compile(r"to within ([0-9.e-]+) s")
 
 
 @dataclass(frozen=True)
@@ -58,6 +62,7 @@ class Presence:
         self._usable_s: float | None = None
         self._any_s: float | None = None
         self._trouble = self._note = ""
+        self._clock = ""  # of a reader elsewhere: how well it is known
 
     def take(self, row: Row, now_s: float | None) -> None:
         """Take a row of estimates or events, or one that only shows that the stream lives."""
@@ -77,6 +82,9 @@ class Presence:
             self._usable_s = usable_s
         if reading.status in _TROUBLE:
             self._trouble, self._note = _TROUBLE[reading.status], reading.detail
+        known = _CLOCK.search(reading.detail) if reading.status == "relay" else None
+        if known is not None:
+            self._clock = f"its clock is known to within {1e3 * float(known[1]):.2g} ms"
 
     def heard(self, time_s: float) -> None:
         """Its publisher has proved that it lives, though it has nothing new to say."""
@@ -88,7 +96,8 @@ class Presence:
         age_s = None
         if now_s is not None and self._usable_s is not None and level != "ended":
             age_s = max(now_s - self._usable_s, 0.0)
-        return StreamLine(self.name, level, state, age_s, self.rows, self.identity, self._note)
+        note = self._note or self._clock
+        return StreamLine(self.name, level, state, age_s, self.rows, self.identity, note)
 
     def _state(self, now_s: float | None) -> tuple[Level, str]:
         if now_s is None or self.ended:
@@ -98,6 +107,8 @@ class Presence:
         if self._any_s is None:
             late = now_s > max(self.silence_s, FIRST_ROW_S)
             return ("warning" if late else "waiting"), "nothing yet"
+        if self._trouble == _TROUBLE["unheard"]:
+            return "warning", self._trouble  # which is why nothing comes
         if now_s - self._any_s > self.silence_s:
             return "warning", "stopped"
         if self._trouble:
