@@ -133,11 +133,26 @@ class RunFolder:
             raise RunError(f"{self.path}: was not created here, so monotonic_start is needed.")
         pid = os.getpid() if pid is None else pid
         about = self.run_id, pid, start, self.started_utc, dict(endpoints), requests
-        content = asdict(live := LiveRun(*about, boot_id(), hold))
-        if not hold:
-            del content["hold"]
-        self._write("live.json", content)
+        live = LiveRun(*about, boot_id(), hold)
+        self._write_live(live)
         return live
+
+    def keep_live(self, live: LiveRun) -> None:
+        """Put ``live.json`` back if it is gone: without it no process could be started again.
+
+        Raises RunError if it can't be written.
+        """
+        if not (self.path / "live.json").exists():
+            self._write_live(live)
+
+    def _write_live(self, live: LiveRun) -> None:
+        """What is empty is left out."""
+        content = asdict(live)
+        if not live.hold:
+            del content["hold"]
+        for stream, endpoint in content["endpoints"].items():
+            content["endpoints"][stream] = {key: one for key, one in endpoint.items() if one}
+        self._write("live.json", content)
 
     def end_live(self) -> None:
         """Say that the run has ended in order. Raises RunError."""
@@ -169,7 +184,8 @@ class RunFolder:
         try:
             with open(self.path / "config.toml", "rb") as lock:  # a file that is never replaced
                 fcntl.flock(lock, fcntl.LOCK_EX)
-                self._write("instruments.json", _with(self.instruments(), dict(entry)))
+                before = self.instruments() if (self.path / "instruments.json").exists() else []
+                self._write("instruments.json", _with(before, dict(entry)))
         except OSError as error:
             raise _run_error(self.path / "instruments.json", "can't be locked", error) from None
 

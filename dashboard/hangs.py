@@ -29,6 +29,7 @@ class Hangs:
             stream_of(one.name): (roles.reader_role(one), HUNG_S + 2 * one.period_s) for one in here
         }
         self._since = dict.fromkeys((*self._readers, ESTIMATES.stream), now)
+        self._looked = now
 
     def news(self, stream: str, now: float) -> None:
         """A row of the stream has come."""
@@ -36,6 +37,9 @@ class Hangs:
 
     def look(self, health: Mapping[str, StreamHealth], now: float) -> list[tuple[str, str]]:
         """Who hangs, by role, and why that is concluded; told once, and again a minute later."""
+        late_s, self._looked = now - self._looked, now
+        if late_s > ANSWERS_S:  # it is we who were frozen, and could hear nobody
+            self._since = {stream: since + late_s for stream, since in self._since.items()}
         for stream, one in health.items():
             heard = one.last_heard_monotonic or float("-inf")
             if stream == ESTIMATES.stream or (one.trouble and now - heard < ANSWERS_S):

@@ -4,13 +4,14 @@ from __future__ import annotations
 
 import time
 import uuid
+from contextlib import suppress
 from dataclasses import dataclass
 from pathlib import Path
 from threading import Event
 
 from acquire.bus import Endpoint, Subscriber, ask, free_endpoints
 from acquire.config import Rig
-from acquire.errors import BusError, UsageError
+from acquire.errors import BusError, RunError, UsageError
 from acquire.run_folder import LiveRun, RunFolder, create_run
 from analyse.estimate_table import ESTIMATES, EVENTS
 from dashboard import roles
@@ -141,6 +142,8 @@ class _Watcher:
             if time.monotonic() - shown >= SHOW_S:
                 shown = time.monotonic()
                 self._view.show(self.progress, self._moment())
+                with suppress(RunError):  # the whole folder is gone: that is told by who writes there
+                    self._run.keep_live(self._live)
 
     def _start_laboratory(self, wish: Event) -> None:
         """Have the instruments there before anybody asks them; go on without if they don't come."""

@@ -321,3 +321,15 @@ def test_a_start_of_the_machine_since_then_is_known_by_its_name(run):
     assert again.machine_restarted
     assert not again.alive
     assert replace(live, boot="").alive, "written before it was named"
+
+
+def test_what_was_deleted_while_the_run_goes_on_is_there_again(run):
+    live = run.write_live(ENDPOINTS, "tcp://127.0.0.1:20010")
+    run.keep_live(replace(live, requests="another"))
+    assert run.live() == live, "only if it is gone"
+    (run.path / "live.json").unlink()
+    run.keep_live(live)
+    assert run.live() == live
+    (run.path / "instruments.json").unlink()
+    run.note_instrument({"reader": "magnet", "seq": 7})
+    assert [entry["seq"] for entry in run.instruments()] == [7]
