@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import os
+import re
 from collections.abc import Mapping
 from pathlib import Path
 
@@ -11,6 +12,7 @@ import pytest
 from scripted_instrument import ScriptedInstrument
 from small_laboratory import write_small_laboratory
 
+from acquire.bus import free_address
 from acquire.config import load
 from acquire.config.hold import HoldSection
 from acquire.errors import ConnectError, ReplyTimeout, RunError
@@ -206,6 +208,26 @@ def test_by_hand_nothing_can_be_sent(run: RunFolder, capsys: pytest.CaptureFixtu
     run.write_live({}, "tcp://127.0.0.1:1", hold="tcp://127.0.0.1:1")
     status, said = by_hand(run, capsys)
     assert "can't be opened" in said[0]["text"], "the laboratory is not there"
+    assert not record.was_claimed(run.path)
+
+
+def test_without_the_watch_nothing_is_sent(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """It was killed between the decision and the command: nobody allows it any more."""
+    monkeypatch.setattr("acquire.hold.__main__.ALLOWED_WITHIN_S", 0.2)
+    with ScriptedInstrument({"*IDN?": IDENTITY, "PAUSE": ()}) as supply:
+        config = write_small_laboratory(tmp_path / "small.toml", hold=True)
+        text = config.read_text().split("[hold]")
+        text[1] = re.sub(r"TCPIP[^\"]*", supply.resource, text[1]).replace("MAGNET ", "")
+        config.write_text("[hold]".join(text))
+        rig, data = load(config)
+        run = create_run(rig, data, list(run_tables(rig).values()), tmp_path)
+        run.write_live({}, "tcp://127.0.0.1:1", hold=free_address())
+        status, said = by_hand(run, capsys)
+        assert status == 1
+        assert said == [{"step": "not_sent", "text": "it was not allowed any more."}]
+        assert [text for _, text in supply.questions] == ["*IDN?"]
     assert not record.was_claimed(run.path)
 
 
