@@ -15,7 +15,7 @@ from made_run import MadeRun, config, estimates, ramp
 from playwright.sync_api import Browser, expect
 from scripted_instrument import ScriptedInstrument
 from test_hold_watch import Terminal
-from test_page import SCRIPT, opened, served
+from test_page import SCRIPT, assert_in_sight, opened, served
 
 from acquire.closing import Closing
 from acquire.config import Rig, parse
@@ -96,6 +96,7 @@ def test_from_the_button_to_the_alarm(
             expect(strip).to_contain_text("Holding the field: not armed")
             first = box.get_by_text("Before you arm it, read this.")
             expect(first).to_be_hidden()
+            assert_in_sight(seen.page)
             strip.get_by_role("button", name="Hold the field").click()
             expect(first).to_be_visible()
             for text in (*CAUTIONS, f'"PAUSE\\r\\n" to {supply.resource}', "no reply"):

@@ -34,9 +34,14 @@ def heard(tmp_path: Path) -> int:
 
 
 def hold_events(run: Path) -> list[str]:
-    """What happened to the holding of the field; the trial may come too late on a slow machine."""
+    """What happened to the holding of the field, without what chance and a slow machine decide:
+    whether there was time for the trial, and whether the verdict came and went before."""
     codes = [str(row[4]) for row in open_run(run).rows(EVENTS)]
-    return [code for code in codes if code.startswith("hold_") and code != "hold_reached"]
+    found = [code for code in codes if code.startswith("hold_") and code != "hold_reached"]
+    while "hold_waits" in found:
+        at = found.index("hold_waits")
+        del found[at - 1 : at + 1]
+    return found
 
 
 def test_armed_in_the_terminal_and_held_when_stable(tmp_path: Path) -> None:
@@ -65,7 +70,7 @@ def test_the_estimator_killed_between_decision_and_command(tmp_path: Path) -> No
         running.wait_for("The field is held" if sent else "Disarmed, and nothing was sent")
         assert heard(tmp_path) == int(sent)
         assert running.end()[0] == 0
-    assert hold_events(running.run).count("hold_begun") == 1
+    assert hold_events(running.run)[-1] == ("hold_held" if sent else "hold_disarmed")
     assert_whole(running.run, tmp_path)
 
 
