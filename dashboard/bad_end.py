@@ -36,6 +36,7 @@ from dashboard.replay import logged_readings
 from dashboard.streams import run_tables
 
 LAST_PROCESSES_S = 3.0
+WRITERS = {"acquire.reader", "acquire.relay", "analyse.service", "dashboard.bad_end"}
 ENDED_BADLY = "ended_badly"
 """Code of the event (of kind ``run``) that marks such a run."""
 
@@ -62,15 +63,16 @@ def close_if_ended_badly(
 
 
 def _processes_of(run: RunFolder) -> str:
-    """Who still works on a run, or was stopped in it, as far as the system tells."""
+    """Who still writes a run, or was stopped in it, as far as the system tells."""
     found = []
     for path in sorted(Path("/proc").glob("[0-9]*/cmdline")):
         with suppress(OSError):
             words = path.read_bytes().decode(errors="replace").split("\0")
-            if str(run.path) in words and "-m" in words:
-                what = words[words.index("-m") + 1 :]
-                name = " ".join(word for word in (what[0], *what[2:3]) if word[:2] != "--")
-                found.append(f"{path.parent.name} ({name})")
+            for module in WRITERS & set(words):
+                what = words[words.index(module) :]
+                if str(run.path) in what and path.parent.name != str(os.getpid()):
+                    name = " ".join(word for word in (module, *what[2:3]) if word[:2] != "--")
+                    found.append(f"{path.parent.name} ({name})")
     return f"Still there: process {', '.join(found)}." if found else ""
 
 
