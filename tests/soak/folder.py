@@ -5,7 +5,6 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from pathlib import Path
 
 from acquire.cells import RowCodec
 from acquire.readings import stream_of
@@ -83,7 +82,3 @@ def _compare_notes(found: Found, run: RunFolder) -> None:
         if told - noted:
             found.faults.append(f"settings that are not in instruments.json: {told - noted}")
 
-
-def size(path: Path) -> int:
-    """Bytes of all files of a folder."""
-    return sum(file.stat().st_size for file in path.rglob("*") if file.is_file())

@@ -6,7 +6,6 @@ of files that each process may write is limited from outside, which fails in the
 
 from __future__ import annotations
 
-import os
 import subprocess
 from collections.abc import Callable, Iterable
 from contextlib import suppress
@@ -63,8 +62,8 @@ class FullDisk(Closing):
         """Give the disk back, with all that is on it."""
         self.empty()
         if self.mounted:
-            self.mounted = False
-            subprocess.run(["umount", str(self.folder)], check=True)
+            self.mounted = False  # lazily, should a process that was broken off still be there
+            subprocess.run(["umount", "--lazy", str(self.folder)], check=True)
 
     def _limit(self) -> None:
         for process in self._processes():
@@ -72,8 +71,3 @@ class FullDisk(Closing):
                 process.rlimit(psutil.RLIMIT_FSIZE, (0, psutil.RLIM_INFINITY))
                 self._limited.append(process)
 
-
-def room(folder: Path) -> int:
-    """Bytes that are free."""
-    found = os.statvfs(folder)
-    return found.f_bavail * found.f_frsize
