@@ -8,6 +8,7 @@ from analyse.budget import combined
 from analyse.drude import density_from_slope, mobility_from, scattering_time_from
 from analyse.estimate import BudgetLine, Measured
 from analyse.hall_bar import HallBar
+from analyse.joint import half_width, ratio_range
 from analyse.numbers import Number, make_number
 from analyse.transport_fit import Coefficient, TransportFit
 
@@ -23,28 +24,41 @@ def numbers_of(
 ) -> Numbers:
     """Sheet density, mobility and scattering time, each None while it is not known.
 
-    The intervals follow from the box of the slope's and rho_0's confidence sequences.
+    The intervals are the extent of the joint region of slope and rho_0.
     """
+    alpha = 1.0 - confidence
+    width = _slope_width(fit, alpha)
     slope, rho_0 = fit.slope, fit.rho_0
     s_n, s_mu, s_tau = combined(systematic)
-    if slope is None or abs(slope.value) <= slope.half_width:
+    if slope is None or not abs(slope.value) > width:
         return None, None, None
-    a, h = abs(slope.value) / scale_T, slope.half_width / scale_T
+    a, h = abs(slope.value) / scale_T, width / scale_T
     stat_a, model_a = slope.standard_error / scale_T / a, slope.spread / scale_T / a
     density = make_number(
         density_from_slope(a), density_from_slope(a + h), density_from_slope(a - h),
         stat_a, model_a, s_n, confidence,
     )
-    if density is None or rho_0 is None or rho_0.value <= rho_0.half_width:
+    if density is None or rho_0 is None or rho_0.value <= 0.0:
         return density, None, None
-    r, hr = rho_0.value, rho_0.half_width
+    ends = ratio_range(slope.uncertain, rho_0.uncertain, alpha)
+    if ends is None:
+        return density, None, None
+    r = rho_0.value
     stat = math.hypot(stat_a, rho_0.standard_error / r)
     model = math.hypot(model_a, rho_0.spread / r)
-    ends = (mobility_from(a, r), (a - h) / (r + hr), (a + h) / (r - hr))
-    mobility = make_number(*ends, stat, model, s_mu, confidence)
+    mobilities = (mobility_from(a, r), ends[0] / scale_T, ends[1] / scale_T)
+    mobility = make_number(*mobilities, stat, model, s_mu, confidence)
     mass = bar.carrier_gas.mass_kg(density.value)
-    times = (scattering_time_from(mu, mass) for mu in ends)
+    times = (scattering_time_from(mu, mass) for mu in mobilities)
     return density, mobility, make_number(*times, stat, model, s_tau, confidence)
+
+
+def _slope_width(fit: TransportFit, alpha: float) -> float:
+    """Half-width of the joint region along the slope."""
+    slope, rho_0 = fit.slope, fit.rho_0
+    if slope is None:
+        return math.inf
+    return half_width(slope.uncertain, rho_0.uncertain if rho_0 is not None else None, alpha)
 
 
 def measured(coefficient: Coefficient | None, scale: float = 1.0) -> Measured | None:
@@ -72,9 +86,9 @@ def fitted_lines(fit: TransportFit) -> tuple[BudgetLine, ...]:
     )
 
 
-def carriers_of(fit: TransportFit) -> str:
+def carriers_of(fit: TransportFit, confidence: float) -> str:
     """electrons, holes, or unknown while the slope's sign is."""
     slope = fit.slope
-    if slope is None or abs(slope.value) <= slope.half_width:
+    if slope is None or not abs(slope.value) > _slope_width(fit, 1.0 - confidence):
         return "unknown"
     return "holes" if slope.value > 0 else "electrons"

@@ -9,6 +9,55 @@ model, in the form with phi fixed before the data (prior variance sigma^2 / phi)
 from __future__ import annotations
 
 import math
+from dataclasses import dataclass
+
+
+Mixture = tuple[tuple[float, float], ...]
+"""Weights, of sum 1, and values of phi; both fixed before the data."""
+
+
+@dataclass(frozen=True)
+class Evidence:
+    """The e-process of one coefficient at one moment: ``nu`` and ``z2`` as in :func:`t_radius`.
+
+    With several phis it is the weighted mean of their e-processes, which is one again, taken as its
+    largest term: hardly less, and easy to turn round. Its logarithm grows with the distance ``t``
+    (in standard errors) of a hypothetical value from the estimate. Values within a limit hold the truth,
+    at all moments at once, but for a share exp(-limit).
+    """
+
+    nu: float
+    z2: float
+    mixture: Mixture
+
+    @property
+    def at_estimate(self) -> float:
+        """The logarithm where t is zero; not above zero."""
+        return self.against(0.0)
+
+    def against(self, t: float) -> float:
+        """The logarithm at a distance of ``t`` standard errors."""
+        share = t * t / self.nu
+        bent, half = math.log1p(share), 0.5 * (self.nu + 1.0)
+        return max(
+            math.log(weight) + 0.5 * math.log(r) + half * (bent - math.log1p(r * share))
+            for weight, r in self._shares()
+        )
+
+    def radius(self, limit: float) -> float:
+        """The distance at which the logarithm reaches ``limit``; infinite if it never does."""
+        if not (self.nu > 0 and self.z2 > 0):
+            return math.inf
+        return min(self._radius(r, limit - math.log(weight)) for weight, r in self._shares())
+
+    def _shares(self) -> list[tuple[float, float]]:
+        return [(weight, phi / (phi + self.z2)) for weight, phi in self.mixture]
+
+    def _radius(self, r: float, limit: float) -> float:
+        a = (r * math.exp(-2.0 * limit)) ** (1.0 / (self.nu + 1.0))
+        if a >= 1.0:
+            return 0.0
+        return math.sqrt(self.nu * (1.0 - a) / (a - r)) if a > r else math.inf
 
 
 def t_radius(nu: float, z2: float, phi: float, alpha: float) -> float:
@@ -27,19 +76,9 @@ def t_radius(nu: float, z2: float, phi: float, alpha: float) -> float:
 
     Returns infinity while the interval has no bound yet.
     """
-    if not (nu > 0 and z2 > 0 and phi > 0 and 0 < alpha < 1):
+    if not (0 < alpha < 1 and phi > 0):
         return math.inf
-    r = phi / (phi + z2)
-    a = (r * alpha * alpha) ** (1.0 / (nu + 1.0))
-    if a <= r:
-        return math.inf
-    return math.sqrt(nu * (1.0 - a) / (a - r))
-
-
-def t_evidence(t: float, nu: float, z2: float, phi: float) -> float:
-    """The e-process against a hypothetical value ``t`` standard errors away."""
-    r = phi / (phi + z2)
-    return math.sqrt(r) * ((1 + t * t / nu) / (1 + r * t * t / nu)) ** ((nu + 1) / 2)
+    return Evidence(nu, z2, ((1.0, phi),)).radius(-math.log(alpha))
 
 
 def best_phi(z2: float, alpha: float) -> float:

@@ -191,11 +191,11 @@ class Estimator:
     ) -> Estimate:
         bounds, zero = self._fit.bounds, self._fit.zero_in_reach
         numbers: Numbers = (None, None, None)
+        confidence = self.setup.target.confidence
         if zero:
-            confidence = self.setup.target.confidence
             numbers = numbers_of(fit, self._scale_T, self.bar, self._systematic, confidence)
         density, mobility, tau = numbers
-        carriers = "unknown" if self.setup.hall.detection == "R" else carriers_of(fit)
+        carriers = "unknown" if self.setup.hall.detection == "R" else carriers_of(fit, confidence)
         cautions = self._cautions(fit, carriers, density, mobility)
         window = self._fit.window_T
         missing = what_is_missing(

@@ -11,10 +11,11 @@ from dataclasses import dataclass, replace
 
 from scipy.constants import e
 
-from analyse.confidence import t_radius
+from analyse.confidence import Evidence
+from analyse.joint import Uncertain, half_width
 from analyse.lockin import LockinFilter
 from analyse.setup import Ramp, Setup, Signal, Target
-from analyse.transport_fit import FLOOR, SLOPE_FLOOR, SLOPE_SHARE, Phis, fixed_phis
+from analyse.transport_fit import FLOOR, SLOPE_FLOOR, Phis, fixed_phis
 
 LINE_BEND_FACTOR = math.sqrt(5.25)
 """Standard error of the bend over that of the slope: [1, u, u^3] against [1, u], evenly spread
@@ -50,13 +51,13 @@ def meets(state: State, field_T: float, target: Target, phis: Phis, scale_T: flo
     alpha = 1.0 - target.confidence
     z2 = effective * width**2 / 12
     error = state.slope_noise / math.sqrt(z2)
-    slope = error * t_radius(effective - 2, z2, phis.slope, SLOPE_SHARE * alpha)
-    level = state.rho_0_noise / math.sqrt(effective) * t_radius(
-        effective - 1, effective, phis.rho_0, (1 - SLOPE_SHARE) * alpha
-    )
+    one = Uncertain(1.0, error, Evidence(effective - 2, z2, phis.slope))
+    level = state.rho_0_noise / math.sqrt(effective)
+    other = Uncertain(1.0, level, Evidence(effective - 1, effective, phis.rho_0))
+    slope = half_width(one, other, alpha)
     straight = 1.645 * LINE_BEND_FACTOR * error <= target.sheet_density
     crossed = not target.cross_crossing_field or field_T * state.mobility_m2_per_V_s >= 1.0
-    both = slope + level + math.hypot(FLOOR, SLOPE_FLOOR)
+    both = math.hypot(slope, half_width(other, one, alpha)) + math.hypot(FLOOR, SLOPE_FLOOR)
     widths = (slope + SLOPE_FLOOR, both, both)
     wanted = (target.sheet_density, target.mobility, target.scattering_time or target.mobility)
     reached = all(

@@ -14,7 +14,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 from analyse.basis import COLUMNS
-from analyse.confidence import t_radius
+from analyse.confidence import Evidence, Mixture
 from analyse.segments import OWN, Pool
 from analyse.square_root import inverse_root, triangle_of
 
@@ -56,9 +56,13 @@ class LineFit:
         """Effective sum of squares of regressor j after the others are taken out."""
         return 1.0 / (self.kappa * self.inverse(j))
 
-    def half_width(self, j: int, phi: float, alpha: float) -> float:
-        """Half-width of the confidence sequence of coefficient j."""
-        radius = t_radius(self.nu, self.z2(j), phi, alpha)
+    def evidence(self, j: int, mixture: Mixture) -> Evidence:
+        """The e-process of coefficient j."""
+        return Evidence(self.nu, self.z2(j), mixture)
+
+    def half_width(self, j: int, mixture: Mixture, alpha: float) -> float:
+        """Half-width of the confidence sequence of coefficient j alone."""
+        radius = self.evidence(j, mixture).radius(-math.log(alpha))
         return self.standard_error(j) * radius if math.isfinite(radius) else math.inf
 
 

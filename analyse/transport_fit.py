@@ -20,14 +20,15 @@ from analyse.basis import (
     SQUARE,
     regressors,
 )
-from analyse.confidence import best_phi
+from analyse.confidence import Evidence, Mixture, best_phi
+from analyse.joint import Uncertain
 from analyse.line_fit import LineFit, fit_columns, lack_of_fit
 from analyse.segments import Pool
 from analyse.setup import Setup
 
-SLOPE_SHARE = 0.8
-"""Share of the error probability given to the Hall slope; the rest goes to rho_0, which is
-commonly known far better, so that a smaller share costs it little."""
+SLOPE_AT = ((0.5, 0.25), (0.5, 0.05))
+"""Weights, and the shares of the ramp for which the slope's phis are made."""
+LEVEL_AT = 0.1
 DEFAULT_EFFECTIVE = 100.0
 LACK_OF_FIT_LEVEL = 1e-5
 FLOOR, SLOPE_FLOOR = 0.001, 0.0003
@@ -42,13 +43,15 @@ BEND_SEEN = 3.5
 class Coefficient:
     """A coefficient with all that is said of it, in its own unit.
 
-    ``half_width``: of the confidence sequence; ``bend``: by how much the next richer model moves
+    ``evidence``: of its confidence sequence, ``half_width``: of that sequence if it stood alone;
+    ``bend``: by how much the next richer model moves
     it, and ``bend_error`` the standard error of that difference; ``noise``: standard deviation of
     an independent reading; ``order``: 0 for the plain model, more where a richer one was needed.
     """
 
     value: float
     standard_error: float
+    evidence: Evidence
     half_width: float
     bend: float
     bend_error: float
@@ -56,6 +59,11 @@ class Coefficient:
     noise: float
     order: int
     floor: float
+
+    @property
+    def uncertain(self) -> Uncertain:
+        """Its magnitude, for the joint region."""
+        return Uncertain(abs(self.value), self.standard_error, self.evidence)
 
     @property
     def spread(self) -> float:
@@ -90,34 +98,34 @@ class Models:
 
 @dataclass(frozen=True)
 class Phis:
-    """Mixture precisions and the scale of u in T, fixed before the data."""
+    """Mixtures of the two confidence sequences and the scale of u in T, fixed before the data."""
 
-    slope: float
-    rho_0: float
+    slope: Mixture
+    rho_0: Mixture
     scale_T: float
 
 
 def fixed_phis(setup: Setup, scale_T: float) -> Phis:
-    """Phis that suit a ramp which reaches its answer after a quarter, or a documented default.
+    """Phis that suit a ramp which reaches its answer after some share of its way, or a default.
 
-    Default without a planned ramp: 100 effective readings spread over a quarter of the scale of
-    field. Coverage does not depend on them, only the width does, and weakly: too small costs less
-    than too large, hence a quarter and not a half.
+    Default without a planned ramp: 100 effective readings over a quarter of the scale of field.
+    Coverage does not depend on them, only the width does. The slope's sum of squares grows as the
+    cube of the field, so that one phi can't serve the whole of a ramp; rho_0's grows with it.
     """
     alpha = 1.0 - setup.target.confidence
-    width, effective = 0.25, DEFAULT_EFFECTIVE
+    span_T, effective = scale_T, 4 * DEFAULT_EFFECTIVE
     stages = setup.hall.filter
     if setup.ramp is not None:
-        part = setup.ramp.span_T / 4
-        width = part / scale_T
+        span_T = setup.ramp.span_T
         if stages is not None:
-            effective = part / setup.ramp.rate_T_per_s / stages.integral_time_s
-    effective = max(effective, 10.0)
-    return Phis(
-        best_phi(effective * width**2 / 12, SLOPE_SHARE * alpha),
-        best_phi(effective, (1 - SLOPE_SHARE) * alpha),
-        scale_T,
-    )
+            effective = span_T / setup.ramp.rate_T_per_s / stages.integral_time_s
+    width = span_T / scale_T
+
+    def phi(share: float, squares: float) -> float:
+        return best_phi(max(effective * share, 10.0) * squares, alpha)
+
+    slope = tuple((weight, phi(at, (at * width) ** 2 / 12)) for weight, at in SLOPE_AT)
+    return Phis(slope, ((1.0, phi(LEVEL_AT, 1.0)),), scale_T)
 
 
 def hall_columns(pool: Pool) -> tuple[int, ...]:
@@ -177,7 +185,7 @@ def best_inner(inner: Sequence[Pool], excess: bool, phis: Phis, alpha: float) ->
     for pool in inner:
         columns = longitudinal_columns(pool)
         part_excess = excess and noise_excess(pool, columns) > 1
-        parts.append(zero_field(pool, columns, part_excess, phis, (1 - SLOPE_SHARE) * alpha))
+        parts.append(zero_field(pool, columns, part_excess, phis, alpha))
     return min((part for part in parts if part is not None), key=_total, default=None)
 
 
@@ -194,8 +202,7 @@ def fit_transport(
     offset = line.theta[0] if line is not None else None
     offset_error = line.standard_error(0) if line is not None else math.inf
     slope = hall_slope(hall, models.hall, excess[0] > 1, phis, alpha)
-    level_alpha = (1 - SLOPE_SHARE) * alpha
-    rho_0 = zero_field(along, models.longitudinal, excess[1] > 1, phis, level_alpha)
+    rho_0 = zero_field(along, models.longitudinal, excess[1] > 1, phis, alpha)
     if inner is not None and (rho_0 is None or _total(inner) < _total(rho_0)):
         rho_0 = inner
     if rho_0 is not None and tail is not None:
@@ -212,7 +219,7 @@ def hall_slope(
     if line is None:
         return None
     bent = fit_columns(pool, HALL_BENT + columns[2:], excess)
-    return _coefficient(line, 1, bent, phis.slope, SLOPE_SHARE * alpha, pool.effective, SLOPE_FLOOR)
+    return _coefficient(line, 1, bent, phis.slope, alpha, pool.effective, SLOPE_FLOOR)
 
 
 def zero_field(
@@ -246,13 +253,14 @@ def _bend(fit: LineFit, bent: LineFit, j: int) -> tuple[float, float]:
 
 
 def _coefficient(
-    fit: LineFit, j: int, bent: LineFit | None, phi: float, alpha: float, effective: float,
+    fit: LineFit, j: int, bent: LineFit | None, mixture: Mixture, alpha: float,
+    effective: float,
     floor: float, order: int = 0,
 ) -> Coefficient:
     bend, bend_error = 0.0, math.inf
     if bent is not None and bent.nu > 2:
         bend, bend_error = _bend(fit, bent, j)
     return Coefficient(
-        fit.theta[j], fit.standard_error(j), fit.half_width(j, phi, alpha),
+        fit.theta[j], fit.standard_error(j), fit.evidence(j, mixture), fit.half_width(j, mixture, alpha),
         bend, bend_error, effective, math.sqrt(fit.variance), order, floor * abs(fit.theta[j]),
     )

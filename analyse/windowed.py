@@ -20,7 +20,6 @@ from analyse.shapes import (
     sweeps_apart,
 )
 from analyse.transport_fit import (
-    SLOPE_SHARE,
     Coefficient,
     Models,
     best_inner,
@@ -263,20 +262,19 @@ class WindowedFit:
         self, hall: Pool, along: Pool, models: Models
     ) -> tuple[Coefficient | None, Coefficient | None]:
         excess = noise_excess(hall, models.hall) > 1, noise_excess(along, models.longitudinal) > 1
-        alpha = (1 - SLOPE_SHARE) * self._alpha
         return (
             hall_slope(hall, models.hall, excess[0], self._phis, self._alpha),
-            zero_field(along, models.longitudinal, excess[1], self._phis, alpha),
+            zero_field(along, models.longitudinal, excess[1], self._phis, self._alpha),
         )
 
     def _uncertainty(self, hall: Pool, along: Pool) -> float:
         """Relative uncertainty of the mobility, from two pools."""
-        parts = self._coefficients(hall, along, choose_models(hall, along))
-        if any(part is None or not part.value for part in parts):
+        slope, rho_0 = self._coefficients(hall, along, choose_models(hall, along))
+        if slope is None or rho_0 is None or not slope.value or not rho_0.value:
             return math.inf
-        return sum(
-            (part.half_width + part.spread) / abs(part.value) for part in parts if part is not None
-        )
+        shares = [(part.half_width / abs(part.value), part.spread / abs(part.value))
+                  for part in (slope, rho_0)]
+        return math.hypot(*(w for w, _ in shares)) + math.hypot(*(s for _, s in shares))
 
     def _excesses(self) -> tuple[float, float]:
         hall, along = (self._pools[role] for role in ROLES)

@@ -10,7 +10,7 @@ from scipy.stats import t as t_distribution
 from strd import NORRIS
 
 from analyse import SquareRootInformation, normal_mixture, t_radius
-from analyse.confidence import best_phi, t_evidence
+from analyse.confidence import Evidence, best_phi
 
 # Lindon, Ham, Tingley, Bojinov, arXiv 2210.08589, in the form with phi fixed before the data;
 # formula as in the first author's package avlm, numbers recomputed.
@@ -52,8 +52,8 @@ def test_published_example_of_the_package() -> None:
     # README of avlm: n = 100, 8 coefficients, optimal g = 11.5815: radius 3.1040 (5 digits);
     # p values 9.77e-6 at t = 5.776 and 3.19e-14 at t = 10.769.
     assert t_radius(92, 100.0, 11.5815, 0.05) == pytest.approx(3.103938, rel=1e-6)
-    assert 1 / t_evidence(5.776, 92, 100.0, 11.5815) == pytest.approx(9.77e-6, rel=2e-3)
-    assert 1 / t_evidence(10.769, 92, 100.0, 11.5815) == pytest.approx(3.19e-14, rel=2e-3)
+    assert math.exp(-Evidence(92, 100.0, ((1.0, 11.5815),)).against(5.776)) == pytest.approx(9.77e-6, rel=2e-3)
+    assert math.exp(-Evidence(92, 100.0, ((1.0, 11.5815),)).against(10.769)) == pytest.approx(3.19e-14, rel=2e-3)
 
 
 @pytest.mark.parametrize(("n", "slope", "radius", "interval"), NORRIS_SLOPE)
@@ -82,10 +82,10 @@ def test_norris_slope(
 @pytest.mark.parametrize("nu", [3.5, 10.0, 400.0])
 @pytest.mark.parametrize("z2", [0.3, 20.0, 1e5])
 def test_evidence_at_the_radius_is_one_over_alpha(alpha: float, nu: float, z2: float) -> None:
-    radius = t_radius(nu, z2, 1.0, alpha)
+    radius, evidence = t_radius(nu, z2, 1.0, alpha), Evidence(nu, z2, ((1.0, 1.0),))
     if math.isfinite(radius):
-        assert t_evidence(radius, nu, z2, 1.0) == pytest.approx(1 / alpha, rel=1e-9)
-    assert t_evidence(0.0, nu, z2, 1.0) < 1.0
+        assert math.exp(evidence.against(radius)) == pytest.approx(1 / alpha, rel=1e-9)
+    assert evidence.against(0.0) == evidence.at_estimate < 0.0
 
 
 @pytest.mark.parametrize(
