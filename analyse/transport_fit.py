@@ -205,9 +205,11 @@ def fit_transport(
     rho_0 = zero_field(along, models.longitudinal, excess[1] > 1, phis, alpha)
     if inner is not None and (rho_0 is None or _total(inner) < _total(rho_0)):
         rho_0 = inner
-    if rho_0 is not None and tail is not None:
-        reach = min(abs(rho_0.value - level) for level in tail)
-        rho_0 = replace(rho_0, floor=math.hypot(rho_0.floor, reach))
+    if rho_0 is not None:
+        reach = min((abs(rho_0.value - level) for level in tail), default=0.0) if tail else 0.0
+        far = far_level(along, models.longitudinal, phis.scale_T)
+        from_far = abs(rho_0.value - far) if far is not None else 0.0
+        rho_0 = replace(rho_0, floor=math.hypot(rho_0.floor, reach, from_far))
     return TransportFit(slope, offset, offset_error, rho_0, excess[0], excess[1])
 
 
@@ -239,6 +241,24 @@ def zero_field(
     lowest = regressors("longitudinal", pool.low_T / phis.scale_T)
     beyond = fit.predict((*lowest[:OTHER_PARITY], 0.0))[0] - found.value
     return replace(found, floor=math.hypot(found.floor, beyond))
+
+
+def far_level(pool: Pool, columns: tuple[int, ...], scale_T: float) -> float | None:
+    """The resistivity far from zero field, where the curve looks like the tail of a peak or dip that
+    stands there: steepest next to zero, or a straight line, so that it may level off farther out.
+
+    None where it is level, or ever steeper, as a smooth magnetoresistance is.
+    """
+    fit = fit_columns(pool, columns) if columns[1:2] == SLOPING[1:] else None
+    if fit is None:
+        return None
+    low, high = pool.low_T / scale_T, pool.high_T / scale_T
+    linear, square = fit.theta[1], fit.theta[2] if CURVED[2] in columns else 0.0
+    near_slope, far_slope = (linear + 2 * square * u for u in (low, high))
+    if abs(far_slope) > abs(near_slope):
+        return None
+    at = -linear / (2 * square) if near_slope * far_slope < 0 else high
+    return fit.predict((*regressors("longitudinal", at)[:OTHER_PARITY], 0.0))[0]
 
 
 def _total(part: Coefficient) -> float:
