@@ -10,6 +10,9 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import lru_cache
+
+from scipy.special import ndtr, stdtrit
 
 
 Mixture = tuple[tuple[float, float], ...]
@@ -90,3 +93,18 @@ def best_phi(z2: float, alpha: float) -> float:
 def normal_mixture(v: float, rho: float, alpha: float) -> float:
     """Two-sided boundary u(v) for a sum of variance v: |S| < u for all time with 1 - alpha."""
     return math.sqrt((v + rho) * math.log((v + rho) / (rho * alpha * alpha)))
+
+
+RARE = 4.5
+"""Standard deviations at which :func:`heavy_tails` makes Student's t as rare as a normal deviate."""
+
+
+def heavy_tails(nu: float) -> float:
+    """By how much a standard error with ``nu`` degrees of freedom has to be enlarged, so that 4.5 of it
+    are passed by chance as seldom as 4.5 standard deviations of a normal deviate."""
+    return _heavy_tails(max(1, int(nu)))
+
+
+@lru_cache(maxsize=4096)
+def _heavy_tails(nu: int) -> float:
+    return max(1.0, float(-stdtrit(nu, ndtr(-RARE))) / RARE)

@@ -6,13 +6,16 @@ import itertools
 import math
 from dataclasses import dataclass
 
-from analyse.basis import HALL_LINE, HALL_SAGGING, SLOPING, SQUARE, regressors
+from analyse.basis import HALL_LINE, HALL_SAGGING, LEVEL, SLOPING, SQUARE, regressors
+from analyse.confidence import heavy_tails
 from analyse.line_fit import LineFit, fit_columns
 from analyse.segments import Pool, Segment
 from analyse.window import TOLERANCE, is_rough
 
 Line = tuple[float, float, float]
 
+FAR = 3.0
+"""Times the window's upper end: what is said to be far above it."""
 STEADY = 0.7
 """Mean over root mean square of departures that are steady."""
 
@@ -29,6 +32,7 @@ class Shapes:
     square_rise: tuple[float, float] | None = None
     beyond: tuple[float, float] | None = None
     ripples: bool = False
+    falls_beyond: tuple[tuple[float, float], tuple[float, float]] | None = None
 
 
 @dataclass(frozen=True)
@@ -52,7 +56,7 @@ def fall_off(pool: Pool, role: str, scale_T: float) -> tuple[float, float] | Non
     if not fit.theta[bottom]:
         return None
     share = -fit.theta[top] / fit.theta[bottom] * end
-    return share, abs(fit.standard_error(top) / fit.theta[bottom]) * end
+    return share, abs(fit.standard_error(top) / fit.theta[bottom]) * end * heavy_tails(fit.nu)
 
 
 def straight(pool: Pool, role: str, scale_T: float) -> Line | None:
@@ -82,7 +86,9 @@ def sweeps_apart(segments: list[Segment], scale_T: float) -> SweepsApart | None:
     if high <= low:
         return None
     row = (1.0, (low + high) / 2 / scale_T)
-    values = [(*fit.predict(row), fit.variance) for fit in fits if fit is not None]
+    values = [
+        (*fit.predict(row), fit.variance * heavy_tails(fit.nu) ** 2) for fit in fits if fit is not None
+    ]
     slope = sum(fit.theta[1] for fit in fits if fit is not None) / 2 / scale_T
     if not slope:
         return None
@@ -124,7 +130,8 @@ def square_rise(pool: Pool, crossing_T: float, scale_T: float) -> tuple[float, f
     if fit is None or fit.nu < 10 or not fit.theta[0]:
         return None
     at = (crossing_T / scale_T) ** 2
-    return fit.theta[1] / fit.theta[0] * at, abs(fit.standard_error(1) / fit.theta[0]) * at
+    error = abs(fit.standard_error(1) / fit.theta[0]) * at
+    return fit.theta[1] / fit.theta[0] * at, error * heavy_tails(fit.nu)
 
 
 def beyond_window(
@@ -152,6 +159,33 @@ def beyond_window(
     if abs(mean) < STEADY * rms:
         return None
     return mean, max(errors)
+
+
+def falls_beyond(
+    pools: tuple[Pool, Pool], segments: tuple[list[Segment], list[Segment]], high_T: float,
+    scale_T: float,
+) -> tuple[tuple[float, float], tuple[float, float]] | None:
+    """(share by which it falls short of the window's fit, error), of the longitudinal and the Hall
+    resistivity, far above the window; None if little was measured there.
+
+    ``pools``, ``segments``: (hall, longitudinal). A current that sags takes the same share of both.
+    """
+    found = []
+    models = (("hall", HALL_LINE), ("longitudinal", LEVEL))
+    for pool, closed, (role, columns) in zip(pools, segments, models, strict=True):
+        fit = fit_columns(pool, columns)
+        far = [one for one in closed if one.low_T >= FAR * high_T]
+        if fit is None or len(far) < 3:
+            return None
+        shares, errors = [], []
+        for one in far:
+            value, leverage = fit.predict(regressors(role, one.mean_field_T / scale_T))
+            if not value:
+                return None
+            shares.append(1.0 - one.mean() / value)
+            errors.append(math.sqrt(fit.variance * (leverage + 1.0 / one.effective)) / abs(value))
+        found.append((sum(shares) / len(shares), max(errors) * heavy_tails(fit.nu)))
+    return found[1], found[0]
 
 
 def ripples(along: Pool, segments: list[Segment], high_T: float, scale_T: float) -> bool:

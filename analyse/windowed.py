@@ -14,6 +14,7 @@ from analyse.shapes import (
     Shapes,
     beyond_window,
     fall_off,
+    falls_beyond,
     ripples,
     square_rise,
     straight,
@@ -198,14 +199,17 @@ class WindowedFit:
             *self._beyond(hall, along),
         )
 
-    def _beyond(self, hall: Pool, along: Pool) -> tuple[tuple[float, float] | None, bool]:
+    def _beyond(self, hall: Pool, along: Pool) -> tuple[
+        tuple[float, float] | None, bool, tuple[tuple[float, float], tuple[float, float]] | None
+    ]:
         end_T = self.bounds.high_T
         if not math.isfinite(end_T):
-            return None, False
+            return None, False, None
         closed = {role: self._segments[role].closed for role in ROLES}
         return (
             beyond_window(hall, closed["hall"], end_T, self._scale_T),
             ripples(along, closed["longitudinal"], end_T, self._scale_T),
+            falls_beyond((hall, along), (closed["hall"], closed["longitudinal"]), end_T, self._scale_T),
         )
 
     def _halve(self, along: Pool) -> list[tuple[Pool, Bounds]]:

@@ -13,8 +13,10 @@ from analyse.scatter import scatter_about_line
 from analyse.setup import Ramp
 
 MEMORY = 60
-EDGE = 15
-"""Pairs at either end of the memory that are compared."""
+FEWEST = 28
+"""Pairs from which on a judgement is made."""
+EDGE = 4
+"""This share, one over it, of the pairs at either end of the memory is compared."""
 SPACING = 0.5
 """Pairs are kept this share of the filter's integral time apart, so that the memory is long."""
 CLEAR = 10.0
@@ -69,7 +71,7 @@ class FieldWatch:
 
     def cautions(self, slope_ohm_per_T: float | None) -> Iterator[Caution]:
         """Cautions that hold now. The slope is None while it is not known."""
-        if len(self._pairs) < MEMORY:
+        if len(self._pairs) < FEWEST:
             return
         if self._move is None:
             self._move = last_move(list(self._pairs), self._kappa)
@@ -107,15 +109,16 @@ class FieldWatch:
 
 
 def last_move(pairs: list[tuple[float, float, float]], kappa: float) -> Move:
-    """How field and resistivity moved from the first ``EDGE`` of the pairs to the last."""
-    one, two = pairs[:EDGE], pairs[-EDGE:]
+    """How field and resistivity moved from the first quarter of the pairs to the last."""
+    edge = len(pairs) // EDGE
+    one, two = pairs[:edge], pairs[-edge:]
     (t1, b1, r1), (t2, b2, r2) = _means(one), _means(two)
     jitter = max(scatter_about_line([(t, b) for t, b, _ in part]) for part in (one, two))
     noise = max(scatter_about_line([(t, r) for t, _, r in part]) for part in (one, two))
     whole = sum(r for _, _, r in pairs) / len(pairs)
     return Move(
-        t2 - t1, b2 - b1, jitter * math.sqrt(2 / EDGE), r2 - r1,
-        max(noise * math.sqrt(2 * max(kappa, 1.0) / EDGE), 1e-300), whole,
+        t2 - t1, b2 - b1, jitter * math.sqrt(2 / edge), r2 - r1,
+        max(noise * math.sqrt(2 * max(kappa, 1.0) / edge), 1e-300), whole,
     )
 
 

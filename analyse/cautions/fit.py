@@ -8,6 +8,7 @@ from dataclasses import dataclass
 
 from scipy.constants import e
 
+from analyse.confidence import heavy_tails
 from analyse.estimate import Caution
 from analyse.quick import HALL_MARK_OHM, QuickReading
 from analyse.setup import Setup, Target
@@ -16,6 +17,7 @@ from analyse.transport_fit import TransportFit
 from analyse.window import Bounds
 
 MIN_EFFECTIVE = 20.0
+FEWEST_EFFECTIVE = 10.0
 BEND_CERTAIN = 4.5
 """Standard errors beyond the target at which a bend is called one; it is looked at all the time."""
 
@@ -54,7 +56,7 @@ def fit_cautions(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
         yield Caution(
             "current_sag",
             f"both resistivities fall off alike with field, by {100 * sagging:.2g} % at the "
-            "window's end, as if the current did: the sample's resistance takes a share of a "
+            "upper end, as if the current did: the sample's resistance takes a share of a "
             "source behind a series resistor; measure the current or state source and resistor.",
         )
     else:
@@ -111,8 +113,14 @@ def _noise(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
 
 
 def _sag_share(facts: FitFacts) -> float | None:
-    """Share by which both fall off at the window's end, if they do so alike; else None."""
-    along, hall = facts.shapes.along_bend, facts.shapes.hall_bend
+    """Share by which both fall off in the window, or far above it, if alike; else None."""
+    shapes = facts.shapes
+    inside = _alike(shapes.along_bend, shapes.hall_bend)
+    return inside if inside is not None else _alike(*(shapes.falls_beyond or (None, None)))
+
+
+def _alike(along: tuple[float, float] | None, hall: tuple[float, float] | None) -> float | None:
+    """The mean share of two falls, if they are clear and alike."""
     if along is None or hall is None:
         return None
     (a, error_a), (b, error_b) = along, hall
@@ -155,9 +163,10 @@ def _sweeps(facts: FitFacts, target: Target) -> Iterator[Caution]:
 def _offset(facts: FitFacts) -> Iterator[Caution]:
     fit = facts.fit
     slope, rho_0, offset = fit.slope, fit.rho_0, fit.offset_ohm
-    if slope is None or rho_0 is None or offset is None or slope.effective < MIN_EFFECTIVE:
+    if slope is None or rho_0 is None or offset is None or slope.effective < FEWEST_EFFECTIVE:
         return
-    if abs(offset) < OFFSET_CLEAR * fit.offset_error_ohm or not facts.density_per_m2:
+    clear = OFFSET_CLEAR * fit.offset_error_ohm * heavy_tails(slope.evidence.nu)
+    if abs(offset) < clear or not facts.density_per_m2:
         return
     squares = offset / rho_0.value if rho_0.value else 0.0
     field_T = offset * facts.density_per_m2 * e
@@ -190,7 +199,8 @@ def _straightness(fit: TransportFit, target: Target) -> Iterator[Caution]:
         size = abs(coefficient.value)
         if coefficient.effective < MIN_EFFECTIVE or not size:
             continue
-        if abs(coefficient.bend) - BEND_CERTAIN * coefficient.bend_error > limit * size:
+        certain = BEND_CERTAIN * heavy_tails(coefficient.evidence.nu - 1)
+        if abs(coefficient.bend) - certain * coefficient.bend_error > limit * size:
             yield Caution(
                 "not_straight",
                 f"the {what} bends within the window; taking the bend into account moves the "

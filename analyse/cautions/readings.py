@@ -39,7 +39,8 @@ class RoleWatch:
     def add(self, pair: Pair) -> None:
         """Take note of one pair."""
         self.counts[pair.kind] = self.counts.get(pair.kind, 0) + 1
-        self._recent.append(pair.kind)
+        again = pair.kind == "wild" and self._recent and self._recent[-1] in ("wild", "after wild")
+        self._recent.append("after wild" if again else pair.kind)
         if pair.kind == "ok":
             if self._flat and pair.rho_ohm != self._flat[0].rho_ohm:
                 self._flat.clear()
@@ -66,6 +67,7 @@ class RoleWatch:
                 f"no usable {self.role} reading among the last {RECENT}: look at the instrument, "
                 "its line and its settings.",
             )
+        # a glitch counts once, however long the filter's answer to it
         bad = sum(kind in ("lost", "wild", "overload") for kind in recent)
         if len(recent) >= MEMORY // 2 and bad > UNUSABLE * len(recent):
             yield Caution(
