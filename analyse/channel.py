@@ -18,7 +18,8 @@ UNFILTERED_LONGEST = 3
 class Sample:
     """A reading at the sample: ``kind`` is ok, or why it is not used (overload, lost, wild).
 
-    ``track`` is the field behind the filter that the reading was taken with.
+    ``track`` is the field behind the filter that the reading was taken with, ``digit`` the last digit
+    of readings like it, as far as it is known.
     """
 
     time_s: float
@@ -26,6 +27,7 @@ class Sample:
     track: FieldTrack | None = None
     value: float = math.nan
     quadrature: float | None = None
+    digit: float = 0.0
 
 
 OVERLOAD_SENTINEL = 9.9e37
@@ -67,7 +69,9 @@ class Channel:
             return
         assert x is not None
         value = self.signal.at_sample(x, y)
-        sample = Sample(time_s, "ok", self.track, value, self.signal.quadrature(x, y))
+        sample = Sample(
+            time_s, "ok", self.track, value, self.signal.quadrature(x, y), self._gate.last_digit
+        )
         self._release(self._gate.push(value, sample))
 
     def change(self, signal: Signal, until_s: float, skipped: int = 0) -> None:

@@ -9,7 +9,6 @@ model, in the form with phi fixed before the data (prior variance sigma^2 / phi)
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 from functools import lru_cache
 
 from scipy.special import ndtr, stdtrit
@@ -19,48 +18,42 @@ Mixture = tuple[tuple[float, float], ...]
 """Weights, of sum 1, and values of phi; both fixed before the data."""
 
 
-@dataclass(frozen=True)
 class Evidence:
     """The e-process of one coefficient at one moment: ``nu`` and ``z2`` as in :func:`t_radius`.
 
     With several phis it is the weighted mean of their e-processes, which is one again, taken as its
     largest term: hardly less, and easy to turn round. Its logarithm grows with the distance ``t``
     (in standard errors) of a hypothetical value from the estimate. Values within a limit hold the truth,
-    at all moments at once, but for a share exp(-limit).
+    at all moments at once, but for a share exp(-limit). ``at_estimate`` is the logarithm where t is
+    zero, not above zero itself.
     """
 
-    nu: float
-    z2: float
-    mixture: Mixture
+    __slots__ = ("_terms", "at_estimate", "nu", "z2")
 
-    @property
-    def at_estimate(self) -> float:
-        """The logarithm where t is zero; not above zero."""
-        return self.against(0.0)
+    def __init__(self, nu: float, z2: float, mixture: Mixture) -> None:
+        self.nu = nu
+        self.z2 = z2
+        shares = ((weight, phi / (phi + z2)) for weight, phi in mixture) if z2 > 0 else ()
+        self._terms = [(math.log(weight) + 0.5 * math.log(r), r) for weight, r in shares if r > 0]
+        self.at_estimate = max((start for start, _ in self._terms), default=0.0)
 
     def against(self, t: float) -> float:
         """The logarithm at a distance of ``t`` standard errors."""
-        share = t * t / self.nu
-        bent, half = math.log1p(share), 0.5 * (self.nu + 1.0)
-        return max(
-            math.log(weight) + 0.5 * math.log(r) + half * (bent - math.log1p(r * share))
-            for weight, r in self._shares()
+        share, half = t * t / self.nu, 0.5 * (self.nu + 1.0)
+        return half * math.log1p(share) + max(
+            [start - half * math.log1p(r * share) for start, r in self._terms]
         )
 
     def radius(self, limit: float) -> float:
         """The distance at which the logarithm reaches ``limit``; infinite if it never does."""
-        if not (self.nu > 0 and self.z2 > 0):
-            return math.inf
-        return min(self._radius(r, limit - math.log(weight)) for weight, r in self._shares())
-
-    def _shares(self) -> list[tuple[float, float]]:
-        return [(weight, phi / (phi + self.z2)) for weight, phi in self.mixture]
-
-    def _radius(self, r: float, limit: float) -> float:
-        a = (r * math.exp(-2.0 * limit)) ** (1.0 / (self.nu + 1.0))
-        if a >= 1.0:
-            return 0.0
-        return math.sqrt(self.nu * (1.0 - a) / (a - r)) if a > r else math.inf
+        nearest = math.inf
+        for start, r in self._terms if self.nu > 0 else ():
+            a = math.exp(2.0 * (start - limit) / (self.nu + 1.0))
+            if a >= 1.0:
+                return 0.0
+            if a > r:
+                nearest = min(nearest, self.nu * (1.0 - a) / (a - r))
+        return math.sqrt(nearest)
 
 
 def t_radius(nu: float, z2: float, phi: float, alpha: float) -> float:

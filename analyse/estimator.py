@@ -24,6 +24,8 @@ from analyse.verdict import Facts, what_is_missing
 from analyse.windowed import WindowedFit
 
 LATEST_S = 1e12
+LOOK_AHEAD_EVERY = 5
+"""Field points between two forecasts."""
 PLAIN_SIGNAL, PLAIN_FIELD, ANY_WINDOW = Signal(), FieldSource(), Window()
 
 
@@ -91,6 +93,7 @@ class Estimator:
         self._lowest_T, self._highest_T = math.inf, -math.inf
         self._last_rate = 0.0
         self._last_field: float | None = None
+        self._ahead: tuple[float | None, tuple[float | None, float | None]] | None = None
 
     def update(
         self, channel: str, time_s: float, x: float | None, y: float | None = None,
@@ -182,6 +185,7 @@ class Estimator:
         fit = fit_transport(
             self.setup, hall, along, self._fit.models, self._fit.inner, self._fit.tail,
             self._phis, self._fit.excess,
+            (self._fit.digits_ohm["hall"], self._fit.digits_ohm["longitudinal"]),
         )
         return self._estimate(time_s, field_T, rho_xx, rho_xy, fit)
 
@@ -257,12 +261,14 @@ class Estimator:
             slope.noise / abs(slope.value), rho_0.noise / rho_0.value,
             mobility.value, combined(self._systematic),
         )
-        given = (self.setup.target, self._phis, self._scale_T, end_T)
-        at_T = field_to_target(state, *given)
+        if self._ahead is None or self._field_points % LOOK_AHEAD_EVERY == 0:
+            given = (self.setup.target, self._phis, self._scale_T, end_T)
+            at_T = field_to_target(state, *given)
+            self._ahead = at_T, field_range(state, slope.effective - 2, *given)
+        at_T, ends = self._ahead
         if at_T is None:
             return unknown
-        ends = field_range(state, slope.effective - 2, *given)
-        return (at_T - field_T) / rate, at_T, ends
+        return max(0.0, at_T - field_T) / rate, at_T, ends
 
 
 def _mean(values: list[float]) -> float | None:

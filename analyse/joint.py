@@ -15,12 +15,12 @@ from dataclasses import dataclass
 
 from analyse.confidence import Evidence
 
-REFINED = (0.2, 0.06)
+REFINED = (0.1, 0.03)
 """Steps in angle in which the extreme of a ratio over the region is sought, one after the other; it
 is flat there, so that little is left to find."""
 ROUND = 60.0
 """Degrees of freedom above which the region is near enough to an ellipse to begin at its extreme."""
-STARTS = (0.0, 0.12, 0.35, 0.6, 0.97, 1.22, 1.45, math.pi / 2)
+STARTS = (0.0, 0.04, 0.1, 0.2, 0.35, 0.6, 0.97, 1.22, 1.37, 1.47, 1.53, math.pi / 2)
 """Angles to begin from below it: the region then has arms along both values."""
 
 

@@ -36,7 +36,8 @@ class Pair:
 
     ``kind``: ok, overload, lost, wild, or no_field. ``rho_ohm``: resistivity, ``field_T``: the
     field that it stands for, ``rate_T_per_s``: how fast the field moved, ``quadrature_ohm``: what
-    stands at right angles to the signal, where that is read, ``stages``: the filter before it.
+    stands at right angles to the signal, where that is read, ``stages``: the filter before it,
+    ``digit_ohm``: the last digit of readings like it, 0 if not known.
     """
 
     role: str
@@ -48,6 +49,7 @@ class Pair:
     current_A: float = math.nan
     quadrature_ohm: float | None = None
     stages: LockinFilter | None = None
+    digit_ohm: float = 0.0
 
 
 class Pairing:
@@ -206,6 +208,7 @@ class Pairing:
         return Pair(
             role, sample.time_s, sample.kind, field_T, rate,
             rho if abs(rho) >= SMALLEST_OHM else 0.0, current, quadrature, sample.track.stages,
+            abs(sample.digit / per_rho),
         )
 
     def _forget(self, time_s: float) -> None:

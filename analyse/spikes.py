@@ -140,10 +140,12 @@ class SpikeGate(Generic[Item]):
         ordered = sorted(self._steps)
         kept = ordered[: max(1, (len(ordered) * 9) // 10)]
         rounding = ROUNDING * abs(self._good) if self._good is not None else 0.0
-        return max(sum(kept) / len(kept), self._last_digit(), rounding)
+        return max(sum(kept) / len(kept), self.last_digit, rounding, 1e-300)
 
-    def _last_digit(self) -> float:
+    @property
+    def last_digit(self) -> float:
+        """The smallest departure that was seen twice; 0 while there is none."""
         for one, two in itertools.pairwise(self._departures):
             if two <= 1.01 * one:
                 return two
-        return 1e-300
+        return 0.0

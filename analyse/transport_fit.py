@@ -46,7 +46,8 @@ class Coefficient:
     ``evidence``: of its confidence sequence, ``half_width``: of that sequence if it stood alone;
     ``bend``: by how much the next richer model moves
     it, and ``bend_error`` the standard error of that difference; ``noise``: standard deviation of
-    an independent reading; ``order``: 0 for the plain model, more where a richer one was needed.
+    an independent reading, ``reading2``: variance of any; ``order``: 0 for the plain model, more where a richer one was needed;
+    ``floor`` and ``rounding``: what the window tolerates, and what the readings' last digit may do.
     """
 
     value: float
@@ -59,6 +60,8 @@ class Coefficient:
     noise: float
     order: int
     floor: float
+    rounding: float = 0.0
+    reading2: float = 0.0
 
     @property
     def uncertain(self) -> Uncertain:
@@ -68,8 +71,9 @@ class Coefficient:
     @property
     def spread(self) -> float:
         """Model spread, as a standard uncertainty: what of the bend is beyond its own noise, and
-        what the window tolerates."""
-        return math.sqrt(max(0.0, self.bend**2 - self.bend_error**2) + self.floor**2)
+        what the window tolerates, and the last digit."""
+        bend2 = max(0.0, self.bend**2 - self.bend_error**2)
+        return math.sqrt(bend2 + self.floor**2 + self.rounding**2)
 
     def largest_bend(self, factor: float = 1.645) -> float:
         """A bend that the data do not rule out."""
@@ -192,11 +196,13 @@ def best_inner(inner: Sequence[Pool], excess: bool, phis: Phis, alpha: float) ->
 def fit_transport(
     setup: Setup, hall: Pool, along: Pool, models: Models, inner: Coefficient | None,
     tail: tuple[float, float] | None, phis: Phis, excess: tuple[float, float],
+    digits_ohm: tuple[float, float] = (0.0, 0.0),
 ) -> TransportFit:
     """Both fits. ``excess``: noise factors (hall, longitudinal); above 1 they widen. ``inner``:
     rho_0 from a smaller part of the window, taken where it is more certain. ``tail``: where a peak
     around zero was left out, its mean and the level far from it. Its tail may reach into the
-    window: the smaller of rho_0's distances to the two goes into the model part."""
+    window: the smaller of rho_0's distances to the two goes into the model part. ``digits_ohm``:
+    last digits of the readings (hall, longitudinal)."""
     alpha = 1.0 - setup.target.confidence
     line = fit_columns(hall, models.hall)
     offset = line.theta[0] if line is not None else None
@@ -209,7 +215,12 @@ def fit_transport(
         reach = min((abs(rho_0.value - level) for level in tail), default=0.0) if tail else 0.0
         far = far_level(along, models.longitudinal, phis.scale_T)
         from_far = abs(rho_0.value - far) if far is not None else 0.0
-        rho_0 = replace(rho_0, floor=math.hypot(rho_0.floor, reach, from_far))
+        rho_0 = replace(
+            rho_0, floor=math.hypot(rho_0.floor, reach, from_far),
+            rounding=left_by_rounding(rho_0.reading2, digits_ohm[1]),
+        )
+    if slope is not None and digits_ohm[0]:
+        slope = replace(slope, rounding=_slope_rounding(slope, hall, digits_ohm[0], phis.scale_T))
     return TransportFit(slope, offset, offset_error, rho_0, excess[0], excess[1])
 
 
@@ -241,6 +252,28 @@ def zero_field(
     lowest = regressors("longitudinal", pool.low_T / phis.scale_T)
     beyond = fit.predict((*lowest[:OTHER_PARITY], 0.0))[0] - found.value
     return replace(found, floor=math.hypot(found.floor, beyond))
+
+
+def left_by_rounding(variance: float, digit: float) -> float:
+    """What readings of that variance, rounded to a last digit, may be off by in their mean, however many
+    they are: half a digit where their noise is nothing against it, nothing where it is more than half
+    of one (noise dithers: the first Fourier component of the rounding error)."""
+    scatter = math.sqrt(variance) / digit if digit else math.inf
+    if scatter > 2.0:
+        return 0.0
+    noise2 = max(0.0, scatter * scatter - 1 / 12)
+    return digit / 2 * math.exp(-2 * math.pi**2 * noise2)
+
+
+def _slope_rounding(slope: Coefficient, pool: Pool, digit: float, scale_T: float) -> float:
+    """The same for the slope: opposite at both ends, and averaged over the digits in between."""
+    both = pool.positive and pool.negative
+    width = (pool.high_T + (pool.high_T if both else -pool.low_T)) / scale_T
+    rounding = left_by_rounding(slope.reading2, digit)
+    if width <= 0 or not rounding:
+        return 0.0
+    passed = max(1.0, abs(slope.value) * width / digit)
+    return 2 * rounding / width / math.sqrt(passed)
 
 
 def far_level(pool: Pool, columns: tuple[int, ...], scale_T: float) -> float | None:
@@ -283,4 +316,5 @@ def _coefficient(
     return Coefficient(
         fit.theta[j], fit.standard_error(j), fit.evidence(j, mixture), fit.half_width(j, mixture, alpha),
         bend, bend_error, effective, math.sqrt(fit.variance), order, floor * abs(fit.theta[j]),
+        reading2=fit.s2,
     )

@@ -76,11 +76,13 @@ class WindowedFit:
         self.models = Models()
         self.shapes = Shapes()
         self._time_s = [math.inf, -math.inf]
+        self.digits_ohm = dict.fromkeys(ROLES, 0.0)
 
     def add(self, sweep: int, pair: Pair) -> float:
         """Take one usable pair; returns its inflation by the filter."""
         self._now = None
         self._time_s = [min(self._time_s[0], pair.time_s), max(self._time_s[1], pair.time_s)]
+        self.digits_ohm[pair.role] = pair.digit_ohm
         kappa = self._inflation[pair.role].next(pair.time_s, pair.stages)
         if self._segments[pair.role].add(sweep, pair.time_s, pair.field_T, pair.rho_ohm, kappa):
             self._closed(pair.role)

@@ -16,6 +16,8 @@ CLEAR = 4.5
 MATTERS = 0.1
 """Share of the target that the drift must come to, over hold and ramp, to be said."""
 FEWEST = 24
+ALONE = 0.3
+"""Share of the longitudinal drift below which the Hall resistivity is said to stand."""
 
 
 class _Hold:
@@ -63,7 +65,7 @@ class DriftWatch:
         self._limit = MATTERS * min(target.sheet_density, target.mobility)
         self._field_T: float | None = None
         self._holds: dict[str, _Hold] = {}
-        self._seen: float | None = None
+        self._seen: tuple[float, bool] | None = None
         self._seen_over_s = 0.0
 
     def add(self, pair: Pair) -> None:
@@ -78,20 +80,51 @@ class DriftWatch:
 
     def cautions(self) -> Iterator[Caution]:
         """The drift, if one was seen."""
-        known = [one for one in (hold.drift() for hold in self._holds.values()) if one]
-        if known:
-            weights = [1.0 / max(error, 1e-300) ** 2 for _, error in known]
-            mean = sum(w * value for w, (value, _) in zip(weights, known, strict=True))
-            mean, error = mean / sum(weights), 1.0 / math.sqrt(sum(weights))
-            over_s = max(hold.last_s - hold.start_s for hold in self._holds.values())
-            if abs(mean) > CLEAR * error and abs(mean) * (self._duration_s + over_s) > self._limit:
-                self._seen, self._seen_over_s = mean, over_s
-            elif over_s > self._seen_over_s:
-                self._seen = None
-        if self._seen is not None:
+        found = self._found()
+        if found is not None:
+            self._seen = found
+        if self._seen is None:
+            return
+        per_s, alone = self._seen
+        size = f"{100 * 600 * per_s:.2g} % in ten minutes"
+        if alone:
+            yield Caution(
+                "heating",
+                f"at a standing field the longitudinal resistivity alone drifts, by {size}, and the "
+                "Hall resistivity does not: the mobility changes, as it does when the sample warms "
+                "up or cools down; wait, ramp slower or use less current.",
+            )
+        else:
             yield Caution(
                 "drift",
-                f"at a standing field the resistivities drift by {100 * 600 * self._seen:.2g} % in "
-                "ten minutes: the sample, its temperature, the current or an amplifier is not "
-                "settled; wait, or look for the cause.",
+                f"at a standing field the resistivities drift by {size}: the sample, its "
+                "temperature, the current or an amplifier is not settled; wait, or look for the "
+                "cause.",
             )
+
+    def _found(self) -> tuple[float, bool] | None:
+        """(relative drift per second, whether the longitudinal resistivity drifts alone)."""
+        known = {role: drift for role, hold in self._holds.items() if (drift := hold.drift())}
+        if not known:
+            return None
+        over_s = max(hold.last_s - hold.start_s for hold in self._holds.values())
+        matters = self._limit / (self._duration_s + over_s)
+        along, hall = known.get("longitudinal"), known.get("hall")
+        if along is not None and hall is not None and _clear(along, matters):
+            apart = along[0] - hall[0], math.hypot(along[1], hall[1])
+            if _clear(apart, matters) and abs(hall[0]) < ALONE * abs(along[0]):
+                self._seen_over_s = over_s
+                return along[0], True
+        weights = [1.0 / max(error, 1e-300) ** 2 for _, error in known.values()]
+        mean = sum(w * value for w, (value, _) in zip(weights, known.values(), strict=True))
+        both = mean / sum(weights), 1.0 / math.sqrt(sum(weights))
+        if _clear(both, matters):
+            self._seen_over_s = over_s
+            return both[0], False
+        if over_s > self._seen_over_s:
+            self._seen = None
+        return None
+
+
+def _clear(drift: tuple[float, float], matters: float) -> bool:
+    return abs(drift[0]) > max(CLEAR * drift[1], matters)

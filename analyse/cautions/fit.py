@@ -18,6 +18,10 @@ from analyse.window import Bounds
 
 MIN_EFFECTIVE = 20.0
 FEWEST_EFFECTIVE = 10.0
+KNOWN = 0.3
+"""Relative half-width from which on a coefficient is known well enough to speak of its bend."""
+DIGIT_MATTERS = 0.3
+"""Share of the target that the last digit takes up when it is said."""
 BEND_CERTAIN = 4.5
 """Standard errors beyond the target at which a bend is called one; it is looked at all the time."""
 
@@ -62,6 +66,7 @@ def fit_cautions(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
     else:
         yield from _straightness(facts.fit, setup.target)
         yield from _second_carrier(facts.shapes, setup.target)
+    yield from _coarse_digit(facts.fit, setup.target)
     if _exchanged(facts):
         yield Caution(
             "channels_exchanged",
@@ -197,7 +202,7 @@ def _straightness(fit: TransportFit, target: Target) -> Iterator[Caution]:
         if coefficient is None or not math.isfinite(coefficient.bend_error):
             continue
         size = abs(coefficient.value)
-        if coefficient.effective < MIN_EFFECTIVE or not size:
+        if coefficient.effective < MIN_EFFECTIVE or not coefficient.half_width < KNOWN * size:
             continue
         certain = BEND_CERTAIN * heavy_tails(coefficient.evidence.nu - 1)
         if abs(coefficient.bend) - certain * coefficient.bend_error > limit * size:
@@ -206,6 +211,24 @@ def _straightness(fit: TransportFit, target: Target) -> Iterator[Caution]:
                 f"the {what} bends within the window; taking the bend into account moves the "
                 f"{number} by {100 * abs(coefficient.bend) / size:.2g} %: a second kind of "
                 "carrier, a current that depends on field, or heating.",
+            )
+
+
+def _coarse_digit(fit: TransportFit, target: Target) -> Iterator[Caution]:
+    for role, coefficient, limit in (
+        ("Hall", fit.slope, target.sheet_density),
+        ("longitudinal", fit.rho_0, target.mobility),
+    ):
+        if coefficient is None or coefficient.effective < FEWEST_EFFECTIVE:
+            continue
+        if coefficient.rounding > DIGIT_MATTERS * limit * abs(coefficient.value) > 0.0:
+            yield Caution(
+                "coarse_digit",
+                f"the last digit of the {role} readings is coarser than their noise and leaves the "
+                "result open by "
+                f"{100 * coefficient.rounding / abs(coefficient.value):.2g} %: set a smaller range, "
+                "or more digits; the intervals reckon with it.",
+                touches_answer=False,
             )
 
 

@@ -17,8 +17,12 @@ SAG = 0.02
 """Share by which the known current may change before it is said."""
 FLAT_INTEGRAL_TIMES = 8.0
 """A filter's noise does not stand still within a digit for so many of its integral times."""
+BAD = ("lost", "wild", "overload")
+"""Kinds that can't be used; a glitch counts once, however long the filter's answer to it."""
 UNUSABLE = 0.2
 """Share of the last readings that can't be used at which that is said."""
+LOOK_EVERY = 5
+"""Readings between two looks at the phase."""
 FLAT = 12
 """Readings in a row, equal to the last digit while the field moves, that can't be real."""
 
@@ -30,7 +34,9 @@ class RoleWatch:
         self.role = role
         self.counts: dict[str, int] = {}
         self._recent: deque[str] = deque(maxlen=MEMORY)
+        self._bad = 0
         self._quadrature: deque[tuple[float, float]] = deque(maxlen=MEMORY)
+        self._angle_deg: float | None = None
         self._flat: list[Pair] = []
         self._run = 0
         self._current: list[float] = []
@@ -40,7 +46,10 @@ class RoleWatch:
         """Take note of one pair."""
         self.counts[pair.kind] = self.counts.get(pair.kind, 0) + 1
         again = pair.kind == "wild" and self._recent and self._recent[-1] in ("wild", "after wild")
+        if len(self._recent) == MEMORY:
+            self._bad -= self._recent[0] in BAD
         self._recent.append("after wild" if again else pair.kind)
+        self._bad += self._recent[-1] in BAD
         if pair.kind == "ok":
             if self._flat and pair.rho_ohm != self._flat[0].rho_ohm:
                 self._flat.clear()
@@ -49,30 +58,30 @@ class RoleWatch:
             self._note_current(pair.current_A)
         if pair.kind == "ok" and pair.quadrature_ohm is not None:
             self._quadrature.append((pair.rho_ohm, pair.quadrature_ohm))
+            if self.counts["ok"] % LOOK_EVERY == 0:
+                self._angle_deg = self._phase_angle()
 
     def cautions(self) -> Iterator[Caution]:
         """Cautions about this role's readings that hold now."""
-        recent = list(self._recent)
-        overloads = recent[-RECENT:].count("overload")
+        recent = [self._recent[-k] for k in range(1, min(RECENT, len(self._recent)) + 1)]
+        overloads = recent.count("overload")
         if overloads:
             yield Caution(
                 "overload",
-                f"{overloads} of the last {len(recent[-RECENT:])} {self.role} readings are "
+                f"{overloads} of the last {len(recent)} {self.role} readings are "
                 "overloads or out of range: set a larger range; they are not used.",
             )
-        lost = recent[-RECENT:].count("lost")
-        if len(recent) >= RECENT and lost == RECENT:
+        if recent.count("lost") == RECENT:
             yield Caution(
                 "stream_silent",
                 f"no usable {self.role} reading among the last {RECENT}: look at the instrument, "
                 "its line and its settings.",
             )
-        # a glitch counts once, however long the filter's answer to it
-        bad = sum(kind in ("lost", "wild", "overload") for kind in recent)
-        if len(recent) >= MEMORY // 2 and bad > UNUSABLE * len(recent):
+        seen = len(self._recent)
+        if seen >= MEMORY // 2 and self._bad > UNUSABLE * seen:
             yield Caution(
                 "unusable_readings",
-                f"{bad} of the last {len(recent)} {self.role} readings can't be used (no answer, "
+                f"{self._bad} of the last {seen} {self.role} readings can't be used (no answer, "
                 "overload, or wild): look at the line, the range and for interference.",
             )
         yield from self._phase()
@@ -80,17 +89,22 @@ class RoleWatch:
         if self.role == "hall":
             yield from self._sagging()
 
-    def _phase(self) -> Iterator[Caution]:
+    def _phase_angle(self) -> float | None:
+        """By how much the signal is off the phase, if it is clearly; None if not."""
         if len(self._quadrature) < RECENT:
-            return
+            return None
         in_phase = math.sqrt(sum(x * x for x, _ in self._quadrature))
         across = math.sqrt(sum(y * y for _, y in self._quadrature))
         aligned = abs(sum(x * y for x, y in self._quadrature))
         if across > 0.1 * in_phase and aligned > 0.7 * in_phase * across:
-            angle = math.degrees(math.atan2(across, in_phase))
+            return math.degrees(math.atan2(across, in_phase))
+        return None
+
+    def _phase(self) -> Iterator[Caution]:
+        if self._angle_deg is not None:
             yield Caution(
                 "phase_wrong",
-                f"the {self.role} signal stands {angle:.0f} degrees off the reading's phase: "
+                f"the {self.role} signal stands {self._angle_deg:.0f} degrees off the reading's phase: "
                 "check the lock-in's phase, the wiring and capacitive pick-up.",
             )
 

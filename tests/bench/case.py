@@ -29,6 +29,7 @@ Codes = tuple[str, ...]
 class Case:
     """One simulated ramp with its truth. ``told`` is what the estimator is told of the rig, where
     that differs from how it is; ``level_bends``: rho_xx has a part quadratic in field;
+    ``clean``: nothing is the matter with rig or readings, so that cautions have no reason;
     ``exact_line``: all is as the plain model says, so that the efficiency at the end has sense."""
 
     scenario: str
@@ -46,6 +47,7 @@ class Case:
     told: Rig | None = None
     level_bends: bool = False
     exact_line: bool = False
+    clean: bool = True
     relative_uncertainty: dict[str, float] = field(default_factory=dict)
 
     def swept_at(self, time_s: float) -> float:

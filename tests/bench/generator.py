@@ -66,6 +66,8 @@ class Rig:
         rho_xx * squares + |rho_xy| grows.
     gain_drift_per_s, hall_drift_V_per_s
         Drift of the current with time, relative, and of the Hall voltage's offset.
+    warming_per_s
+        Drift of rho_xx with time, relative.
     phase_deg
         Angle by which both lock-ins are off.
     """
@@ -80,6 +82,7 @@ class Rig:
     contact_ohm: float = 0.0
     source_to_drain_squares: float = 0.0
     gain_drift_per_s: float = 0.0
+    warming_per_s: float = 0.0
     hall_drift_V_per_s: float = 0.0
     phase_deg: float = 0.0
     reads_current: bool = False
@@ -194,6 +197,7 @@ def _at_sample(channel: str, sample: Sample, rig: Rig, fields_T: Array, times_s:
     """A channel's voltage before its filter."""
     rho_xx, rho_xy = sample.rho(fields_T)
     after = np.maximum(times_s, 0.0)
+    rho_xx = rho_xx * (1.0 + rig.warming_per_s * after)
     current = rig.sagging(rho_xx, rho_xy) * (1.0 + rig.gain_drift_per_s * after)
     if channel == "current":
         return np.asarray(current * rig.shunt_ohm)

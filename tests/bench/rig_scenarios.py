@@ -29,7 +29,7 @@ def _overloaded(case: Case, rng: np.random.Generator) -> None:
 @scenario
 def overload_in_mid_ramp(rng: np.random.Generator) -> dict[str, object]:
     """One or both lock-ins say overload for a stretch."""
-    return {"setting": draw(rng, Ranges()), "spoil": _overloaded, "required": ("overload",),
+    return {"clean": False, "setting": draw(rng, Ranges()), "spoil": _overloaded, "required": ("overload",),
             "allowed": ("unusable_readings", "clipped", "stream_silent")}
 
 
@@ -40,7 +40,7 @@ def _clipped(case: Case, rng: np.random.Generator) -> None:
 @scenario
 def clipped_without_a_word(rng: np.random.Generator) -> dict[str, object]:
     """The Hall reading stays at the end of its range for the rest of the ramp."""
-    return {"setting": draw(rng, Ranges()), "spoil": _clipped, "required": ("clipped",),
+    return {"clean": False, "setting": draw(rng, Ranges()), "spoil": _clipped, "required": ("clipped",),
             "allowed": ("overload", "unusable_readings", "oscillations", "quick_readings_apart",
                         "not_straight")}
 
@@ -56,7 +56,7 @@ def _glitches(case: Case, rng: np.random.Generator) -> None:
 @scenario
 def range_glitch(rng: np.random.Generator) -> dict[str, object]:
     """One to three changes of range."""
-    return {"setting": draw(rng, Ranges()), "spoil": _glitches, "allowed": ("noise_high",)}
+    return {"clean": False, "setting": draw(rng, Ranges()), "spoil": _glitches, "allowed": ("noise_high",)}
 
 
 @scenario
@@ -76,6 +76,26 @@ def drift_1_percent(rng: np.random.Generator) -> dict[str, object]:
             "forbidden": True, "required": ("drift",),
             "allowed": ("not_straight", "noise_high", "field_stuck", "contacts_misaligned",
                         "field_offset", "current_sag", "heating")}
+
+
+@scenario
+def heating(rng: np.random.Generator) -> dict[str, object]:
+    """The sample warms up: rho_xx alone moves by 2 to 10 % in ten minutes; a hold shows it."""
+    wait, drift = float(rng.uniform(120.0, 300.0)), log_uniform(rng, (0.02, 0.1)) / 600.0
+    while True:
+        setting = draw(rng, Ranges(noise_share=(0.01, 0.06), crossing_share=(0.0, 0.1)))
+        start = setting.largest_T * float(rng.uniform(0.1, 0.3))
+        rho_0, slope = setting.sample.rho_0, abs(setting.sample.hall_slope)
+        level = setting.rig.current_A * min(rho_0 * setting.rig.squares, slope * start)
+        error = setting.rig.hall.density_V_per_rtHz * np.sqrt(6.0 / wait**3) / level
+        if drift > 20.0 * error:
+            break
+    rig = replace(setting.rig, warming_per_s=drift * float(rng.choice((1.0, -1.0))))
+    profile = path([start, -setting.largest_T], setting.rate_T_per_s, wait_s=wait)
+    return {"setting": setting, "rig": rig, "profile": profile, "covered": False,
+            "forbidden": True, "required": ("heating",),
+            "allowed": ("drift", "not_straight", "noise_high", "oscillations",
+                        "contacts_misaligned", "field_offset")}
 
 
 @scenario
@@ -154,7 +174,7 @@ def flicker_noise(rng: np.random.Generator) -> dict[str, object]:
     corner = log_uniform(rng, (0.03, 1.0))
     hall, along = (replace(one, corner_Hz=corner) for one in (setting.rig.hall,
                                                               setting.rig.longitudinal))
-    return {"setting": setting, "rig": replace(setting.rig, hall=hall, longitudinal=along),
+    return {"clean": False, "setting": setting, "rig": replace(setting.rig, hall=hall, longitudinal=along),
             "allowed": ("noise_high", "drift"), "always": False}
 
 
@@ -175,7 +195,7 @@ def _silenced(case: Case, rng: np.random.Generator) -> None:
 @scenario
 def stream_silent(rng: np.random.Generator) -> dict[str, object]:
     """One lock-in does not answer any more from mid-ramp on."""
-    return {"setting": draw(rng, Ranges()), "spoil": _silenced, "required": ("stream_silent",),
+    return {"clean": False, "setting": draw(rng, Ranges()), "spoil": _silenced, "required": ("stream_silent",),
             "allowed": ("unusable_readings",)}
 
 
@@ -184,6 +204,20 @@ def lost_answers(rng: np.random.Generator) -> dict[str, object]:
     """5 % of the answers are lost, on every channel."""
     return {"setting": draw(rng, Ranges()), "allowed": ("unusable_readings",),
             "spoil": lambda case, later: faults.lose(case.streams, 0.05, later)}
+
+
+@scenario
+def coarse_digit(rng: np.random.Generator) -> dict[str, object]:
+    """The lock-ins' ranges are too large: their last digit is half of their noise to five times it."""
+    setting = draw(rng, Ranges())
+    rig = setting.rig
+    lockins = {
+        name: replace(lockin, resolution_V=log_uniform(rng, (0.5, 5.0)) * float(
+            np.sqrt(lockin.stages.covariance(lockin.density_V_per_rtHz)[-1, -1])))
+        for name, lockin in (("hall", rig.hall), ("longitudinal", rig.longitudinal))
+    }
+    return {"setting": setting, "rig": replace(rig, **lockins), "clean": False,
+            "allowed": ("coarse_digit", "clipped")}
 
 
 @scenario

@@ -41,14 +41,11 @@ def outcomes(scenarios: list[str], ramps: int, jobs: int, store: Store) -> Found
     """All ramps of the scenarios, over processes; says on stderr when a scenario is done."""
     found: Found = {}
     for name in scenarios:
-        kept = store.load(name, ramps)
-        if kept is not None:
-            found[name] = kept
-    wanted = [name for name in scenarios if name not in found]
-    work = [(name, index) for name in wanted for index in range(ramps)]
+        found[name] = store.load(name, ramps)
+    work = [(name, index) for name in scenarios for index in range(len(found[name]), ramps)]
     start = time.monotonic()
     for done in _all(work, jobs):
-        so_far = found.setdefault(done.scenario, [])
+        so_far = found[done.scenario]
         so_far.append(done)
         if len(so_far) == ramps:
             store.save(done.scenario, so_far)

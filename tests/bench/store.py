@@ -31,17 +31,15 @@ class Store:
         if folder is not None:
             folder.mkdir(parents=True, exist_ok=True)
 
-    def load(self, scenario: str, ramps: int) -> list[Outcome] | None:
-        """The first so many ramps of a scenario, or None if they are not all there."""
+    def load(self, scenario: str, ramps: int) -> list[Outcome]:
+        """The first ramps of a scenario, at most so many, as far as they are there."""
         if self.folder is None:
-            return None
+            return []
         try:
             digest, outcomes = pickle.loads((self.folder / f"{scenario}.pickle").read_bytes())
         except FileNotFoundError:
-            return None
-        if digest != self._digest or len(outcomes) < ramps:
-            return None
-        return list(outcomes[:ramps])
+            return []
+        return list(outcomes[:ramps]) if digest == self._digest else []
 
     def save(self, scenario: str, outcomes: list[Outcome]) -> None:
         """Keep all outcomes of a scenario, in place of older ones."""

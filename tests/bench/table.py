@@ -78,7 +78,7 @@ def failings(ramps: Sequence[Outcome]) -> list[str]:
     if first.required and not at_least(_count(ramps, lambda one: one.said), total, ALMOST_ALWAYS):
         missed.append("caution not shown")
     false = _count(ramps, lambda one: bool(one.false_cautions))
-    if not first.forbidden and not at_most(false, total, ALMOST_NEVER):
+    if first.clean and not first.forbidden and not at_most(false, total, ALMOST_NEVER):
         missed.append("false cautions")
     excess = [one.excess for one in ramps if one.excess is not None]
     if excess and any(1.0 + np.mean(part) > EFFICIENCY for part in zip(*excess)):

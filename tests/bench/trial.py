@@ -78,6 +78,7 @@ class Outcome:
     forbidden: bool
     required: tuple[str, ...]
     allowed: tuple[str, ...]
+    clean: bool
     estimates: int = 0
     stop_T: float = math.inf
     stable_at_end: bool = False
@@ -156,7 +157,7 @@ def _signal(lockin: LockIn) -> Signal:
 def run(case: Case) -> Outcome:
     """Feed a case to the estimator, reading by reading."""
     out = Outcome(case.scenario, case.index, case.covered, case.always, case.forbidden,
-                  case.required, case.allowed, kept={name: Kept() for name in NUMBERS})
+                  case.required, case.allowed, case.clean, kept={name: Kept() for name in NUMBERS})
     truths = dict(zip(NUMBERS, (
         case.sample.density_per_m2, case.sample.mobility_m2_per_V_s, case.sample.scattering_time_s
     )))
