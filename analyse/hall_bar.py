@@ -60,3 +60,21 @@ class HallBar:
             base.fermi_velocity_m_per_s if base is not None and mass is None else None,
         )
         object.__setattr__(self, "carrier_gas", gas)
+
+
+TERMS = 20
+
+
+def finite_length_factor(squares: float) -> float:
+    """Hall voltage half-way between two contacts as wide as the bar, over that of a long bar.
+
+    ``squares``: length over width from contact to contact. They short-circuit part of the Hall voltage.
+    From Laplace's equation for a small Hall angle, G = 1 - (8 / pi^2) sum over odd k of
+    1 / (k^2 cosh(k pi L / 2 W)); see Lippmann, Kuhrt, Z. Naturforsch. 13a, 462 (1958). Raises ValueError
+    if not positive.
+    """
+    if not squares > 0:
+        raise ValueError(f"squares must be positive, not {squares!r}")
+    odd = range(1, 2 * TERMS, 2)
+    half = math.pi * squares / 2
+    return 1.0 - 8 / math.pi**2 * sum(1 / (k * k * math.cosh(min(k * half, 700.0))) for k in odd)

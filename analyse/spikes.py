@@ -15,6 +15,8 @@ from typing import Generic, TypeVar
 
 Item = TypeVar("Item")
 
+SAME = 1e-6
+"""Relative difference below which two departures are the same."""
 ROUNDING = 1e-9
 """Departures below this share of a value are none."""
 SILENT = 5
@@ -25,10 +27,10 @@ class SpikeGate(Generic[Item]):
     """Passes items on in order, saying of each whether it is wild.
 
     The usual step is the trimmed mean of the last ``memory`` absolute steps between good
-    readings, and not less than the last digit. The first ``memory / 4 + 1`` readings are held back
-    until they can be judged together, by the median of their steps. The last digit is what readings that are mostly equal now and then differ by: the
-    smallest departure that was seen twice. A good reading is passed
-    on at once, one that jumps only when it is known what it was.
+    readings, and not less than the last digit, which readings of few digits show by their
+    departures coming again. The first ``memory / 4 + 1`` readings are held back until they can be
+    judged together, by the median of their steps. A good reading is passed on at once, one that
+    jumps only when it is known what it was.
     """
 
     def __init__(
@@ -42,6 +44,7 @@ class SpikeGate(Generic[Item]):
         self._good: float | None = None
         self._held: list[tuple[float | None, Item]] = []
         self._departures: list[float] = []
+        self._repeated = False
         self._first: list[tuple[float | None, Item]] | None = []
 
     def push(self, value: float, item: Item) -> list[tuple[Item, bool]]:
@@ -53,8 +56,8 @@ class SpikeGate(Generic[Item]):
         if self._good is None:
             return [self._accept(value, item)]
         away = abs(value - self._good)
-        if away > ROUNDING * abs(self._good) and not self._held:
-            self._departures = sorted([*self._departures, away])[:8]
+        if not self._held and away > ROUNDING * abs(self._good):
+            self._note_departure(away)
         usual = self._usual_step()
         if not self._held:
             if away <= self.factor * usual:
@@ -142,10 +145,17 @@ class SpikeGate(Generic[Item]):
         rounding = ROUNDING * abs(self._good) if self._good is not None else 0.0
         return max(sum(kept) / len(kept), self.last_digit, rounding, 1e-300)
 
+    def _note_departure(self, away: float) -> None:
+        """Keep the smallest different ones; readings of a digit fall on few values, again and again."""
+        known = next((one for one in self._departures if abs(away - one) <= SAME * one), None)
+        if known is not None:
+            self._repeated = True
+        else:
+            self._departures = sorted([*self._departures, away])[:8]
+
     @property
     def last_digit(self) -> float:
-        """The smallest departure that was seen twice; 0 while there is none."""
-        for one, two in itertools.pairwise(self._departures):
-            if two <= 1.01 * one:
-                return two
-        return 0.0
+        """The smallest distance between departures, zero among them; 0 while none came again."""
+        if not self._repeated or not self._departures:
+            return 0.0
+        return min(b - a for a, b in itertools.pairwise((0.0, *self._departures)))

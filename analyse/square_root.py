@@ -32,9 +32,15 @@ class Solution:
 
 
 class SquareRootInformation:
-    """Triangle of [X | y] with p regressors; errors are taken as of equal variance."""
+    """Triangle of [X | y] with p regressors; errors are taken as of equal variance.
 
-    __slots__ = ("count", "p", "rows")
+    ``residual`` is the recursive residual of the last observation, (y - x'b) / sqrt(1 + x'(X'X)^-1 x)
+    with b and X'X of those before it: what was not foreseen, of the errors' own variance and
+    independent of those before (Brown, Durbin, Evans, JRSS B 37, 149 (1975)); 0 while they do not
+    determine b.
+    """
+
+    __slots__ = ("count", "p", "residual", "rows")
 
     def __init__(self, p: int) -> None:
         if p < 1:
@@ -42,6 +48,7 @@ class SquareRootInformation:
         self.p = p
         self.rows = [[0.0] * (p + 1) for _ in range(p + 1)]
         self.count = 0
+        self.residual = 0.0
 
     def update(self, regressors: Sequence[float], y: float) -> None:
         """Take one observation. Raises ValueError for a wrong length or numbers not finite."""
@@ -52,6 +59,7 @@ class SquareRootInformation:
             raise ValueError("regressors and y must be finite")
         self._rotate(new)
         self.count += 1
+        self.residual = new[self.p]
 
     def _rotate(self, new: list[float]) -> None:
         width = self.p + 1
