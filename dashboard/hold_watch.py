@@ -20,6 +20,7 @@ from acquire.hold.command import NOT_SENT, REACHED
 from acquire.hold.keeper import Answer, Keeper, Step
 from acquire.hold.words import GOOD_ENOUGH
 from acquire.run_folder import RunFolder
+from analyse.cautions import NOTES
 from dashboard.hold_arming import typed_code
 from dashboard.hold_process import HoldProcess, Said
 from dashboard.hold_trial import HoldTrial
@@ -29,11 +30,6 @@ from dashboard.view import View
 LOOPBACK_ANY = "tcp://127.0.0.1:0"
 MOST_REQUESTS = 10  # a look
 RING_EVERY_S, RING_FOR_S = 2.0, 30.0  # the terminal's bell, at an alarm
-
-HARMLESS = frozenset(
-    {"oscillations", "ramp_too_fast", "field_offset", "contacts_misaligned", "quick_readings_apart"}
-)
-"""Cautions that never touch the answer; any other disarms."""
 
 Tell = Callable[[str, str, str], None]
 """Kind, code and text of an event of the run."""
@@ -163,7 +159,7 @@ class HoldWatch(Closing):
         down = [name for name, state in states.items() if state != "ready"]
         self._trouble = f"{', '.join(down)} not ready" if down else ""
         for name, bar in progress.summary.bars.items():
-            if codes := sorted(set(bar.cautions) - HARMLESS):
+            if codes := sorted(set(bar.cautions) - NOTES):
                 self._trouble = f"{name} has the caution {', '.join(codes)}"
                 self._keeper.unexpected(self._trouble)
 

@@ -28,7 +28,8 @@ from acquire.laboratory.bench import Bench
 from acquire.laboratory.server import LaboratoryServer
 from acquire.run_folder import create_run, open_run
 from analyse.estimate_table import ESTIMATES
-from dashboard.hold_watch import HARMLESS, HoldWatch
+from analyse.cautions import NOTES
+from dashboard.hold_watch import HoldWatch
 from dashboard.progress import Progress
 from dashboard.streams import run_tables
 
@@ -460,8 +461,8 @@ def test_the_cautions_that_disarm_are_those_of_the_readme() -> None:
     readme = (Path(__file__).parents[1] / "README.md").read_text(encoding="utf-8")
     part = readme.split("## Cautions", 1)[1].split("\n## ", 1)[0]
     rows = re.findall(r"^\| `(\w+)` \|.*\| ([^|]+) \|$", part, re.MULTILINE)
-    assert {code for code, touches in rows if touches == "no"} == HARMLESS
-    assert len(rows) > len(HARMLESS)
+    assert {code for code, touches in rows if touches == "no"} == NOTES
+    assert len(rows) > len(NOTES)
 
 
 def test_without_a_hold_section_there_is_nobody_to_ask(tmp_path: Path) -> None:

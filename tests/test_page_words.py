@@ -20,8 +20,9 @@ from analyse.replay import Record, RowMaker, merge_by_time, replay_readings
 from analyse.setup import Target
 from analyse.sweeps import Sweeps
 from analyse.verdict import Facts, what_is_missing
+from analyse.cautions import NOTES
 from dashboard.page.budget_panel import budget, budget_panel
-from dashboard.page.caution_panel import NOTES, caution_panel, touching
+from dashboard.page.caution_panel import caution_panel, touching
 from dashboard.page.field_panel import ahead
 from dashboard.page.html import LONGEST, Html, element, visible
 from dashboard.page.number_panel import verdict_panel

@@ -12,6 +12,8 @@ import pytest
 from bench.scenarios import make
 from bench.trial import Outcome, run
 
+pytestmark = pytest.mark.timeout(600)  # half a minute of arithmetic, more on a busy machine
+
 RIGHT = ("textbook", "holes", "fixed_ramp", "smooth_magnetoresistance", "ramps_as_they_are",
          "up_and_down")
 WRONG = ("parallel_conduction", "drift_1_percent", "channels_exchanged", "field_stuck",

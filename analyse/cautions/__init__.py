@@ -9,4 +9,10 @@ from analyse.cautions.field import FieldWatch
 from analyse.cautions.fit import FitFacts, fit_cautions
 from analyse.cautions.readings import RoleWatch
 
-__all__ = ["DriftWatch", "FieldWatch", "FitFacts", "RoleWatch", "fit_cautions"]
+NOTES = frozenset((
+    "oscillations", "ramp_too_fast", "field_offset", "contacts_misaligned", "coarse_digit",
+    "quick_readings_apart",
+))
+"""Codes of cautions that never touch the answer: told, but in the way of nothing."""
+
+__all__ = ["NOTES", "DriftWatch", "FieldWatch", "FitFacts", "RoleWatch", "fit_cautions"]

@@ -2,20 +2,10 @@
 
 from __future__ import annotations
 
+from analyse.cautions import NOTES
 from dashboard.page.curves import Curves
 from dashboard.page.html import Html, div, span
 from dashboard.page.store import BarFacts
-
-NOTES = frozenset(
-    {
-        "oscillations",
-        "ramp_too_fast",
-        "field_offset",
-        "contacts_misaligned",
-        "quick_readings_apart",
-    }
-)
-"""Codes that never touch the answer."""
 
 _OPEN = "open caution: "
 

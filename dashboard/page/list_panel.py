@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from acquire.config import Rig
-from dashboard.page.caution_panel import NOTES
+from analyse.cautions import NOTES
 from dashboard.page.html import NOTHING, Html, div, element, join, span
 from dashboard.page.presence import StreamLine
 from dashboard.page.store import Event, RunFacts

@@ -68,6 +68,9 @@ class Rig:
         Drift of the current with time, relative, and of the Hall voltage's offset.
     warming_per_s
         Drift of rho_xx with time, relative.
+    common_noise
+        Share of the noise's variance that both voltages have in common; negative: with opposite
+        signs. Both lock-ins must be alike then.
     phase_deg
         Angle by which both lock-ins are off.
     """
@@ -83,6 +86,7 @@ class Rig:
     source_to_drain_squares: float = 0.0
     gain_drift_per_s: float = 0.0
     warming_per_s: float = 0.0
+    common_noise: float = 0.0
     hall_drift_V_per_s: float = 0.0
     phase_deg: float = 0.0
     reads_current: bool = False
@@ -131,10 +135,17 @@ def simulate(
 ) -> Streams:
     """One ramp: streams "field" (T), "longitudinal" and "hall" (V), and "current" if it is read."""
     streams = {"field": _field(rig.meter, profile, rng)}
+    shared: Array | None = None
     for channel, lockin in (("longitudinal", rig.longitudinal), ("hall", rig.hall)):
         times = reading_times(lockin, profile)
         clean = noise_free(channel, sample, rig, profile, times)
         noise = draw_lockin_noise(lockin, len(times), rng)
+        if rig.common_noise:
+            sign = math.copysign(1.0, rig.common_noise) if channel == "hall" else 1.0
+            if shared is None:
+                shared = draw_lockin_noise(lockin, len(times), rng)
+            common = abs(rig.common_noise)
+            noise = math.sqrt(1.0 - common) * noise + sign * math.sqrt(common) * shared
         turn = math.radians(rig.phase_deg)
         x = _rounded(clean * math.cos(turn) + noise, lockin.resolution_V)
         y = None

@@ -156,6 +156,15 @@ def up_and_down(rng: np.random.Generator) -> dict[str, object]:
 
 
 @scenario
+def common_noise(rng: np.random.Generator) -> dict[str, object]:
+    """Half of the noise of both voltages is the same, with equal or opposite signs."""
+    setting = draw(rng, Ranges())
+    rig = replace(setting.rig, longitudinal=setting.rig.hall,
+                  common_noise=0.5 * float(rng.choice((1.0, -1.0))))
+    return {"setting": setting, "rig": rig}
+
+
+@scenario
 def ramps_as_they_are(rng: np.random.Generator) -> dict[str, object]:
     """Holds, changes of rate, steps."""
     setting = draw(rng, Ranges())
