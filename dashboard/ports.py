@@ -18,6 +18,17 @@ def is_free(port: int, address: str = LOOPBACK) -> bool:
     return _refusal(port, address) is None
 
 
+def has_address(host: str) -> bool:
+    """True if this computer has this address, given as a number."""
+    family = socket.AF_INET6 if ":" in host else socket.AF_INET
+    with socket.socket(family) as trial:
+        try:
+            trial.bind((host, 0))
+        except OSError:
+            return False
+    return True
+
+
 def listens(port: int, address: str = LOOPBACK) -> bool:
     """True if somebody takes connections on this port of an own address."""
     with _socket(address) as caller:

@@ -26,6 +26,7 @@ from dashboard.child import python
 from dashboard.configuration import load_configuration
 from dashboard.earlier_runs import EarlierRuns
 from dashboard.interrupts import asked_to_end
+from dashboard.ports import has_address
 from dashboard.streams import reading_tables
 from dashboard.supervisor import ProcessNews, Role, Supervisor
 
@@ -96,8 +97,10 @@ def _endpoint(rig: Rig, reader: ReaderSection, arguments: argparse.Namespace) ->
         except KeysError as error:
             raise ConfigError(f"reader {reader.name}", [Problem("keys", str(error))]) from None
         endpoint = replace(endpoint, computer=name)
-    for address in (publish, answer):
-        check_address(address, bool(endpoint.keys))
+    for text in (publish, answer):
+        address = check_address(text, bool(endpoint.keys))
+        if not has_address(address.host):
+            raise UsageError(f"{text}: is not an address of this computer; see to --host.")
     return replace(endpoint, publish=publish, answer=answer)
 
 
