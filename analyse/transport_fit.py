@@ -35,6 +35,12 @@ FLOOR, SLOPE_FLOOR = 0.001, 0.0003
 """Shares of rho_0 and of the slope that structure within the window's tolerance can amount to."""
 PARITY_COST = 1.3
 """Factor in variance at which the other parity is left to the model part of the uncertainty."""
+TAIL_REACH = 0.5
+"""Share of the field where rho_xx = rho_xy within which the tail of a peak at zero is looked for."""
+LEVELLED = 0.4
+"""Slope at the far end of the window over that at the near one, below which the curve levels off."""
+RESERVE = 2.0
+"""Logarithm of what the joint region costs a coefficient beside another one, about."""
 BEND_SEEN = 3.5
 """Standard errors at which the next richer model of the longitudinal resistivity is taken."""
 
@@ -43,7 +49,8 @@ BEND_SEEN = 3.5
 class Coefficient:
     """A coefficient with all that is said of it, in its own unit.
 
-    ``evidence``: of its confidence sequence, ``half_width``: of that sequence if it stood alone;
+    ``evidence``: of its confidence sequence, ``half_width``: of that sequence, about as it comes out
+    beside another one;
     ``bend``: by how much the next richer model moves
     it, and ``bend_error`` the standard error of that difference; ``noise``: standard deviation of
     an independent reading, ``reading2``: variance of any; ``order``: 0 for the plain model, more where a richer one was needed;
@@ -213,7 +220,8 @@ def fit_transport(
         rho_0 = inner
     if rho_0 is not None:
         reach = min((abs(rho_0.value - level) for level in tail), default=0.0) if tail else 0.0
-        far = far_level(along, models.longitudinal, phis.scale_T)
+        crossing = abs(rho_0.value / slope.value) if slope is not None and slope.value else math.inf
+        far = far_level(along, models.longitudinal, phis.scale_T, TAIL_REACH * crossing)
         from_far = abs(rho_0.value - far) if far is not None else 0.0
         rho_0 = replace(
             rho_0, floor=math.hypot(rho_0.floor, reach, from_far),
@@ -276,11 +284,15 @@ def _slope_rounding(slope: Coefficient, pool: Pool, digit: float, scale_T: float
     return 2 * rounding / width / math.sqrt(passed)
 
 
-def far_level(pool: Pool, columns: tuple[int, ...], scale_T: float) -> float | None:
-    """The resistivity far from zero field, where the curve looks like the tail of a peak or dip that
+def far_level(
+    pool: Pool, columns: tuple[int, ...], scale_T: float, reach: float
+) -> float | None:
+    """The resistivity away from zero field, where the curve looks like the tail of a peak or dip that
     stands there: steepest next to zero, or a straight line, so that it may level off farther out.
 
-    None where it is level, or ever steeper, as a smooth magnetoresistance is.
+    ``reach``: within it, in units of u, the tail is looked for where the curve does not level off in
+    the window, but falls on, as the sample's magnetoresistance may. None where the curve is level, or
+    ever steeper, as a smooth magnetoresistance is.
     """
     fit = fit_columns(pool, columns) if columns[1:2] == SLOPING[1:] else None
     if fit is None:
@@ -291,6 +303,8 @@ def far_level(pool: Pool, columns: tuple[int, ...], scale_T: float) -> float | N
     if abs(far_slope) > abs(near_slope):
         return None
     at = -linear / (2 * square) if near_slope * far_slope < 0 else high
+    if low < reach and near_slope * far_slope > LEVELLED * near_slope**2:
+        at = min(at, reach)
     return fit.predict((*regressors("longitudinal", at)[:OTHER_PARITY], 0.0))[0]
 
 
@@ -314,7 +328,8 @@ def _coefficient(
     if bent is not None and bent.nu > 2:
         bend, bend_error = _bend(fit, bent, j)
     return Coefficient(
-        fit.theta[j], fit.standard_error(j), fit.evidence(j, mixture), fit.half_width(j, mixture, alpha),
+        fit.theta[j], fit.standard_error(j), fit.evidence(j, mixture),
+        fit.half_width(j, mixture, alpha * math.exp(-RESERVE)),
         bend, bend_error, effective, math.sqrt(fit.variance), order, floor * abs(fit.theta[j]),
         reading2=fit.s2,
     )
