@@ -14,7 +14,6 @@ from analyse.estimate import BudgetLine
 from analyse.hall_bar import HallBar, finite_length_factor
 from analyse.setup import Setup
 
-
 NEGLIGIBLE = 1e-4
 """Relative effect of the end contacts on the Hall voltage below which it is left out."""
 

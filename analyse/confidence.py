@@ -13,7 +13,6 @@ from functools import lru_cache
 
 from scipy.special import ndtr, stdtrit
 
-
 Mixture = tuple[tuple[float, float], ...]
 """Weights, of sum 1, and values of phi; both fixed before the data."""
 

@@ -23,6 +23,7 @@ from analyse.basis import (
 from analyse.confidence import Evidence, Mixture, best_phi
 from analyse.joint import Uncertain
 from analyse.line_fit import LineFit, fit_columns, lack_of_fit
+from analyse.model_spread import far_level, left_by_rounding, slope_rounding
 from analyse.segments import Pool
 from analyse.setup import Setup
 
@@ -37,8 +38,6 @@ PARITY_COST = 1.3
 """Factor in variance at which the other parity is left to the model part of the uncertainty."""
 TAIL_REACH = 0.5
 """Share of the field where rho_xx = rho_xy within which the tail of a peak at zero is looked for."""
-LEVELLED = 0.4
-"""Slope at the far end of the window over that at the near one, below which the curve levels off."""
 RESERVE = 2.0
 """Logarithm of what the joint region costs a coefficient beside another one, about."""
 BEND_SEEN = 3.5
@@ -228,7 +227,10 @@ def fit_transport(
             rounding=left_by_rounding(rho_0.reading2, digits_ohm[1]),
         )
     if slope is not None and digits_ohm[0]:
-        slope = replace(slope, rounding=_slope_rounding(slope, hall, digits_ohm[0], phis.scale_T))
+        rounding = slope_rounding(
+            slope.value, slope.reading2, hall, digits_ohm[0], phis.scale_T
+        )
+        slope = replace(slope, rounding=rounding)
     return TransportFit(slope, offset, offset_error, rho_0, excess[0], excess[1])
 
 
@@ -260,52 +262,6 @@ def zero_field(
     lowest = regressors("longitudinal", pool.low_T / phis.scale_T)
     beyond = fit.predict((*lowest[:OTHER_PARITY], 0.0))[0] - found.value
     return replace(found, floor=math.hypot(found.floor, beyond))
-
-
-def left_by_rounding(variance: float, digit: float) -> float:
-    """What readings of that variance, rounded to a last digit, may be off by in their mean, however many
-    they are: half a digit where their noise is nothing against it, nothing where it is more than half
-    of one (noise dithers: the first Fourier component of the rounding error)."""
-    scatter = math.sqrt(variance) / digit if digit else math.inf
-    if scatter > 2.0:
-        return 0.0
-    noise2 = max(0.0, scatter * scatter - 1 / 12)
-    return digit / 2 * math.exp(-2 * math.pi**2 * noise2)
-
-
-def _slope_rounding(slope: Coefficient, pool: Pool, digit: float, scale_T: float) -> float:
-    """The same for the slope: opposite at both ends, and averaged over the digits in between."""
-    both = pool.positive and pool.negative
-    width = (pool.high_T + (pool.high_T if both else -pool.low_T)) / scale_T
-    rounding = left_by_rounding(slope.reading2, digit)
-    if width <= 0 or not rounding:
-        return 0.0
-    passed = max(1.0, abs(slope.value) * width / digit)
-    return 2 * rounding / width / math.sqrt(passed)
-
-
-def far_level(
-    pool: Pool, columns: tuple[int, ...], scale_T: float, reach: float
-) -> float | None:
-    """The resistivity away from zero field, where the curve looks like the tail of a peak or dip that
-    stands there: steepest next to zero, or a straight line, so that it may level off farther out.
-
-    ``reach``: within it, in units of u, the tail is looked for where the curve does not level off in
-    the window, but falls on, as the sample's magnetoresistance may. None where the curve is level, or
-    ever steeper, as a smooth magnetoresistance is.
-    """
-    fit = fit_columns(pool, columns) if columns[1:2] == SLOPING[1:] else None
-    if fit is None:
-        return None
-    low, high = pool.low_T / scale_T, pool.high_T / scale_T
-    linear, square = fit.theta[1], fit.theta[2] if CURVED[2] in columns else 0.0
-    near_slope, far_slope = (linear + 2 * square * u for u in (low, high))
-    if abs(far_slope) > abs(near_slope):
-        return None
-    at = -linear / (2 * square) if near_slope * far_slope < 0 else high
-    if low < reach and near_slope * far_slope > LEVELLED * near_slope**2:
-        at = min(at, reach)
-    return fit.predict((*regressors("longitudinal", at)[:OTHER_PARITY], 0.0))[0]
 
 
 def _total(part: Coefficient) -> float:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from analyse.transport_fit import left_by_rounding
+from analyse.model_spread import left_by_rounding
 
 
 @pytest.mark.parametrize("noise", [0.0, 0.1, 0.2, 0.3, 0.4, 0.6])
