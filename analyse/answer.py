@@ -34,9 +34,10 @@ def numbers_of(
         return None, None, None
     a, h = abs(slope.value) / scale_T, width / scale_T
     stat_a, model_a = slope.standard_error / scale_T / a, slope.spread / scale_T / a
+    fitted = [(stat_a, slope.evidence.nu)]
     density = make_number(
         density_from_slope(a), density_from_slope(a + h), density_from_slope(a - h),
-        stat_a, model_a, s_n, confidence,
+        stat_a, model_a, s_n, confidence, fitted,
     )
     if density is None or rho_0 is None or rho_0.value <= 0.0:
         return density, None, None
@@ -45,12 +46,13 @@ def numbers_of(
         return density, None, None
     r = rho_0.value
     stat = math.hypot(stat_a, rho_0.standard_error / r)
+    fitted.append((rho_0.standard_error / r, rho_0.evidence.nu))
     model = math.hypot(model_a, rho_0.spread / r)
     mobilities = (mobility_from(a, r), ends[0] / scale_T, ends[1] / scale_T)
-    mobility = make_number(*mobilities, stat, model, s_mu, confidence)
+    mobility = make_number(*mobilities, stat, model, s_mu, confidence, fitted)
     mass = bar.carrier_gas.mass_kg(density.value)
     times = (scattering_time_from(mu, mass) for mu in mobilities)
-    return density, mobility, make_number(*times, stat, model, s_tau, confidence)
+    return density, mobility, make_number(*times, stat, model, s_tau, confidence, fitted)
 
 
 def _slope_width(fit: TransportFit, alpha: float) -> float:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Iterator
 from dataclasses import asdict
 from typing import Any
@@ -30,6 +31,9 @@ def _number(number: Number | None) -> dict[str, Any] | None:
         "standard_uncertainty": number.standard_uncertainty,
         "interval": [number.low, number.high],
         "confidence": number.confidence,
+        "expanded_uncertainty": number.expanded_uncertainty,
+        "degrees_of_freedom":
+        number.degrees_of_freedom if math.isfinite(number.degrees_of_freedom) else None,
         "statistical": number.statistical,
         "model": number.model,
         "systematic": number.systematic,

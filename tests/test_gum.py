@@ -14,6 +14,7 @@ import pytest
 from analyse import Excitation, HallBar, LockinFilter, Signal, SquareRootInformation
 from analyse.basis import COLUMNS, HALL_LINE
 from analyse.line_fit import LineFit, fit_columns
+from analyse.numbers import effective_freedom
 from analyse.pairing import Pair, Pairing
 from analyse.segments import Pool, Segments
 from analyse.setup import Setup
@@ -180,3 +181,12 @@ def test_type_a_uncertainty_of_correlated_readings_is_wider() -> None:
         assert fit.nu == pytest.approx(400 / kappa - 2)
         widths.append(fit.standard_error(1))
     assert widths[1] / widths[0] == pytest.approx(math.sqrt(stages.inflation(0.2)), rel=0.05)
+
+
+def test_effective_degrees_of_freedom_of_the_end_gauge() -> None:
+    """GUM example H.1.6, from memory: four parts in nm, combined variance 1002 nm^2, 16.7."""
+    parts = [(25.0, 18.0), (9.7, 25.6), (2.9, 50.0), (16.6, 2.0)]
+    assert effective_freedom(math.sqrt(1002.0), parts) == pytest.approx(16.7, abs=0.05)
+    assert math.isinf(effective_freedom(1.0, []))
+    assert math.isinf(effective_freedom(0.0, parts))
+    assert effective_freedom(3.0, [(3.0, 7.0)]) == pytest.approx(7.0)
