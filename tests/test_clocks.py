@@ -4,6 +4,9 @@ from __future__ import annotations
 
 import json
 import re
+import signal
+import threading
+import time
 from collections.abc import Callable, Iterator
 from pathlib import Path
 from random import Random
@@ -12,15 +15,18 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 from link import Link
-from relay_sides import Pair, as_heard_here, configuration, heard_of
+from relay_sides import TABLE, Pair, as_heard_here, configuration, heard_of
 from scripted_instrument import ScriptedInstrument
 
-from acquire.bus import Endpoint, RoundTrip, free_endpoints
+from acquire.bus import Endpoint, Publisher, RoundTrip, free_endpoints
 from acquire.bus.keys import KeyFolder
 from acquire.config import parse
+from acquire.journal import Journal
 from acquire.relay.clock_words import ClockWords, tolerable_s
 from acquire.relay.clocks import DRIFT, KEPT, ClockComparison, Difference
+from acquire.relay.far_side import FarSide
 from acquire.relay.translation import ENDED, Standing, Translation, standing_of
+from acquire.stop import Stop, Stopped
 from acquire.tables import Row
 
 Wait = Callable[..., None]
@@ -279,6 +285,38 @@ def test_a_link_that_stalls_is_cut_and_is_mended_loses_no_row(
     for known, (far_side, near_side) in zip(known_at_end, sides):
         assert heard_of(near_side, far_side.run) == as_heard_here(far_side, near_side)
         assert len(heard_of(near_side, far_side.run)) >= known
+
+
+def test_a_question_for_the_time_does_not_hold_up_the_end(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """The reader elsewhere says who it is, and hangs when it is asked for the time."""
+    monkeypatch.setattr("acquire.relay.far_side.TRIP_S", 600.0)
+    stop, ended = Stop(), threading.Event()
+    asked: list[None] = []
+
+    def hanging_clock() -> float:
+        asked.append(None)
+        while len(asked) > 1 and not ended.wait(0.02):  # a signal just before a wait is not seen
+            signal.pthread_kill(threading.main_thread().ident or 0, signal.SIGUSR1)
+        return 0.0
+
+    before = signal.signal(signal.SIGUSR1, stop.handle)
+    free = Endpoint("tcp://127.0.0.1:0", "tcp://127.0.0.1:0")
+    try:
+        with (
+            Journal(tmp_path / "a", TABLE) as journal,
+            Publisher(
+                "far", TABLE, journal, free, started_utc=HERE, now_s=hanging_clock
+            ) as publisher,
+            FarSide(TABLE, publisher.endpoint, lambda *met: 0, time.monotonic, stop.wait) as far_side,
+        ):
+            with pytest.raises(Stopped):
+                while True:
+                    far_side.receive(0.1)
+            ended.set()
+    finally:
+        signal.signal(signal.SIGUSR1, before)
 
 
 def test_the_last_rows_are_fetched_at_the_end(

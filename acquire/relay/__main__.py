@@ -9,6 +9,7 @@ import faulthandler
 import sys
 import time
 from collections.abc import Callable, Sequence
+from contextlib import suppress
 from typing import Any
 
 from acquire.bus import Endpoint
@@ -24,6 +25,7 @@ from acquire.relay.far_side import FarSide, endpoint_elsewhere
 from acquire.relay.relaying import Relaying
 from acquire.relay.translation import STATUS, Translation, standing_of
 from acquire.run_folder import LiveRun, RunFolder, open_run
+from acquire.stop import Stopped
 from acquire.tables import Row, Table
 
 LONGEST_WAIT_S = 0.1
@@ -69,7 +71,7 @@ def _relay(run: RunFolder, name: str, child: Child) -> None:
             words.compared(now_s(), found)
             relaying.say(translation.correct(found))
 
-        with FarSide(table, far, adopt, now_s) as far_side:
+        with FarSide(table, far, adopt, now_s, child.stop.wait) as far_side:
             _listen(far_side, relaying, compare, child.wanted)
 
 
@@ -80,16 +82,17 @@ def _listen(
     wanted: Callable[[], bool],
 ) -> None:
     """Take rows until it is not wanted any more, then those that are there by then."""
-    while wanted():
-        if relaying.behind:
-            time.sleep(LONGEST_WAIT_S)  # what the bus loses meanwhile is asked for again
-        else:
-            relaying.take(far_side.receive(LONGEST_WAIT_S))
-            relaying.heed(far_side.trouble)
-            found = far_side.compare_clocks()
-            if found is not None:
-                compare(found)
-        relaying.step()
+    with suppress(Stopped):
+        while wanted():
+            if relaying.behind:
+                time.sleep(LONGEST_WAIT_S)  # what the bus loses meanwhile is asked for again
+            else:
+                relaying.take(far_side.receive(LONGEST_WAIT_S))
+                relaying.heed(far_side.trouble)
+                found = far_side.compare_clocks()
+                if found is not None:
+                    compare(found)
+            relaying.step()
     if not relaying.behind:
         relaying.take(far_side.last_rows(LAST_ROWS_S))
     relaying.end()

@@ -4,8 +4,9 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable
+from typing import Any
 
-from acquire.bus import Endpoint, Introducer, Introduction, Subscriber
+from acquire.bus import Endpoint, Introducer, Introduction, RoundTrip, Subscriber
 from acquire.bus.keys import KeyFolder
 from acquire.closing import Closing
 from acquire.config import Rig
@@ -44,15 +45,22 @@ class FarSide(Closing):
     endpoint : where it publishes, and where it answers.
     adopt : see :data:`Adopt`.
     now_s : the clock of this run.
+    wait : makes the calls that may take long and can be broken off without loss (Stop.wait).
     """
 
     def __init__(
-        self, table: Table, endpoint: Endpoint, adopt: Adopt, now_s: Callable[[], float]
+        self,
+        table: Table,
+        endpoint: Endpoint,
+        adopt: Adopt,
+        now_s: Callable[[], float],
+        wait: Callable[..., Any] = lambda call, *args: call(*args),
     ) -> None:
         self._table = table
         self._endpoint = endpoint
         self._adopt = adopt
         self._now_s = now_s
+        self._wait = wait
         self._introducer = Introducer(endpoint)
         self._subscriber: Subscriber | None = None
         self._clocks = ClockComparison()
@@ -128,7 +136,7 @@ class FarSide(Closing):
         )
 
     def _ask_the_time(self, run: str) -> bool:
-        trip = self._introducer.round_trip(self._now_s, TRIP_S)
+        trip: RoundTrip | None = self._wait(self._introducer.round_trip, self._now_s, TRIP_S)
         if trip is None or trip.run != run:
             return False
         self._clocks.add(trip)
