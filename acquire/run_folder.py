@@ -12,7 +12,7 @@ import os
 import shutil
 import time
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, replace
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
@@ -25,46 +25,10 @@ from acquire.data_package import descriptor
 from acquire.disk import sync_folder, write_whole
 from acquire.errors import RunError
 from acquire.journal import read_rows
+from acquire.live_run import LiveRun, boot_id
 from acquire.tables import Row, Table
 
-
-@dataclass(frozen=True)
-class LiveRun:
-    """What ``live.json`` says: who watches this run, and where its processes meet.
-
-    ``monotonic_start`` is ``time.monotonic()`` at the run's start; ``requests`` is the address
-    of the estimator's inbox; ``boot`` names the start of the machine, empty where that is not known;
-    ``hold`` is the address of whoever decides about holding the field, empty where nobody does.
-    """
-
-    run: str
-    pid: int
-    monotonic_start: float
-    started_utc: str
-    endpoints: dict[str, Endpoint]
-    requests: str
-    boot: str = ""
-    hold: str = ""
-
-    @property
-    def machine_restarted(self) -> bool:
-        """Whether the machine has been started anew since the run's start."""
-        before = self.boot and (now := boot_id()) and now != self.boot
-        return bool(before) or time.monotonic() < self.monotonic_start
-
-    @property
-    def alive(self) -> bool:
-        """Whether the supervisor is still there; if not, the run has crashed."""
-        if self.machine_restarted:
-            return False
-        run_age_s = time.monotonic() - self.monotonic_start
-        try:
-            os.kill(self.pid, 0)
-        except ProcessLookupError:
-            return False
-        except PermissionError:
-            pass  # somebody else's process
-        return _process_age_s(self.pid) > run_age_s - 1.0  # else a later process of this number
+__all__ = ["LiveRun", "RunFolder", "boot_id", "create_run", "open_run"]
 
 
 class RunFolder:
@@ -145,11 +109,19 @@ class RunFolder:
         if not (self.path / "live.json").exists():
             self._write_live(live)
 
+    def leave_unfinished(self, live: LiveRun) -> None:
+        """Say that the run has ended in order, but that estimates are to be made yet.
+
+        Raises RunError if it can't be written.
+        """
+        self._write_live(replace(live, unfinished=True))
+
     def _write_live(self, live: LiveRun) -> None:
         """What is empty is left out."""
         content = asdict(live)
-        if not live.hold:
-            del content["hold"]
+        for key in ("hold", "unfinished"):
+            if not content[key]:
+                del content[key]
         for stream, endpoint in content["endpoints"].items():
             content["endpoints"][stream] = {key: one for key, one in endpoint.items() if one}
         self._write("live.json", content)
@@ -251,24 +223,6 @@ def open_run(path: str | Path) -> RunFolder:
     except (ValueError, TypeError, KeyError) as error:
         raise RunError(f"{path}: its datapackage.json is not that of a run ({error!r}).") from None
     return RunFolder(path, started_utc, rig, config_bytes)
-
-
-def boot_id() -> str:
-    """A name for this start of the machine; empty where the system does not tell."""
-    try:
-        return Path("/proc/sys/kernel/random/boot_id").read_text().strip()
-    except OSError:
-        return ""
-
-
-def _process_age_s(pid: int) -> float:
-    """How long ago a process was started; infinity where the system does not tell."""
-    try:
-        fields = Path(f"/proc/{pid}/stat").read_text().rpartition(")")[2].split()
-        ticks = int(fields[19])  # field 22 of proc(5), counted from the machine's start
-    except (OSError, ValueError, IndexError):
-        return float("inf")
-    return time.clock_gettime(time.CLOCK_BOOTTIME) - ticks / os.sysconf("SC_CLK_TCK")
 
 
 def _new_folder(parent: Path, name: str) -> Path:

@@ -39,6 +39,8 @@ LAST_PROCESSES_S = 3.0
 WRITERS = {"acquire.reader", "acquire.relay", "analyse.service", "dashboard.bad_end"}
 ENDED_BADLY = "ended_badly"
 """Code of the event (of kind ``run``) that marks such a run."""
+FINISHED_LATER = "finished_later"
+"""The same for a run that its watch ended in order, but without the last estimates."""
 
 
 def close_if_ended_badly(
@@ -59,7 +61,8 @@ def close_if_ended_badly(
         in_use = isinstance(error, JournalError) and error.reason == IN_USE
         who = f" {_processes_of(run)}" if in_use else ""
         return f"{run.run_id} ended badly and was left as it is: {error}{who}"
-    return "" if not told else f"{run.run_id} ended badly. {' '.join(told)}"
+    how = "was left unfinished" if live.unfinished else "ended badly"
+    return "" if not told else f"{run.run_id} {how}. {' '.join(told)}"
 
 
 def _processes_of(run: RunFolder) -> str:
@@ -170,7 +173,7 @@ class _Closing:
             return torn
         added = estimates.next_seq - before
         told = [
-            (ENDED_BADLY, self._what_happened(added)),
+            self._what_happened(added),
             *(("torn_line", text) for text in torn),
             *self._power_cut(),
             *self._hold(),
@@ -189,12 +192,15 @@ class _Closing:
                 raise RunError("closing it was broken off; the next rampside does it.")
             yield reading
 
-    def _what_happened(self, added: int) -> str:
-        return (
-            f"The process that watched the run (number {self.live.pid}) was gone without ending "
-            f"it; closed by {self.by}, {utc_now_text()[:19]} UTC, which added {added} estimates "
-            "out of the readings."
+    def _what_happened(self, added: int) -> tuple[str, str]:
+        done = (
+            f"closed by {self.by}, {utc_now_text()[:19]} UTC, which added {added} estimates out of "
+            "the readings."
         )
+        if self.live.unfinished:
+            return FINISHED_LATER, f"The watch ended before all estimates were made; {done}"
+        who = f"The process that watched the run (number {self.live.pid})"
+        return ENDED_BADLY, f"{who} was gone without ending it; {done}"
 
     def _power_cut(self) -> Iterator[tuple[str, str]]:
         if self.live.machine_restarted:

@@ -35,6 +35,15 @@ class Hangs:
         """A row of the stream has come."""
         self._since[stream] = now
 
+    def begins_anew(self, role: str, now: float) -> None:
+        """The process of a role died or came back: its time begins anew, for a dead one can't
+        publish, and its successor needs a while to start."""
+        for stream, (reader, _) in self._readers.items():
+            if reader == role:
+                self._since[stream] = now
+        if role == roles.ESTIMATOR:
+            self._since[ESTIMATES.stream] = now
+
     def look(self, health: Mapping[str, StreamHealth], now: float) -> list[tuple[str, str]]:
         """Who hangs, by role, and why that is concluded; told once, and again a minute later."""
         late_s, self._looked = now - self._looked, now

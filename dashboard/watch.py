@@ -156,22 +156,25 @@ class _Watcher:
 
     def end(self) -> None:
         """End all processes in order within 3 s, and leave the run's folder whole."""
+        deadline = time.monotonic() + END_S
         try:
-            self._end_in_order()
+            self._end_in_order(deadline)
         finally:
             self._supervisor.close()
             self._subscriber.close()
-            if self._finished or complete(self._run, self._live, COMPLETE_S):
+            left_s = deadline + COMPLETE_S - time.monotonic()
+            if self._finished or complete(self._run, self._live, left_s):
                 self._run.end_live()
             else:
+                with suppress(RunError):
+                    self._run.leave_unfinished(self._live)
                 self._view.say(
                     "The last estimates are missing: rampside replay "
                     f"{self._run.path} makes them out of the readings and closes the run."
                 )
         self._catch_up()
 
-    def _end_in_order(self) -> None:
-        deadline = time.monotonic() + END_S
+    def _end_in_order(self, deadline: float) -> None:
         if self._earlier is not None:
             self._earlier.close()
         readers = [roles.reader_role(reader) for reader in self._plan.rig.readers]
@@ -273,6 +276,7 @@ class _Watcher:
         return Moment(time_s, self._states(), self._supervisor.restarts, self._hold.alarm)
 
     def _process_news(self, news: ProcessNews) -> None:
+        self._hangs.begins_anew(news.role, time.monotonic())
         if news.happening != "ready":
             self._view.say(f"{news.text}.")
             self._events.send("process", news.happening, news.in_full)

@@ -133,6 +133,18 @@ def test_it_is_as_an_undisturbed_run_but_for_its_marks(
     crashed.assert_closed_once(whole)
 
 
+def test_a_run_whose_watch_had_no_time_for_the_last_estimates_did_not_end_badly(
+    tmp_path: Path, whole: dict[str, list[Row]]
+) -> None:
+    left = Crashed(tmp_path, os.getpid(), whole, 0.6)
+    left.run.leave_unfinished(left.live)
+    told = close_if_ended_badly(left.run, BY)
+    assert f"{left.run.run_id} was left unfinished. The watch ended before all" in told
+    assert left.codes() == ["finished_later"]
+    assert left.estimates() == whole["estimates"]
+    assert left.run.live() is None
+
+
 def test_torn_lines_are_cut_away_and_told(crashed: Crashed, whole: dict[str, list[Row]]) -> None:
     crashed.tear(READERS["magnet"], b"4711,12.5,0.0")
     crashed.tear(ESTIMATES, b"9")

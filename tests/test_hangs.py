@@ -78,3 +78,13 @@ def test_nobody_hangs_because_the_watch_itself_was_frozen(hangs: Hangs) -> None:
     assert look(hangs, range(50), health) == []
     found = look(hangs, range(900, 1000), lambda now: health(49.0), ())
     assert {now for now, _, _ in found} == {961}
+
+
+def test_the_time_in_which_it_was_dead_does_not_count(hangs: Hangs) -> None:
+    assert look(hangs, range(55), lambda now: health(0.0), READERS[1:]) == []
+    hangs.begins_anew(f"reader {READERS[0]}", 55.0)
+    hangs.begins_anew("estimator", 56.0)
+    found = look(hangs, range(55, 130), lambda now: health(0.0), READERS[1:])
+    assert [(now, role) for now, role, _ in found] == [
+        (116, f"reader {READERS[0]}"), (117, "estimator"),
+    ]  # fmt: skip
