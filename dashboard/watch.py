@@ -181,7 +181,8 @@ class _Watcher:
         self._hold.end()
         self._supervisor.ask_to_end([roles.PAGE])  # it has nothing to lose, and takes its time
         killed = self._supervisor.stop(readers, READERS_END_S)
-        unsent = self._events.close(EVENTS_END_S)
+        spare_s = deadline - LAST_S - FINISH_S - time.monotonic()
+        unsent = self._events.close(max(EVENTS_END_S, spare_s))
         self._finished = self._finish_estimates(min(FINISH_S, deadline - LAST_S - time.monotonic()))
         others = [name for name in self._supervisor.names if name not in readers]
         killed += self._supervisor.stop(others, deadline - time.monotonic())

@@ -78,6 +78,16 @@ def test_closing_gives_up_and_says_how_many_were_not_written(
     assert sender.close() == 2
 
 
+def test_closing_tries_on_with_what_still_waits(wait_for: Callable[..., None]) -> None:
+    estimator = Estimator(deaf_for=3)
+    sender = EventSender("tcp://127.0.0.1:1", estimator.ask)
+    for number in range(4):
+        sender.send("process", "died", str(number))
+    wait_for(lambda: estimator.asked, "it has tried")
+    assert sender.close(10.0) == 0
+    assert [message["text"] for message in estimator.answered] == ["0", "1", "2", "3"]
+
+
 def test_over_a_real_inbox() -> None:
     with Inbox("tcp://127.0.0.1:0") as inbox:
         sender = EventSender(inbox.address, ask)
