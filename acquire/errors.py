@@ -76,6 +76,10 @@ class KeysError(BusError):
     """Keys are missing, malformed or open to others."""
 
 
+class KeyNameError(KeysError, UsageError):
+    """What was given as a computer's name is none."""
+
+
 class TableError(RampsideError):
     """A table measured elsewhere can't be used."""
 

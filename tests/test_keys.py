@@ -196,3 +196,5 @@ def test_what_is_missing_is_told(tmp_path: Path) -> None:
     assert (done.returncode, "make it by: rampside keys make NAME" in done.stderr) == (1, True)
     assert rampside_keys().returncode == 2
     assert rampside_keys("make").returncode == 2
+    wrong = rampside_keys("make", "../x", "--folder", tmp_path / "k")
+    assert (wrong.returncode, "is no name for a computer" in wrong.stderr) == (2, True)

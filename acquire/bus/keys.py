@@ -23,7 +23,7 @@ from pathlib import Path
 import tomli
 import zmq
 
-from acquire.errors import KeysError
+from acquire.errors import KeyNameError, KeysError
 
 SECRET_FILE, PUBLIC_SUFFIX = "secret.key", ".pub"
 NAME = re.compile(r"[A-Za-z][A-Za-z0-9_-]{0,39}")
@@ -120,7 +120,7 @@ class KeyFolder:
     def make(self, name: str) -> KeyPair:
         """Make this computer's pair. Nothing that is there is ever overwritten."""
         if not NAME.fullmatch(name):
-            raise KeysError(
+            raise KeyNameError(
                 f"{name!r}: is no name for a computer; letters, digits, - and _, at most 40."
             )
         try:
