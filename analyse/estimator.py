@@ -203,7 +203,10 @@ class Estimator:
         cautions = self._cautions(fit, carriers, density, mobility)
         window = self._fit.window_T
         missing = what_is_missing(
-            Facts(numbers, fit, *(window or (0.0, 0.0)), zero, cautions), self.setup.target
+            Facts(
+                numbers, fit, *(window or (0.0, 0.0)), zero, cautions, self._fit.shapes.square_rise
+            ),
+            self.setup.target,
         )
         at_field = field_T if field_T is not None else self._last_field
         if missing:

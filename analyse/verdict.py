@@ -2,7 +2,8 @@
 
 Stable means: all three intervals (which hold however often one looks) are within their targets,
 the data rule out a bend that would matter, zero field is in reach of the extrapolation, the ramp
-has passed the field where rho_xx = rho_xy, and no open caution touches the answer.
+has passed the field where rho_xx = rho_xy, a second kind of carrier is ruled out, and no open caution
+touches the answer.
 """
 
 from __future__ import annotations
@@ -27,6 +28,22 @@ class Facts:
     window_high_T: float
     zero_in_reach: bool
     cautions: tuple[Caution, ...]
+    square_rise: tuple[float, float] | None = None
+
+
+FAR_ENOUGH = 2.0
+"""Times the field where rho_xx = rho_xy from which on a second kind of carrier bends the Hall line."""
+
+
+def _one_carrier(facts: Facts, mobility: float, target: Target) -> bool:
+    """Whether a second kind of carrier that matters is ruled out: by the Hall line, straight up to far
+    enough, or by rho_xx, which would rise as B^2 (see :func:`analyse.shapes.square_rise`)."""
+    if facts.window_high_T * mobility >= FAR_ENOUGH:
+        return True
+    if facts.square_rise is None:
+        return False
+    rise, error = facts.square_rise
+    return 2 * (max(rise, 0.0) + 1.645 * error) <= target.sheet_density
 
 
 def what_is_missing(facts: Facts, target: Target) -> tuple[str, ...]:
@@ -57,6 +74,8 @@ def what_is_missing(facts: Facts, target: Target) -> tuple[str, ...]:
         missing.append(
             f"the field where rho_xx = rho_xy ({1e3 / mobility.value:.3g} mT) is not passed"
         )
+    if target.cross_crossing_field and not _one_carrier(facts, mobility.value, target):
+        missing.append("a second kind of carrier is not yet ruled out")
     open_codes = [caution.code for caution in facts.cautions if caution.touches_answer]
     if open_codes:
         missing.append(f"open caution: {', '.join(open_codes)}")

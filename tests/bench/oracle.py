@@ -176,6 +176,11 @@ def reference(case: Case) -> Reference:
     )
     size = np.abs(case.profile.at(times))
     largest, smallest = np.maximum.accumulate(size), np.minimum.accumulate(size)
+    # a second kind of carrier: rho_xx rises as B^2, by half of what it does to the Hall slope at
+    # the crossing; a third of the rise at the end is what a bend moves the level by
+    rise = 3.0 * np.sqrt(at_hall(level.bend_variance)) / base
+    rise = rise * (case.sample.crossing_T / np.maximum(largest, 1e-12)) ** 2
+    straight &= (2.0 * STRAIGHT * rise <= TARGET) | (largest >= 2.0 * case.sample.crossing_T)
     swept = case.profile.swept(times)
     lockin = case.rig.hall
     each_s = max(lockin.stages.integral_time_s, lockin.period_s)
