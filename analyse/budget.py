@@ -2,8 +2,7 @@
 
 Relative sensitivities are 1 or 0 here: with n = I B / (e V_xy), mu = V_xy squares / (V_xx B) and
 tau = mu m / e the density needs current and field but not the geometry, the mobility geometry and
-field but not the current, and only the scattering time needs the mass. A bar so short that its end
-contacts take part of the Hall voltage brings that part into all three.
+field but not the current, and only the scattering time needs the mass.
 """
 
 from __future__ import annotations
@@ -11,11 +10,8 @@ from __future__ import annotations
 import math
 
 from analyse.estimate import BudgetLine
-from analyse.hall_bar import HallBar, finite_length_factor
+from analyse.hall_bar import HallBar
 from analyse.setup import Setup
-
-NEGLIGIBLE = 1e-4
-"""Relative effect of the end contacts on the Hall voltage below which it is left out."""
 
 
 def systematic_lines(bar: HallBar, setup: Setup) -> tuple[BudgetLine, ...]:
@@ -29,16 +25,11 @@ def systematic_lines(bar: HallBar, setup: Setup) -> tuple[BudgetLine, ...]:
     hall, along = setup.hall.relative_uncertainty, setup.longitudinal.relative_uncertainty
     field, squares = setup.field.relative_uncertainty, bar.squares_relative_uncertainty
     mass = bar.mass_relative_uncertainty
-    short = 0.0
-    if excitation is not None and excitation.source_to_drain_squares is not None:
-        short = 1.0 - finite_length_factor(excitation.source_to_drain_squares)
-        short = short if short > NEGLIGIBLE else 0.0
     lines = (
         BudgetLine("current", "systematic", current, mobility_current, mobility_current),
         BudgetLine("Hall voltage gain", "systematic", hall, hall, hall),
         BudgetLine("longitudinal voltage gain", "systematic", 0.0, along, along),
         BudgetLine("field calibration", "systematic", field, field, field),
-        BudgetLine("contacts at the bar's ends", "systematic", short, short, short),
         BudgetLine("length over width", "systematic", 0.0, squares, squares),
         BudgetLine("effective mass", "systematic", 0.0, 0.0, mass),
     )

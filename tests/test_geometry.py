@@ -27,16 +27,13 @@ def test_it_is_positive_and_grows_to_one() -> None:
         finite_length_factor(0.0)
 
 
-@pytest.mark.parametrize(("squares", "line"), [(2.0, 0.0699397), (20.0, None)])
-def test_a_short_bar_stands_in_the_budget(squares: float, line: float | None) -> None:
+@pytest.mark.parametrize(("squares", "said"), [(2.0, True), (3.0, True), (4.0, False), (20.0, False)])
+def test_a_short_bar_is_told(squares: float, said: bool) -> None:
     excitation = Excitation(source_V=1.0, series_ohm=1e7, source_to_drain_squares=squares)
     last = _ramp(Excitation(current_A=1e-7), excitation)
-    found = {one.source: one for one in last.budget}.get("contacts at the bar's ends")
-    if line is None:
-        assert found is None
-    else:
-        assert found is not None
-        assert (found.sheet_density, found.mobility) == (pytest.approx(line, rel=1e-4),) * 2
+    found = [one for one in last.cautions if one.code == "short_bar"]
+    assert len(found) == said
+    assert not any(one.touches_answer for one in found)
 
 
 def _ramp(true: Excitation, told: Excitation, misaligned: float = 0.0) -> Estimate:

@@ -10,7 +10,7 @@ from analyse.cautions.fit import FitFacts, fit_cautions
 from analyse.cautions.readings import RoleWatch
 
 NOTES = frozenset((
-    "oscillations", "ramp_too_fast", "field_offset", "contacts_misaligned", "coarse_digit",
+    "oscillations", "ramp_too_fast", "field_offset", "contacts_misaligned", "coarse_digit", "short_bar",
     "quick_readings_apart",
 ))
 """Codes of cautions that never touch the answer: told, but in the way of nothing."""

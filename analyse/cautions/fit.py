@@ -10,6 +10,7 @@ from scipy.constants import e
 
 from analyse.confidence import heavy_tails
 from analyse.estimate import Caution
+from analyse.hall_bar import finite_length_factor
 from analyse.quick import HALL_MARK_OHM, QuickReading
 from analyse.setup import Setup, Target
 from analyse.shapes import Shapes
@@ -67,6 +68,7 @@ def fit_cautions(facts: FitFacts, setup: Setup) -> Iterator[Caution]:
         yield from _straightness(facts.fit, setup.target)
         yield from _second_carrier(facts.shapes, setup.target)
     yield from _coarse_digit(facts.fit, setup.target)
+    yield from _short_bar(facts.density_per_m2, setup)
     if _exchanged(facts):
         yield Caution(
             "channels_exchanged",
@@ -212,6 +214,21 @@ def _straightness(fit: TransportFit, target: Target) -> Iterator[Caution]:
                 f"{number} by {100 * abs(coefficient.bend) / size:.2g} %: a second kind of "
                 "carrier, a current that depends on field, or heating.",
             )
+
+
+def _short_bar(density_per_m2: float | None, setup: Setup) -> Iterator[Caution]:
+    excitation = setup.excitation
+    if density_per_m2 is None or excitation is None or excitation.source_to_drain_squares is None:
+        return
+    taken = 1.0 - finite_length_factor(excitation.source_to_drain_squares)
+    if taken > setup.target.sheet_density:
+        yield Caution(
+            "short_bar",
+            f"the bar is {excitation.source_to_drain_squares:.3g} squares long from end to end: half-way "
+            f"between contacts over its whole width {100 * taken:.2g} % of the Hall voltage is missing at "
+            "small fields, less at fields far above that where rho_xx = rho_xy; it is not corrected for.",
+            touches_answer=False,
+        )
 
 
 def _coarse_digit(fit: TransportFit, target: Target) -> Iterator[Caution]:

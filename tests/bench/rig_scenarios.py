@@ -164,7 +164,8 @@ def current_sag_known(rng: np.random.Generator) -> dict[str, object]:
     setting, rig = _behind_a_resistor(rng)
     rig = replace(rig, reads_current=bool(rng.random() < 0.5),
                   shunt_ohm=rig.squares * setting.sample.rho_0)
-    return {"setting": setting, "rig": rig, "required": ("current_sag",)}
+    return {"setting": setting, "rig": rig, "required": ("current_sag",),
+            "allowed": ("short_bar",)}
 
 
 @scenario
